@@ -1,0 +1,133 @@
+"""Similarities of space, Sim(3), as homogeneous matrices (..., 4, 4) with s R in the block.
+
+A tangent vector (..., 7) is translation, rotation vector (rad), log of the scale. With z = l + i a, l the log scale
+and a the angle, the translation is W times the tangent translation, W = integral of exp(x (l + hat(w))) over x from
+0 to 1 = A + B hat(w) + C hat(w)^2 (Strasdat 2012, "Local Accuracy and Global Consistency for Efficient Visual SLAM",
+in a form that divides by |z|^2 only, so that neither limit alone is singular):
+
+    A = (e^l - 1) / l,   B = (l e^l sin(a)/a - e^l cos(a) + 1) / |z|^2,
+    C = (l e^l (1 - cos a)/a^2 + A - e^l sin(a)/a) / |z|^2.
+
+Below |z| = 1 these cancel; there the power series of (e^z - 1)/z is summed in real terms.
+
+>>> import numpy as np
+>>> S = compose(2.0, np.eye(3), [1.0, 0.0, 0.0])
+>>> transform(S, [[1.0, 1.0, 1.0]])
+array([[3., 2., 2.]])
+>>> compose(-1.0, np.eye(3), [0.0, 0.0, 0.0])
+Traceback (most recent call last):
+hybridtrack.errors.ShapeError: Expected `s` to be positive, got -1.
+"""
+
+import numpy as np
+from numpy.typing import ArrayLike
+
+from hybridtrack.errors import ShapeError
+from hybridtrack.geometry import so3
+from hybridtrack.geometry.arrays import FloatArray, with_trailing_shape
+from hybridtrack.geometry.se3 import affine_transform, homogeneous
+from hybridtrack.geometry.small_angle import one_minus_cosine_over_square, sine_over_angle
+
+_SERIES_TERMS = 20  # 1 / 21! is below 1e-19
+
+
+def _series_coefficients(l: FloatArray, a: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """A, B, C from the powers z^n / (n + 1)!, carried as l^n, Im(z^n) / a and (l^n - Re(z^n)) / a^2."""
+    power, real = np.ones_like(l), np.ones_like(l)
+    imaginary, lag = np.zeros_like(l), np.zeros_like(l)
+    A, B, C = np.ones_like(l), np.zeros_like(l), np.zeros_like(l)
+    factor = 1.0
+    for n in range(1, _SERIES_TERMS + 1):
+        lag = l * lag + imaginary
+        real, imaginary = l * real - a**2 * imaginary, real + l * imaginary
+        power = power * l
+        factor /= n + 1
+        A, B, C = A + factor * power, B + factor * imaginary, C + factor * lag
+    return A, B, C
+
+
+def _closed_coefficients(l: FloatArray, a: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+    scale, sine = np.exp(l), sine_over_angle(a)
+    zero = l == 0.0
+    A = np.where(zero, 1.0, np.expm1(l) / np.where(zero, 1.0, l))
+    square = l**2 + a**2
+    B = (l * scale * sine - scale * np.cos(a) + 1.0) / square
+    C = (l * scale * one_minus_cosine_over_square(a) + A - scale * sine) / square
+    return A, B, C
+
+
+def _translation_matrix(rotation: FloatArray, log_scale: FloatArray) -> FloatArray:
+    """W (..., 3, 3) of the module docstring."""
+    l = np.asarray(log_scale)[..., None, None]
+    a = np.asarray(np.linalg.norm(rotation, axis=-1)[..., None, None])
+    small = l**2 + a**2 < 1.0
+    series = _series_coefficients(np.where(small, l, 0.0), np.where(small, a, 0.0))
+    closed = _closed_coefficients(np.where(small, 1.0, l), np.where(small, 1.0, a))
+    A, B, C = (np.where(small, near, far) for near, far in zip(series, closed, strict=True))
+    K = so3.hat(rotation)
+    return np.asarray(A * np.eye(3) + B * K + C * (K @ K))
+
+
+def compose(s: ArrayLike, R: ArrayLike, t: ArrayLike) -> FloatArray:
+    """S (..., 4, 4) of scales s (...), rotations R (..., 3, 3), translations t (..., 3); ShapeError unless s > 0."""
+    s = np.asarray(s, dtype=np.float64)
+    if np.any(s <= 0.0):
+        raise ShapeError(f"Expected `s` to be positive, got {np.min(s):g}.")
+    block = s[..., None, None] * with_trailing_shape(R, "R", (3, 3))
+    return homogeneous(block, with_trailing_shape(t, "t", (3,)))
+
+
+def decompose(S: ArrayLike) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Scales s (...), rotations R (..., 3, 3), translations t (..., 3) of S (..., 4, 4): p -> s R p + t.
+
+    ShapeError where the block mirrors or collapses space.
+    """
+    S = with_trailing_shape(S, "S", (4, 4))
+    determinant = np.linalg.det(S[..., :3, :3])
+    if np.any(determinant <= 0.0):
+        raise ShapeError(
+            f"Expected `S` to hold similarities (det of the block > 0), got det = {np.min(determinant):g}."
+        )
+    s = np.cbrt(determinant)
+    return s, S[..., :3, :3] / s[..., None, None], S[..., :3, 3].copy()
+
+
+def transform(S: ArrayLike, points: ArrayLike) -> FloatArray:
+    """s R p + t for `points` (..., N, 3), or one point (3,), under S (..., 4, 4); leading axes broadcast."""
+    S = with_trailing_shape(S, "S", (4, 4))
+    return affine_transform(S, with_trailing_shape(points, "points", (3,)))
+
+
+def inverse(S: ArrayLike) -> FloatArray:
+    """Inverse (..., 4, 4) of similarities; ShapeError if they are none."""
+    s, R, t = decompose(S)
+    block = np.swapaxes(R, -1, -2) / s[..., None, None]
+    return homogeneous(block, -(block @ t[..., None])[..., 0])
+
+
+def exp(xi: ArrayLike) -> FloatArray:
+    """S (..., 4, 4) of tangent vectors (..., 7): translation, rotation, log scale."""
+    xi = with_trailing_shape(xi, "xi", (7,))
+    rotation, log_scale = xi[..., 3:6], xi[..., 6]
+    t = (_translation_matrix(rotation, log_scale) @ xi[..., :3, None])[..., 0]
+    return homogeneous(np.exp(log_scale)[..., None, None] * so3.exp(rotation), t)
+
+
+def log(S: ArrayLike) -> FloatArray:
+    """Tangent vectors (..., 7), rotation at most half a turn, of S (..., 4, 4); ShapeError if S is no similarity."""
+    s, R, t = decompose(S)
+    rotation, log_scale = so3.log(R), np.log(s)
+    translation = np.linalg.solve(_translation_matrix(rotation, log_scale), t[..., None])[..., 0]
+    return np.concatenate([translation, rotation, log_scale[..., None]], axis=-1)
+
+
+def adjoint(S: ArrayLike) -> FloatArray:
+    """Ad (..., 7, 7) with S exp(xi) S^-1 = exp(Ad xi)."""
+    s, R, t = decompose(S)
+    matrix = np.zeros((*s.shape, 7, 7))
+    matrix[..., :3, :3] = s[..., None, None] * R
+    matrix[..., :3, 3:6] = so3.hat(t) @ R
+    matrix[..., :3, 6] = -t
+    matrix[..., 3:6, 3:6] = R
+    matrix[..., 6, 6] = 1.0
+    return matrix
