@@ -46,13 +46,13 @@ def _checked_weights(weights: ArrayLike | None, count: int) -> FloatArray:
 
 
 def _centred(points: FloatArray, w: FloatArray, name: str) -> tuple[FloatArray, FloatArray]:
-    """Points times the root of their weight, about their centroid, and the centroid; refuses collinear ones."""
+    """Points about their centroid times the root of their weight, and the centroid; refuses collinear."""
     centroid = w @ points
     scaled = np.sqrt(w)[:, None] * (points - centroid)
     spectrum = np.linalg.svd(scaled, compute_uv=False)
     rounding = 8.0 * np.finfo(np.float64).eps * np.abs(points).max()
     if spectrum[1] <= max(_COLLINEAR_BELOW * spectrum[0], rounding):
-        raise DegenerateDataError(f"Expected `{name}` to span at least a plane, got points on one line or point.")
+        raise DegenerateDataError(f"Expected `{name}` to span a plane at least, got points on one line.")
     return scaled, centroid
 
 
@@ -70,7 +70,7 @@ def rigid(source: ArrayLike, target: ArrayLike, weights: ArrayLike | None = None
 
 
 def similarity(source: ArrayLike, target: ArrayLike) -> FloatArray:
-    """S (4, 4) that minimises the sum of |target - S source|^2 over similarities (Umeyama 1991, eq. 40 to 42).
+    """S (4, 4) that minimises the sum of |target - S source|^2 over similarities (Umeyama 1991).
 
     `source`, `target`: (N, 3). DegenerateDataError for fewer than 3 points, or points on a line.
     """

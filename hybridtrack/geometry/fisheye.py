@@ -2,7 +2,8 @@
 
 With r = hypot(x, y) and theta = atan2(r, z), the angle from the axis:
 
-    d = theta (1 + k1 theta^2 + k2 theta^4 + k3 theta^6 + k4 theta^8),   u = fx d x/r + cx,   v = fy d y/r + cy
+    d = theta (1 + k1 theta^2 + k2 theta^4 + k3 theta^6 + k4 theta^8)
+    u = fx d x/r + cx,   v = fy d y/r + cy
 
 Points behind the camera plane (theta > pi/2) have a picture as long as d rises.
 
@@ -75,16 +76,16 @@ class FisheyeLens:
         return project_rows(fisheye_project, points, self.parameters, self.monotonic_limit)
 
     def project_with_jacobians(self, points: ArrayLike) -> tuple[FloatArray, FloatArray, FloatArray]:
-        """uv (..., 2), d uv / d point (..., 2, 3), d uv / d parameters (..., 2, 8); NaN where `project` is."""
+        """uv (..., 2), d uv / d point (..., 2, 3), d uv / d parameters (..., 2, 8), or NaN."""
         return jacobian_rows(fisheye_jacobians, points, self.parameters, self.monotonic_limit)
 
     def unproject(self, uv: ArrayLike, allow_outside: bool = False) -> FloatArray:
-        """Unit directions (..., 3) of pixels uv (..., 2), by Newton iteration, to 1e-10 px when projected again.
+        """Unit directions (..., 3) of pixels uv (..., 2), to 1e-10 px when projected again (Newton).
 
-        Pixels that no angle within `monotonic_limit` reaches raise LensDomainError, or give NaN if `allow_outside`.
+        Pixels that no angle within `monotonic_limit` reaches raise LensDomainError; NaN if `allow_outside`.
         """
         return unproject_rows(fisheye_unproject, uv, self.parameters, self.monotonic_limit, allow_outside)
 
     def is_monotonic_over(self, width: int, height: int) -> bool:
-        """Whether every position on an array of `width` x `height` px, outer edges included, has a direction."""
+        """Whether every position on an array of `width` x `height` px, edges included, has a direction."""
         return bool(np.all(np.isfinite(self.unproject(grid_over(width, height), allow_outside=True))))

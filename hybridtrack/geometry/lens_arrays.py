@@ -58,7 +58,7 @@ def jacobian_rows(
 def unproject_rows(
     kernel: Kernel, uv: ArrayLike, parameters: FloatArray, limit: float, allow_outside: bool
 ) -> FloatArray:
-    """Unit directions (..., 3) of uv (..., 2) px; LensDomainError, or NaN if `allow_outside`, where there is none."""
+    """Unit directions (..., 3) of uv (..., 2) px; LensDomainError, or NaN if `allow_outside`, outside."""
     uv = with_trailing_shape(uv, "uv", (2,))
     flat = np.ascontiguousarray(uv.reshape(-1, 2))
     directions = np.empty((len(flat), 3))
@@ -75,7 +75,7 @@ def unproject_rows(
 
 
 def grid_over(width: int, height: int) -> FloatArray:
-    """Positions (N, 2) px that cover an array to its outer edges: the border densely, the inside in 33 steps."""
+    """Positions (N, 2) px over an array: its outer edges in half pixels, the inside in 33 steps."""
     u, v = np.linspace(-0.5, width - 0.5, 33), np.linspace(-0.5, height - 0.5, 33)
     inside = np.stack(np.meshgrid(u, v), axis=-1).reshape(-1, 2)
     along_u, along_v = np.linspace(u[0], u[-1], 2 * width + 1), np.linspace(v[0], v[-1], 2 * height + 1)

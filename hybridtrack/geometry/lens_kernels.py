@@ -1,9 +1,9 @@
 """Compiled loops of the lens models.
 
-Both radial functions are the odd polynomial f(r) = r (1 + k0 r^2 + k1 r^4 + k2 r^6 + k3 r^8); the perspective model
-has k3 = 0. Parameter vectors `p` are (fx, fy, cx, cy, k1, k2, k3, p1, p2) and (fx, fy, cx, cy, k1, k2, k3, k4).
-`limit` is the radius (perspective) or angle in rad (fisheye) up to which the model has an inverse. Rows that have
-no value are NaN.
+Both radial functions are the odd polynomial f(r) = r (1 + k0 r^2 + k1 r^4 + k2 r^6 + k3 r^8); the
+perspective model has k3 = 0. Parameter vectors `p` are fx, fy, cx, cy, k1, k2, k3, p1, p2 and fx, fy, cx,
+cy, k1, k2, k3, k4. `limit` is the radius (perspective) or angle in rad (fisheye) up to which the model has
+an inverse. Rows that have no value are NaN.
 """
 
 import math
@@ -32,7 +32,7 @@ def radial_slope(r, k0, k1, k2, k3):  # type: ignore[no-untyped-def]
 
 @kernel
 def invert_radial(value, limit, k0, k1, k2, k3):  # type: ignore[no-untyped-def]
-    """The r in [0, limit] with f(r) = value >= 0, by Newton steps kept inside a shrinking bracket; NaN if none."""
+    """The r in [0, limit] with f(r) = value >= 0, by Newton steps inside a shrinking bracket; NaN if none."""
     if not value < math.inf:
         return math.nan
     low, high = 0.0, limit
@@ -65,7 +65,7 @@ def invert_radial(value, limit, k0, k1, k2, k3):  # type: ignore[no-untyped-def]
 
 @kernel
 def distort(a, b, p):  # type: ignore[no-untyped-def]
-    """Distorted (xd, yd) of the undistorted (a, b), and the entries xx, xy, yy of the (symmetric) Jacobian."""
+    """Distorted (xd, yd) of the undistorted (a, b), and xx, xy, yy of the Jacobian, which is symmetric."""
     q = a * a + b * b
     p1, p2 = p[7], p[8]
     scale = 1.0 + q * (p[4] + q * (p[5] + q * p[6]))
@@ -125,7 +125,7 @@ def perspective_jacobians(points, p, limit, uv, d_point, d_parameters):  # type:
 
 @kernel
 def _undistort_from(a, b, xd, yd, p):  # type: ignore[no-untyped-def]
-    """Newton steps from (a, b) towards distort = (xd, yd), halved until the residual falls; last point, residual."""
+    """Newton steps from (a, b) to distort = (xd, yd), halved until the residual falls; point and residual."""
     x, y, xx, xy, yy = distort(a, b, p)
     residual = math.hypot(xd - x, yd - y)
     for _ in range(60):
@@ -190,7 +190,7 @@ def perspective_unproject(uv, p, limit, directions):  # type: ignore[no-untyped-
 
 @kernel
 def _fisheye_point(x, y, z, p, limit):  # type: ignore[no-untyped-def]
-    """Radius r, angle, and f(angle) / r of a camera point; the last is NaN where there is no picture of it."""
+    """Radius r, angle, and f(angle) / r of a camera point; the last is NaN where it has no picture."""
     r = math.hypot(x, y)
     angle = math.atan2(r, z)
     if r == 0.0:

@@ -1,14 +1,15 @@
 """How far from the axis a lens model has an inverse.
 
-Fisheye, and perspective with no tangential terms: up to the first radius where the slope of the radial function
-turns negative, a root of a polynomial.
+Fisheye, and perspective with no tangential terms: up to the first radius where the slope of the radial
+function turns negative, a root of a polynomial.
 
-Perspective with tangential terms of size P = |(p1, p2)|: the model of Brown 1971 is the gradient of a potential, so
-its Jacobian is symmetric, and on a disc on which it is positive definite the model is one to one. In radial and
-tangential axes at radius r, with f' the slope of the radial function, L = f(r)/r, q = P r and c the cosine of the
-angle to the tangential axis, it is [[f' + 6 q c, 2 q s], [2 q s, L + 2 q c]]. Its determinant, least over c, is
-(f' - 6 q)(L - 2 q) at c = -1 or, when 16 q > f' + 3 L, f' L - 4 q^2 - (f' + 3 L)^2 / 16. The limit is the first
-radius where that turns negative.
+Perspective with tangential terms of size P = |(p1, p2)|: the model of Brown 1971 is the gradient of a
+potential, so its Jacobian is symmetric, and on a disc on which it is positive definite the model is one to
+one. Along and across the radius r, with f' the slope of the radial function f, L = f(r)/r, q = P r, and c
+and s the cosine and sine of the angle from the direction (p2, p1), it is [[f' + 6 q c, 2 q s], [2 q s, L +
+2 q c]]. Its determinant, least over the angle, is (f' - 6 q)(L - 2 q) at c = -1 or, where 16 q > f' + 3 L,
+the inner minimum f' L - 4 q^2 - (f' + 3 L)^2 / 16. The limit is the first radius where the matrix stops
+being positive definite.
 """
 
 from collections.abc import Callable, Sequence
@@ -34,7 +35,7 @@ def _positive_roots(polynomial: Polynomial) -> list[float]:
 
 
 def _first_negative(margin: Callable[[float], float], candidates: Sequence[float]) -> float:
-    """The first radius at which `margin`, positive at zero, turns negative, given all where it may be zero."""
+    """The first radius at which `margin`, positive at zero, turns negative, given where it may be zero."""
     marks = sorted(candidates)
     if not marks:
         return inf
@@ -56,7 +57,7 @@ def radial_limit(radial: Sequence[float]) -> float:
 
 
 def perspective_limit(radial: Sequence[float], tangential: tuple[float, float]) -> float:
-    """Largest r of a disc on which the perspective model is surely one to one; infinite where it is everywhere.
+    """Largest r of a disc on which the perspective model is one to one by the proof above; may be infinite.
 
     >>> round(perspective_limit([0.0, 0.0, 0.0], (0.0, 0.01)), 6)
     16.666667
@@ -77,5 +78,5 @@ def perspective_limit(radial: Sequence[float], tangential: tuple[float, float]) 
 
     # `interior` is zero at r = 0, with a double root; its other roots are those of the quotient by r^2.
     reduced = Polynomial(interior.coef[2:])
-    candidates = [*_positive_roots(slope - 6.0 * q), *_positive_roots(gain - 2.0 * q), *_positive_roots(reduced)]
-    return _first_negative(margin, candidates)
+    polynomials = (slope - 6.0 * q, gain - 2.0 * q, reduced)
+    return _first_negative(margin, [root for each in polynomials for root in _positive_roots(each)])

@@ -40,7 +40,10 @@ from hybridtrack.geometry.monotonic import perspective_limit
 
 @dataclass(frozen=True)
 class PerspectiveLens:
-    """Focal lengths and centre in px; `radial` k1, k2, k3; `tangential` p1, p2. OptionError for values that can't be."""
+    """Focal lengths and centre in px; `radial` k1, k2, k3; `tangential` p1, p2.
+
+    OptionError for a focal length that is not positive, a value that is not finite, a wrong number of terms.
+    """
 
     fx: float
     fy: float
@@ -55,9 +58,10 @@ class PerspectiveLens:
     def __post_init__(self) -> None:
         for name in ("fx", "fy", "cx", "cy"):
             object.__setattr__(self, name, float(getattr(self, name)))
-        object.__setattr__(self, "radial", checked_terms("PerspectiveLens", "radial", self.radial, 3))
-        object.__setattr__(self, "tangential", checked_terms("PerspectiveLens", "tangential", self.tangential, 2))
-        checked_lens("PerspectiveLens", (self.fx, self.fy), (self.cx, self.cy, *self.radial, *self.tangential))
+        for name, count in (("radial", 3), ("tangential", 2)):
+            object.__setattr__(self, name, checked_terms("PerspectiveLens", name, getattr(self, name), count))
+        others = (self.cx, self.cy, *self.radial, *self.tangential)
+        checked_lens("PerspectiveLens", (self.fx, self.fy), others)
 
     @property
     def parameters(self) -> FloatArray:
@@ -71,7 +75,7 @@ class PerspectiveLens:
 
     @cached_property
     def monotonic_limit(self) -> float:
-        """Largest undistorted r on whose whole disc the model is one to one; infinite where there is no such limit.
+        """Largest undistorted r on whose disc the model is one to one; infinite where it is so everywhere.
 
         Without tangential terms: where the slope of the radial function turns negative.
         """
@@ -82,16 +86,16 @@ class PerspectiveLens:
         return project_rows(perspective_project, points, self.parameters, self.monotonic_limit)
 
     def project_with_jacobians(self, points: ArrayLike) -> tuple[FloatArray, FloatArray, FloatArray]:
-        """uv (..., 2), d uv / d point (..., 2, 3), d uv / d parameters (..., 2, 9); NaN where `project` is."""
+        """uv (..., 2), d uv / d point (..., 2, 3), d uv / d parameters (..., 2, 9), or NaN."""
         return jacobian_rows(perspective_jacobians, points, self.parameters, self.monotonic_limit)
 
     def unproject(self, uv: ArrayLike, allow_outside: bool = False) -> FloatArray:
-        """Unit directions (..., 3) of pixels uv (..., 2), by Newton iteration, to 1e-10 px when projected again.
+        """Unit directions (..., 3) of pixels uv (..., 2), to 1e-10 px when projected again (Newton).
 
-        Pixels that no point within `monotonic_limit` reaches raise LensDomainError, or give NaN if `allow_outside`.
+        Pixels that no point within `monotonic_limit` reaches raise LensDomainError; NaN if `allow_outside`.
         """
         return unproject_rows(perspective_unproject, uv, self.parameters, self.monotonic_limit, allow_outside)
 
     def is_monotonic_over(self, width: int, height: int) -> bool:
-        """Whether every position on an array of `width` x `height` px, outer edges included, has a direction."""
+        """Whether every position on an array of `width` x `height` px, edges included, has a direction."""
         return bool(np.all(np.isfinite(self.unproject(grid_over(width, height), allow_outside=True))))

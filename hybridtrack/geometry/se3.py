@@ -1,7 +1,7 @@
 """Rigid motions of space, SE(3), as homogeneous matrices (..., 4, 4).
 
-A twist xi (..., 6) is translation (m), then rotation vector (rad). Formulas follow Barfoot 2017, "State Estimation
-for Robotics", whose order of the twist is the same.
+A twist xi (..., 6) is translation (m), then rotation vector (rad). Formulas follow Barfoot 2017, "State
+Estimation for Robotics", whose order of the twist is the same.
 
 >>> import numpy as np
 >>> world_from_camera = compose(np.eye(3), [1.0, 2.0, 3.0])
@@ -68,7 +68,7 @@ def exp(xi: ArrayLike) -> FloatArray:
 
 
 def log(T: ArrayLike) -> FloatArray:
-    """Twists (..., 6), rotation at most half a turn, of T (..., 4, 4); ShapeError if a block is no rotation."""
+    """Twists (..., 6), rotation at most half a turn, of T (..., 4, 4); ShapeError if not rigid motions."""
     T = with_trailing_shape(T, "T", (4, 4))
     rotation = so3.log(T[..., :3, :3])
     translation = (so3.left_jacobian_inverse(rotation) @ T[..., :3, 3:])[..., 0]

@@ -1,12 +1,13 @@
 """Similarities of space, Sim(3), as homogeneous matrices (..., 4, 4) with s R in the block.
 
-A tangent vector (..., 7) is translation, rotation vector (rad), log of the scale. With z = l + i a, l the log scale
-and a the angle, the translation is W times the tangent translation, W = integral of exp(x (l + hat(w))) over x from
-0 to 1 = A + B hat(w) + C hat(w)^2 (Strasdat 2012, "Local Accuracy and Global Consistency for Efficient Visual SLAM",
-in a form that divides by |z|^2 only, so that neither limit alone is singular):
+A tangent vector (..., 7) is translation, rotation vector w (rad), log of the scale. With g the log scale, a
+the angle and z = g + i a, the translation is W times the tangent translation, where W, the integral over x
+from 0 to 1 of exp(x (g + hat(w))), is A + B hat(w) + C hat(w)^2 (Strasdat 2012, "Local Accuracy and Global
+Consistency for Efficient Visual SLAM", here in a form that divides by |z|^2 only, so that neither limit
+alone is singular):
 
-    A = (e^l - 1) / l,   B = (l e^l sin(a)/a - e^l cos(a) + 1) / |z|^2,
-    C = (l e^l (1 - cos a)/a^2 + A - e^l sin(a)/a) / |z|^2.
+    A = (e^g - 1) / g,   B = (g e^g sin(a)/a - e^g cos(a) + 1) / |z|^2,
+    C = (g e^g (1 - cos a)/a^2 + A - e^g sin(a)/a) / |z|^2.
 
 Below |z| = 1 these cancel; there the power series of (e^z - 1)/z is summed in real terms.
 
@@ -31,45 +32,45 @@ from hybridtrack.geometry.small_angle import one_minus_cosine_over_square, sine_
 _SERIES_TERMS = 20  # 1 / 21! is below 1e-19
 
 
-def _series_coefficients(l: FloatArray, a: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """A, B, C from the powers z^n / (n + 1)!, carried as l^n, Im(z^n) / a and (l^n - Re(z^n)) / a^2."""
-    power, real = np.ones_like(l), np.ones_like(l)
-    imaginary, lag = np.zeros_like(l), np.zeros_like(l)
-    A, B, C = np.ones_like(l), np.zeros_like(l), np.zeros_like(l)
+def _series_coefficients(g: FloatArray, a: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """A, B, C from the powers z^n / (n + 1)!, carried as g^n, Im(z^n) / a and (g^n - Re(z^n)) / a^2."""
+    power, real = np.ones_like(g), np.ones_like(g)
+    imaginary, lag = np.zeros_like(g), np.zeros_like(g)
+    A, B, C = np.ones_like(g), np.zeros_like(g), np.zeros_like(g)
     factor = 1.0
     for n in range(1, _SERIES_TERMS + 1):
-        lag = l * lag + imaginary
-        real, imaginary = l * real - a**2 * imaginary, real + l * imaginary
-        power = power * l
+        lag = g * lag + imaginary
+        real, imaginary = g * real - a**2 * imaginary, real + g * imaginary
+        power = power * g
         factor /= n + 1
         A, B, C = A + factor * power, B + factor * imaginary, C + factor * lag
     return A, B, C
 
 
-def _closed_coefficients(l: FloatArray, a: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
-    scale, sine = np.exp(l), sine_over_angle(a)
-    zero = l == 0.0
-    A = np.where(zero, 1.0, np.expm1(l) / np.where(zero, 1.0, l))
-    square = l**2 + a**2
-    B = (l * scale * sine - scale * np.cos(a) + 1.0) / square
-    C = (l * scale * one_minus_cosine_over_square(a) + A - scale * sine) / square
+def _closed_coefficients(g: FloatArray, a: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+    scale, sine = np.exp(g), sine_over_angle(a)
+    zero = g == 0.0
+    A = np.where(zero, 1.0, np.expm1(g) / np.where(zero, 1.0, g))
+    square = g**2 + a**2
+    B = (g * scale * sine - scale * np.cos(a) + 1.0) / square
+    C = (g * scale * one_minus_cosine_over_square(a) + A - scale * sine) / square
     return A, B, C
 
 
 def _translation_matrix(rotation: FloatArray, log_scale: FloatArray) -> FloatArray:
     """W (..., 3, 3) of the module docstring."""
-    l = np.asarray(log_scale)[..., None, None]
+    g = np.asarray(log_scale)[..., None, None]
     a = np.asarray(np.linalg.norm(rotation, axis=-1)[..., None, None])
-    small = l**2 + a**2 < 1.0
-    series = _series_coefficients(np.where(small, l, 0.0), np.where(small, a, 0.0))
-    closed = _closed_coefficients(np.where(small, 1.0, l), np.where(small, 1.0, a))
+    small = g**2 + a**2 < 1.0
+    series = _series_coefficients(np.where(small, g, 0.0), np.where(small, a, 0.0))
+    closed = _closed_coefficients(np.where(small, 1.0, g), np.where(small, 1.0, a))
     A, B, C = (np.where(small, near, far) for near, far in zip(series, closed, strict=True))
     K = so3.hat(rotation)
     return np.asarray(A * np.eye(3) + B * K + C * (K @ K))
 
 
 def compose(s: ArrayLike, R: ArrayLike, t: ArrayLike) -> FloatArray:
-    """S (..., 4, 4) of scales s (...), rotations R (..., 3, 3), translations t (..., 3); ShapeError unless s > 0."""
+    """S (..., 4, 4): p -> s R p + t, of s (...), R (..., 3, 3), t (..., 3); ShapeError unless s > 0."""
     s = np.asarray(s, dtype=np.float64)
     if np.any(s <= 0.0):
         raise ShapeError(f"Expected `s` to be positive, got {np.min(s):g}.")
@@ -114,7 +115,7 @@ def exp(xi: ArrayLike) -> FloatArray:
 
 
 def log(S: ArrayLike) -> FloatArray:
-    """Tangent vectors (..., 7), rotation at most half a turn, of S (..., 4, 4); ShapeError if S is no similarity."""
+    """Tangents (..., 7), rotation at most half a turn, of S (..., 4, 4); ShapeError if not similarities."""
     s, R, t = decompose(S)
     rotation, log_scale = so3.log(R), np.log(s)
     translation = np.linalg.solve(_translation_matrix(rotation, log_scale), t[..., None])[..., 0]

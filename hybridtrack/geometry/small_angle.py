@@ -1,7 +1,7 @@
 """Quotients of trigonometric functions that stay exact as their angle goes to zero.
 
-Every function takes angles >= 0 in rad, of any shape. Where the quotient cancels, a Taylor series in the squared
-angle takes over below one radian; its coefficients fall like factorials, so the terms kept reach the last bit.
+Every function takes angles >= 0 in rad, of any shape. Where the quotient cancels, a Taylor series in the
+squared angle takes over below one radian, with as many terms as reach the last bit.
 """
 
 from collections.abc import Callable

@@ -1,8 +1,8 @@
 """Rotations of space, SO(3): exponential, logarithm, Jacobians, quaternions.
 
-Rotations are matrices (..., 3, 3), rotation vectors (..., 3) in rad, quaternions (..., 4) as x, y, z, w. Formulas
-follow Barfoot 2017, "State Estimation for Robotics"; the quaternion of a matrix takes the largest of four
-candidates (Shepperd 1978), so that it and the logarithm keep full precision up to half a turn.
+Rotations are matrices (..., 3, 3), rotation vectors (..., 3) in rad, quaternions (..., 4) as x, y, z, w.
+Formulas follow Barfoot 2017, "State Estimation for Robotics"; the quaternion of a matrix takes the largest of
+four candidates (Shepperd 1978), so that it and the logarithm keep full precision up to half a turn.
 
 >>> import numpy as np
 >>> np.round(exp([0.0, 0.0, np.pi / 2]), 3) + 0.0
@@ -11,7 +11,7 @@ array([[ 0., -1.,  0.],
        [ 0.,  0.,  1.]])
 >>> log(2.0 * np.eye(3))
 Traceback (most recent call last):
-hybridtrack.errors.ShapeError: Expected `R` to hold rotations (R R^T = 1 within 1e-06, det > 0), got a deviation of 3.
+hybridtrack.errors.ShapeError: Expected `R` to hold rotations (R R^T = 1 within 1e-06), got a deviation of 3.
 """
 
 import numpy as np
@@ -69,7 +69,7 @@ def _refuse_other_than_rotations(R: FloatArray) -> None:
     # Written so that NaN (a pose that is lost) passes and stays NaN.
     if worst > _ORTHONORMAL_WITHIN:
         raise ShapeError(
-            f"Expected `R` to hold rotations (R R^T = 1 within {_ORTHONORMAL_WITHIN:g}, det > 0), "
+            f"Expected `R` to hold rotations (R R^T = 1 within {_ORTHONORMAL_WITHIN:g}), "
             f"got a deviation of {worst:.3g}."
         )
     if np.any(np.linalg.det(R) < 0.0):
@@ -77,7 +77,7 @@ def _refuse_other_than_rotations(R: FloatArray) -> None:
 
 
 def to_quaternion(R: ArrayLike) -> FloatArray:
-    """Unit quaternions (..., 4) as x, y, z, w with w >= 0 of rotations (..., 3, 3); ShapeError if they are none."""
+    """Unit quaternions (..., 4), x, y, z, w with w >= 0, of R (..., 3, 3); ShapeError if not rotations."""
     R = with_trailing_shape(R, "R", (3, 3))
     _refuse_other_than_rotations(R)
     x, y, z = R[..., 0, 0], R[..., 1, 1], R[..., 2, 2]
@@ -108,7 +108,7 @@ def from_quaternion(q_xyzw: ArrayLike) -> FloatArray:
 
 
 def log(R: ArrayLike) -> FloatArray:
-    """Rotation vectors (..., 3) in rad, of length 0 to pi, of rotations (..., 3, 3); ShapeError if they are none.
+    """Rotation vectors (..., 3) in rad, of length 0 to pi, of R (..., 3, 3); ShapeError if not rotations.
 
     At exactly half a turn the two opposite vectors are both right; one of them is returned.
     """
@@ -127,7 +127,7 @@ def left_jacobian(w: ArrayLike) -> FloatArray:
 
 
 def left_jacobian_inverse(w: ArrayLike) -> FloatArray:
-    """Inverse (..., 3, 3) of `left_jacobian`; none exists at full turns, where the entries grow without bound."""
+    """Inverse (..., 3, 3) of `left_jacobian`; none exists at full turns, where it grows without bound."""
     w = with_trailing_shape(w, "w", (3,))
     return _polynomial(w, -0.5, cotangent_remainder_over_square(_norm(w)))
 
@@ -145,7 +145,7 @@ def right_jacobian_inverse(w: ArrayLike) -> FloatArray:
 def nearest_rotation_and_spectrum(M: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Rotations R (..., 3, 3) that maximise trace(R^T M), and the signed singular values (..., 3) of M.
 
-    The last singular value carries the sign of det(U V^T) (Umeyama 1991, eq. 43). DegenerateDataError where the
+    The last singular value carries the sign of det(U V^T) (Umeyama 1991). DegenerateDataError where the
     maximum is not unique.
     """
     if not np.all(np.isfinite(M)):
@@ -155,12 +155,14 @@ def nearest_rotation_and_spectrum(M: FloatArray) -> tuple[FloatArray, FloatArray
     spectrum = spectrum.copy()
     spectrum[..., 2] *= sign
     if np.any(spectrum[..., 1] + spectrum[..., 2] <= 1e-12 * spectrum[..., 0]):
-        raise DegenerateDataError("Expected a matrix with one nearest rotation, got one whose rank or mirroring leaves it open.")
+        raise DegenerateDataError(
+            "Expected a matrix with one nearest rotation, got one whose rank or mirroring leaves it open."
+        )
     U = U.copy()
     U[..., :, 2] *= sign[..., None]
     return U @ Vt, spectrum
 
 
 def project_to_rotation(M: ArrayLike) -> FloatArray:
-    """Rotations nearest in the Frobenius norm to matrices (..., 3, 3); DegenerateDataError where none is unique."""
+    """Rotations nearest to M (..., 3, 3) in the Frobenius norm; DegenerateDataError where not unique."""
     return nearest_rotation_and_spectrum(with_trailing_shape(M, "M", (3, 3)))[0]
