@@ -15,7 +15,7 @@ def kernel(function: Function | None = None, *, parallel: bool = False, fastmath
     """
 
     def wrap(target: Function) -> Any:
-        options = {"parallel": parallel, "fastmath": fastmath, "error_model": "numpy"}
+        options: dict[str, Any] = {"parallel": parallel, "fastmath": fastmath, "error_model": "numpy"}
         try:
             return numba.njit(cache=True, **options)(target)
         except RuntimeError:  # numba found no folder it may write its cache to

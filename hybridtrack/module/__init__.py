@@ -2,7 +2,14 @@
 
 from hybridtrack.module.event_map import ColourFromEvent, LatticeTest, nominal_matrix
 from hybridtrack.module.hybrid_module import HybridModule, load_module, parse_module, save_module
-from hybridtrack.module.layout import Cluster, ColourArray, EventGrid, FrameMode, clear_in_bin, frame_pixel_centres
+from hybridtrack.module.layout import (
+    Cluster,
+    ColourArray,
+    EventGrid,
+    FrameMode,
+    clear_in_bin,
+    frame_pixel_centres,
+)
 from hybridtrack.module.signals import (
     Contrast,
     Defects,

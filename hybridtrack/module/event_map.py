@@ -61,8 +61,9 @@ def invert_event_map(matrix: Array, uv: Array, radial: float, centre: Array, hal
     return (straight - matrix[:, 2]) @ np.linalg.inv(matrix[:, :2]).T
 
 
-def map_terms(calibrated: ColourFromEvent | None, cluster: Cluster, grid: EventGrid,
-              array: ColourArray) -> tuple[Array, float, Array]:
+def map_terms(
+    calibrated: ColourFromEvent | None, cluster: Cluster, grid: EventGrid, array: ColourArray
+) -> tuple[Array, float, Array]:
     """Return matrix (2, 3), radial and centre (2,) of the calibrated map, or of the nominal one."""
     middle = np.array([(array.width - 1) / 2.0, (array.height - 1) / 2.0])
     if calibrated is None:

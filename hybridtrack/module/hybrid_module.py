@@ -8,7 +8,15 @@ import numpy as np
 from hybridtrack.errors import NotCalibratedError
 from hybridtrack.files import parse_document, read_document, write_document
 from hybridtrack.module.event_map import ColourFromEvent, apply_event_map, invert_event_map, map_terms
-from hybridtrack.module.layout import Array, Cluster, ColourArray, EventGrid, FrameMode, Part, frame_pixel_centres
+from hybridtrack.module.layout import (
+    Array,
+    Cluster,
+    ColourArray,
+    EventGrid,
+    FrameMode,
+    Part,
+    frame_pixel_centres,
+)
 from hybridtrack.module.signals import Contrast, Defects, Lens, LensParameters, Timing, Uncertainty
 
 LAYOUT = "hybridtrack-module"

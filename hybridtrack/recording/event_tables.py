@@ -82,7 +82,9 @@ def _convert(t: Array, x: Array, y: Array, polarity: Array, options: EventTableO
     polarity = np.asarray(polarity).astype(np.int64)
     unknown = polarity[(polarity != on_code) & (polarity != off_code)]
     if len(unknown):
-        raise FileFormatError(f"{source}: polarity must be {on_code} or {off_code} ('{options.polarity}'), got {unknown[0]}")
+        raise FileFormatError(
+            f"{source}: polarity must be {on_code} or {off_code} ('{options.polarity}'), got {unknown[0]}"
+        )
     columns = []
     for name, values in (("x", x), ("y", y)):
         shifted = np.asarray(values).astype(np.int64) - options.pixel_origin
@@ -152,7 +154,8 @@ def _npz_blocks(path: Path, options: EventTableOptions) -> Iterator[Events]:
     if len({array.shape for array in arrays}) != 1 or arrays[0].ndim != 1:
         raise FileFormatError(f"{path}: event arrays must be flat and of one length, got {[a.shape for a in arrays]}")
     for start in range(0, len(arrays[0]), 1 << 20):
-        yield _convert(*(array[start : start + (1 << 20)] for array in arrays), options, str(path))
+        t, x, y, p = (array[start : start + (1 << 20)] for array in arrays)
+        yield _convert(t, x, y, p, options, str(path))
 
 
 def _hdf5_blocks(path: Path, options: EventTableOptions) -> Iterator[Events]:
@@ -168,7 +171,8 @@ def _hdf5_blocks(path: Path, options: EventTableOptions) -> Iterator[Events]:
         if len({len(column) for column in data}) != 1:
             raise FileFormatError(f"{path}: event columns must have one length, got {[len(d) for d in data]}")
         for start in range(0, len(data[0]), 1 << 20):
-            yield _convert(*(column[start : start + (1 << 20)] for column in data), options, str(path))
+            t, x, y, p = (column[start : start + (1 << 20)] for column in data)
+            yield _convert(t, x, y, p, options, str(path))
 
 
 def event_table_blocks(path: Path | str, options: EventTableOptions) -> Iterator[Events]:
@@ -179,7 +183,13 @@ def event_table_blocks(path: Path | str, options: EventTableOptions) -> Iterator
     file = Path(path)
     if not file.is_file():
         raise MissingFileError(f"{file}: expected a table of events, found no such file")
-    readers = {".csv": _csv_blocks, ".txt": _csv_blocks, ".npz": _npz_blocks, ".h5": _hdf5_blocks, ".hdf5": _hdf5_blocks}
+    readers = {
+        ".csv": _csv_blocks,
+        ".txt": _csv_blocks,
+        ".npz": _npz_blocks,
+        ".h5": _hdf5_blocks,
+        ".hdf5": _hdf5_blocks,
+    }
     if file.suffix.lower() not in readers:
         raise OptionError(f"{file}: an event table ending in {', '.join(readers)} is required, got '{file.suffix}'")
     return readers[file.suffix.lower()](file, options)
@@ -201,7 +211,8 @@ def in_stamp_order(blocks: Iterator[Events], reorder_ns: int) -> Iterator[Events
         if held.t[0] < released_until:
             late_ms = (released_until - int(held.t[0])) / 1e6
             raise FileFormatError(
-                f"event stamps may be at most {reorder_ns / 1e6:g} ms out of order, got one {late_ms + reorder_ns / 1e6:.3f} ms late"
+                f"event stamps may be at most {reorder_ns / 1e6:g} ms out of order, "
+                f"got one {late_ms + reorder_ns / 1e6:.3f} ms late"
             )
         last = int(held.t[-1])
         cut = len(held) if block is None else int(np.searchsorted(held.t, last - reorder_ns))

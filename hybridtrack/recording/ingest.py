@@ -9,8 +9,18 @@ import numpy as np
 from hybridtrack.errors import FileFormatError, MissingFileError, OptionError
 from hybridtrack.module import HybridModule
 from hybridtrack.recording.arrays import Array
-from hybridtrack.recording.event_tables import TIME_UNITS_NS, EventTableOptions, event_table_blocks, in_stamp_order
-from hybridtrack.recording.frame_sources import FrameStamps, frame_pictures, read_frame_stamps, video_frame_rate
+from hybridtrack.recording.event_tables import (
+    TIME_UNITS_NS,
+    EventTableOptions,
+    event_table_blocks,
+    in_stamp_order,
+)
+from hybridtrack.recording.frame_sources import (
+    FrameStamps,
+    frame_pictures,
+    read_frame_stamps,
+    video_frame_rate,
+)
 from hybridtrack.recording.writer import RecordingWriter
 
 Progress = Callable[[str, float], None]
@@ -55,7 +65,9 @@ def _sensor_table(path: Path, columns: tuple[str, ...]) -> dict[str, Array]:
     names = table.dtype.names or ()
     missing = [name for name in columns if name not in names]
     if missing:
-        raise FileFormatError(f"{path}: column '{missing[0]}' is required, and the header has {', '.join(names) or 'none'}")
+        raise FileFormatError(
+            f"{path}: column '{missing[0]}' is required, and the header has {', '.join(names) or 'none'}"
+        )
     result = {name: table[name] for name in columns}
     if any(values.dtype.kind not in "iufb" or not np.all(np.isfinite(values)) for values in result.values()):
         raise FileFormatError(f"{path}: finite numbers are required in {', '.join(columns)}")
@@ -66,7 +78,9 @@ def _sensor_stamps(values: Array, unit_ns: int, origin_ns: int, path: Path) -> A
     stamps = values * unit_ns if values.dtype.kind in "iu" else np.rint(values * float(unit_ns))
     stamps = stamps.astype(np.int64) + origin_ns
     if np.any(np.diff(stamps) < 0):
-        raise FileFormatError(f"{path}: stamps must not run backwards, and do at row {int(np.argmax(np.diff(stamps) < 0)) + 2}")
+        raise FileFormatError(
+            f"{path}: stamps must not run backwards, and do at row {int(np.argmax(np.diff(stamps) < 0)) + 2}"
+        )
     return stamps
 
 
@@ -92,7 +106,9 @@ def _video_stamps(path: Path, exposure_ns: int | None) -> Iterator[tuple[int, in
         index += 1
 
 
-def _stamp_pairs(sources: IngestSources, options: IngestOptions, unit_ns: int) -> tuple[Iterator[tuple[int, int]], int | None]:
+def _stamp_pairs(
+    sources: IngestSources, options: IngestOptions, unit_ns: int
+) -> tuple[Iterator[tuple[int, int]], int | None]:
     if sources.frame_stamps is not None:
         stamps: FrameStamps = read_frame_stamps(sources.frame_stamps, unit_ns, options.stamp, options.exposure_ns)
         return zip(stamps.t_start_ns.tolist(), stamps.exposure_ns.tolist(), strict=True), len(stamps.t_start_ns)
@@ -109,15 +125,21 @@ def _write_frames(writer: RecordingWriter, sources: IngestSources, options: Inge
     for image in frame_pictures(sources.frames, options.grey):
         pair = next(pairs, None)
         if pair is None:
-            raise FileFormatError(f"{sources.frame_stamps}: a stamp for every picture is required, and there are more pictures")
+            raise FileFormatError(
+                f"{sources.frame_stamps}: a stamp for every picture is required, and there are more pictures"
+            )
         if shape is not None and image.shape != shape:
-            raise FileFormatError(f"{sources.frames}: pictures of one size are required, got {image.shape} after {shape}")
+            raise FileFormatError(
+                f"{sources.frames}: pictures of one size are required, got {image.shape} after {shape}"
+            )
         shape = image.shape
         writer.append_frames(image[None], np.array([pair[0]]), np.array([pair[1]]), np.array([count], np.uint64))
         count += 1
         progress("frames", count / expected if expected else 0.5)
     if expected is not None and count != expected:
-        raise FileFormatError(f"{sources.frame_stamps}: one stamp a picture is required, got {expected} for {count} pictures")
+        raise FileFormatError(
+            f"{sources.frame_stamps}: one stamp a picture is required, got {expected} for {count} pictures"
+        )
     return count
 
 

@@ -32,7 +32,9 @@ def open_checked(path: Path | str) -> h5py.File:
         handle = h5py.File(file, "r")
     except OSError as error:
         reason = str(error).split("(")[-1].rstrip(")")
-        raise FileFormatError(f"{file}: expected an HDF5 recording, but it is truncated or of another kind ({reason})") from None
+        raise FileFormatError(
+            f"{file}: expected an HDF5 recording, but it is truncated or of another kind ({reason})"
+        ) from None
     try:
         layout, version = handle.attrs.get("format"), handle.attrs.get("version")
         if isinstance(layout, bytes):
@@ -74,7 +76,9 @@ class Recording:
     def __enter__(self) -> "Recording":
         return self
 
-    def __exit__(self, kind: type[BaseException] | None, value: BaseException | None, trace: TracebackType | None) -> None:
+    def __exit__(
+        self, kind: type[BaseException] | None, value: BaseException | None, trace: TracebackType | None
+    ) -> None:
         self.close()
 
     def _refuse(self, what: str) -> FileFormatError:
@@ -109,9 +113,14 @@ class Recording:
         image = self._handle.get("frames/image")
         if not isinstance(image, h5py.Dataset):
             raise self._refuse("/frames/image is required and missing")
-        if image.dtype not in (np.uint8, np.uint16) or image.ndim not in (3, 4) or (image.ndim == 4 and image.shape[3] != 3):
+        if (
+            image.dtype not in (np.uint8, np.uint16)
+            or image.ndim not in (3, 4)
+            or (image.ndim == 4 and image.shape[3] != 3)
+        ):
             raise self._refuse(
-                f"/frames/image must be uint8 or uint16 of shape (N, H, W) or (N, H, W, 3), got {image.dtype} {image.shape}"
+                "/frames/image must be uint8 or uint16 of shape (N, H, W) or (N, H, W, 3), "
+                f"got {image.dtype} {image.shape}"
             )
         if len(image) != count:
             raise self._refuse(f"/frames/image has {len(image)} pictures, but /frames/t_start has {count} stamps")
@@ -217,7 +226,9 @@ class Recording:
         for begin in range(start, stop, size):
             block = self._read_events(begin, min(begin + size, stop))
             if block.t[0] < last or np.any(block.t[1:] < block.t[:-1]):
-                raise self._refuse(f"event stamps must not run backwards, and do in events {begin} to {begin + len(block)}")
+                raise self._refuse(
+                    f"event stamps must not run backwards, and do in events {begin} to {begin + len(block)}"
+                )
             last = int(block.t[-1])
             yield block
 

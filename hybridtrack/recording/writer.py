@@ -50,7 +50,9 @@ class RecordingWriter:
     def __enter__(self) -> "RecordingWriter":
         return self
 
-    def __exit__(self, kind: type[BaseException] | None, value: BaseException | None, trace: TracebackType | None) -> None:
+    def __exit__(
+        self, kind: type[BaseException] | None, value: BaseException | None, trace: TracebackType | None
+    ) -> None:
         if kind is None:
             self.close()
         else:
@@ -93,9 +95,14 @@ class RecordingWriter:
             self._append(f"events/{name}", values)
 
     def append_frames(
-        self, images: Array, t_start_ns: Array, exposure_ns: Array, number: Array | None = None, gain: Array | None = None
+        self,
+        images: Array,
+        t_start_ns: Array,
+        exposure_ns: Array,
+        number: Array | None = None,
+        gain: Array | None = None,
     ) -> None:
-        """Append pictures (N, H, W[, 3]) with stamps and exposures (N,) in ns; `number` and `gain` on all calls or none."""
+        """Append pictures (N, H, W[, 3]), stamps and exposures (N,) ns; `number`, `gain` on all calls or none."""
         images = np.asarray(images)
         if "frames" not in self._handle:
             self._create("frames/image", (0, *images.shape[1:]), images.dtype, (1, *images.shape[1:]))

@@ -9,7 +9,12 @@ import pytest
 
 from hybridtrack.errors import FileFormatError, OptionError
 from hybridtrack.recording import Events, Recording
-from hybridtrack.recording.event_tables import EventTableOptions, decimal_text_to_ns, event_table_blocks, in_stamp_order
+from hybridtrack.recording.event_tables import (
+    EventTableOptions,
+    decimal_text_to_ns,
+    event_table_blocks,
+    in_stamp_order,
+)
 from hybridtrack.recording.ingest import IngestOptions, IngestSources, ingest
 
 
@@ -24,7 +29,9 @@ def read_all(path: Path, **options: object) -> Events:
 def test_csv_npz_and_hdf5_give_the_same_events(tmp_path: Path) -> None:
     """Three layouts of one set of events, with other names and orders, read alike."""
     t, x, y, p = np.array([10, 20, 35]), np.array([1, 2, 3]), np.array([4, 5, 6]), np.array([1, -1, 1])
-    (tmp_path / "a.csv").write_text("row,stamp,pol,col\n" + "".join(f"{b},{a},{d},{c}\n" for a, c, b, d in zip(t, x, y, p, strict=True)))
+    (tmp_path / "a.csv").write_text(
+        "row,stamp,pol,col\n" + "".join(f"{b},{a},{d},{c}\n" for a, c, b, d in zip(t, x, y, p, strict=True))
+    )
     np.savez(tmp_path / "a.npz", stamp=t, col=x, row=y, pol=p)
     with h5py.File(tmp_path / "a.h5", "w") as handle:
         for name, values in (("stamp", t), ("col", x), ("row", y), ("pol", p)):
