@@ -73,7 +73,7 @@ def compose(s: ArrayLike, R: ArrayLike, t: ArrayLike) -> FloatArray:
     """S (..., 4, 4): p -> s R p + t, of s (...), R (..., 3, 3), t (..., 3); ShapeError unless s > 0."""
     s = np.asarray(s, dtype=np.float64)
     if np.any(s <= 0.0):
-        raise ShapeError(f"Expected `s` to be positive, got {np.min(s):g}.")
+        raise ShapeError(f"Expected `s` to be positive, got {np.nanmin(s):g}.")
     block = s[..., None, None] * with_trailing_shape(R, "R", (3, 3))
     return homogeneous(block, with_trailing_shape(t, "t", (3,)))
 
@@ -84,12 +84,12 @@ def decompose(S: ArrayLike) -> tuple[FloatArray, FloatArray, FloatArray]:
     ShapeError where the block mirrors or collapses space.
     """
     S = with_trailing_shape(S, "S", (4, 4))
-    determinant = np.linalg.det(S[..., :3, :3])
-    if np.any(determinant <= 0.0):
+    volume = so3.determinant(S[..., :3, :3])
+    if np.any(volume <= 0.0):
         raise ShapeError(
-            f"Expected `S` to hold similarities (det of the block > 0), got det = {np.min(determinant):g}."
+            f"Expected `S` to hold similarities (det of the block > 0), got det = {np.nanmin(volume):g}."
         )
-    s = np.cbrt(determinant)
+    s = np.cbrt(volume)
     return s, S[..., :3, :3] / s[..., None, None], S[..., :3, 3].copy()
 
 

@@ -63,16 +63,21 @@ def exp(w: ArrayLike) -> FloatArray:
     return _polynomial(w, sine_over_angle(angle), one_minus_cosine_over_square(angle))
 
 
+def determinant(M: FloatArray) -> FloatArray:
+    """Determinants (...) of matrices (..., 3, 3) as a triple product, NaN for NaN without a warning."""
+    return np.asarray(np.sum(M[..., 0, :] * np.cross(M[..., 1, :], M[..., 2, :]), axis=-1))
+
+
 def _refuse_other_than_rotations(R: FloatArray) -> None:
-    deviation = np.abs(R @ np.swapaxes(R, -1, -2) - np.eye(3)).max(axis=(-2, -1), initial=0.0)
-    worst = float(np.max(deviation, initial=0.0))
-    # Written so that NaN (a pose that is lost) passes and stays NaN.
-    if worst > _ORTHONORMAL_WITHIN:
+    """NaN (a pose that is lost) passes, and stays NaN in what is made of it."""
+    deviation = np.abs(R @ np.swapaxes(R, -1, -2) - np.eye(3))
+    wrong = deviation > _ORTHONORMAL_WITHIN
+    if np.any(wrong):
         raise ShapeError(
             f"Expected `R` to hold rotations (R R^T = 1 within {_ORTHONORMAL_WITHIN:g}), "
-            f"got a deviation of {worst:.3g}."
+            f"got a deviation of {deviation[wrong].max():.3g}."
         )
-    if np.any(np.linalg.det(R) < 0.0):
+    if np.any(determinant(R) < 0.0):
         raise ShapeError("Expected `R` to hold rotations (det > 0), got a mirroring with det < 0.")
 
 
