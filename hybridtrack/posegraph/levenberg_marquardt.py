@@ -1,0 +1,148 @@
+"""Sparse Levenberg-Marquardt on a pose problem, for any group of `group.py`.
+
+Each iteration solves (J'WJ + lambda diag(J'WJ)) x = -J'Wr for the right perturbations x and retracts T exp(x). The
+damping follows the gain ratio (Nielsen 1999) from a start so small that the first steps are Gauss-Newton steps (for
+pose graphs: Grisetti et al. 2010). Robust losses enter as weights at every iteration.
+"""
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from hybridtrack.errors import OptionError
+from hybridtrack.posegraph.loss import Loss, Quadratic
+from hybridtrack.posegraph.normal_equations import NormalEquations
+from hybridtrack.posegraph.problem import PoseProblem, linearise, moved, residuals
+
+Array = np.ndarray
+
+FIRST_DAMPING = 1e-9
+SMALLEST_DAMPING = 1e-12
+LARGEST_DAMPING = 1e12
+# A step that should lower the cost by less than this share of it and fails to has met the rounding of the cost itself.
+ROUNDING_SHARE = 1e-8
+# Above this damping a small predicted decrease says that the step is short, not that the gradient is.
+GAUSS_NEWTON_DAMPING = 1e-3
+NEGLIGIBLE_CHI_SQUARE = 1e-16
+# A longer turn, or change of log scale, in one step lies outside what a linearisation can promise.
+LONGEST_TURN = 3.0
+
+
+@dataclass(frozen=True)
+class SolveOptions:
+    """How to solve: the loss and the kinds of constraint it applies to, the iteration limit, and when to stop.
+
+    The solver stops when a step is predicted to lower the cost by less than `relative_decrease` of itself, or by a
+    chi-square of 1e-16, which is nothing in the unit of the noise.
+    """
+
+    loss: Loss = field(default_factory=Quadratic)
+    robust_kinds: tuple[str, ...] = ("loop",)
+    max_iterations: int = 100
+    relative_decrease: float = 1e-12
+
+    def __post_init__(self) -> None:
+        if self.max_iterations < 1:
+            raise OptionError(f"max_iterations: expected at least 1, got {self.max_iterations}")
+        if not 0.0 < self.relative_decrease < 1.0:
+            raise OptionError(f"relative_decrease: expected a number in (0, 1), got {self.relative_decrease}")
+
+
+@dataclass(frozen=True, eq=False)
+class Minimum:
+    """End of one minimisation.
+
+    Poses (N, 4, 4), weights (M,), unweighted chi-squares (M,), `status` as in `SolveResult`, and iterations taken.
+    """
+
+    poses: Array
+    weights: Array
+    chi_squares: Array
+    status: str
+    iterations: int
+
+
+@dataclass(frozen=True, eq=False)
+class WeightedCost:
+    """Sum over constraints of `factors` (M,) times the loss where `robust` (M,) says so, else times chi-square."""
+
+    loss: Loss
+    robust: Array
+    factors: Array
+
+    def total(self, chi_squares: Array) -> float:
+        """Cost of unweighted chi-squares (M,)."""
+        return float(np.sum(self.factors * np.where(self.robust, self.loss.cost(chi_squares), chi_squares)))
+
+    def weights(self, chi_squares: Array) -> Array:
+        """Derivative (M,) of the cost by every chi-square."""
+        return self.factors * np.where(self.robust, self.loss.weight(chi_squares), 1.0)
+
+
+class _System:
+    """Normal equations at one set of poses, solved for several dampings."""
+
+    def __init__(self, equations: NormalEquations, problem: PoseProblem, poses: Array, weights: Array) -> None:
+        line = linearise(problem, poses)
+        self._equations = equations
+        self._blocks = equations.hessian_blocks(line, weights)
+        self._gradient = equations.gradient(line, weights)
+        self._diagonal = equations.diagonal(self._blocks)
+
+    def step(self, damping: float) -> tuple[Array | None, float]:
+        """Perturbations (free poses, d) and the decrease of the cost they predict; None where singular or too long."""
+        factors = self._equations.factorised(self._blocks, damping * self._diagonal)
+        step = None if factors is None else -factors.solve(self._gradient)
+        if step is None or not np.isfinite(step).all():
+            return None, np.inf
+        by_pose = self._equations.in_pose_order(step)
+        if np.abs(by_pose[:, 3:]).max(initial=0.0) > LONGEST_TURN:
+            return None, np.inf
+        return by_pose, float(step @ (damping * self._diagonal * step - self._gradient))
+
+
+def _chi_squares(problem: PoseProblem, poses: Array) -> Array:
+    with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
+        return np.sum(residuals(problem, poses) ** 2, axis=1)
+
+
+def _is_converged(predicted: float, cost: float, damping: float, options: SolveOptions) -> bool:
+    return damping <= GAUSS_NEWTON_DAMPING and predicted <= NEGLIGIBLE_CHI_SQUARE + options.relative_decrease * cost
+
+
+def minimise(
+    problem: PoseProblem,
+    start: Array,
+    weighting: WeightedCost,
+    options: SolveOptions,
+    equations: NormalEquations,
+) -> Minimum:
+    """Minimise the weighted cost over the free poses, from `start` (N, 4, 4)."""
+    poses, chi_squares = start, _chi_squares(problem, start)
+    cost = weighting.total(chi_squares)
+    status = "stalled" if np.isfinite(cost) else "diverged"
+    damping, growth, iterations = FIRST_DAMPING, 2.0, 0
+    system: _System | None = None
+    while status == "stalled" and iterations < options.max_iterations and damping < LARGEST_DAMPING:
+        iterations += 1
+        system = system or _System(equations, problem, poses, weighting.weights(chi_squares))
+        step, predicted = system.step(damping)
+        if step is not None:
+            if _is_converged(predicted, cost, damping, options):
+                status = "converged"
+                break
+            trial = moved(problem, poses, step)
+            trial_chi_squares = _chi_squares(problem, trial)
+            trial_cost = weighting.total(trial_chi_squares)
+            if trial_cost < cost:
+                gain = (cost - trial_cost) / predicted
+                poses, chi_squares, cost, system = trial, trial_chi_squares, trial_cost, None
+                damping = max(damping * max(1.0 / 3.0, 1.0 - (2.0 * gain - 1.0) ** 3), SMALLEST_DAMPING)
+                growth = 2.0
+                continue
+            if damping <= GAUSS_NEWTON_DAMPING and predicted <= ROUNDING_SHARE * cost:
+                status = "converged"
+                break
+        damping, growth = damping * growth, growth * 2.0
+    poses = np.where(problem.fixed[:, None, None], poses, problem.group.orthonormal(poses))
+    return Minimum(poses, weighting.weights(chi_squares), chi_squares, status, iterations)
