@@ -1,1 +1,1 @@
-
+"""Pages and figures."""

@@ -1,0 +1,40 @@
+"""The `hybridtrack` command: every subcommand registered, every refusal turned into one sentence and exit code 2."""
+
+import sys
+
+import hybridtrack.threads  # noqa: F401  before anything that starts a pool
+
+# isort: split
+
+import typer
+
+from hybridtrack.cli.ingest_command import ingest_command
+from hybridtrack.cli.inspect_command import inspect_command
+from hybridtrack.errors import HybridtrackError
+
+app = typer.Typer(
+    name="hybridtrack",
+    no_args_is_help=True,
+    add_completion=False,
+    pretty_exceptions_enable=False,
+    context_settings={"help_option_names": ["-h", "--help"]},
+    help=(
+        "Calibrate, track and navigate with hybrid modules: "
+        "event pixels and colour pixels on one die behind one lens.\n\n"
+        "A new module usually goes through: inspect, calibrate, track, odometry. Try 'hybridtrack demo' first."
+    ),
+)
+app.command("inspect")(inspect_command)
+app.command("ingest")(ingest_command)
+
+
+def main() -> None:
+    """Run the command line. Exit code 0: done; 1: done, and a limit or check failed; 2: refused."""
+    try:
+        app()
+    except HybridtrackError as refusal:
+        print(f"hybridtrack: {refusal}", file=sys.stderr)
+        sys.exit(2)
+    except KeyboardInterrupt:
+        print("hybridtrack: stopped; nothing half-written was left", file=sys.stderr)
+        sys.exit(130)
