@@ -24,9 +24,7 @@ def _checked_pair(source: ArrayLike, target: ArrayLike) -> tuple[FloatArray, Flo
     source = with_trailing_shape(source, "source", ("N", 3))
     target = with_trailing_shape(target, "target", ("N", 3))
     if source.ndim != 2 or source.shape != target.shape:
-        raise ShapeError(
-            f"Expected `source` and `target` of one shape (N, 3), got {source.shape} and {target.shape}."
-        )
+        raise ShapeError(f"Expected `source` and `target` of one shape (N, 3), got {source.shape} and {target.shape}.")
     if not (np.all(np.isfinite(source)) and np.all(np.isfinite(target))):
         raise ShapeError("Expected `source` and `target` to be finite, got NaN or infinity.")
     return source, target

@@ -24,9 +24,10 @@ from typing import ClassVar
 import numpy as np
 from numpy.typing import ArrayLike
 
-from hybridtrack.geometry.arrays import FloatArray, with_trailing_shape
+from hybridtrack.geometry.arrays import FloatArray
 from hybridtrack.geometry.lens_arrays import (
     checked_lens,
+    checked_parameters,
     checked_terms,
     grid_over,
     jacobian_rows,
@@ -63,7 +64,7 @@ class FisheyeLens:
 
     def with_parameters(self, parameters: ArrayLike) -> "FisheyeLens":
         """A lens of this model with the values (8,) in the order of `names`."""
-        fx, fy, cx, cy, *terms = with_trailing_shape(parameters, "parameters", (8,)).tolist()
+        fx, fy, cx, cy, *terms = checked_parameters(parameters, 8)
         return FisheyeLens(fx, fy, cx, cy, radial=tuple(terms))
 
     @cached_property

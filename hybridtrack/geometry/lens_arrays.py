@@ -6,7 +6,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import ArrayLike
 
-from hybridtrack.errors import LensDomainError, OptionError
+from hybridtrack.errors import LensDomainError, OptionError, ShapeError
 from hybridtrack.geometry.arrays import FloatArray, with_trailing_shape
 
 Kernel = Callable[..., Any]
@@ -27,6 +27,14 @@ def checked_terms(owner: str, name: str, value: tuple[float, ...], count: int) -
     if len(terms) != count:
         raise OptionError(f"Expected `{name}` of {owner} to have {count} terms, got {len(terms)}.")
     return terms
+
+
+def checked_parameters(parameters: ArrayLike, count: int) -> list[float]:
+    """`parameters` as floats; ShapeError unless of shape (count,)."""
+    array = np.asarray(parameters, dtype=np.float64)
+    if array.shape != (count,):
+        raise ShapeError(f"Expected `parameters` of shape ({count},), got {array.shape}.")
+    return [float(value) for value in array]
 
 
 def project_rows(kernel: Kernel, points: ArrayLike, parameters: FloatArray, limit: float) -> FloatArray:

@@ -8,8 +8,6 @@ an inverse. Rows that have no value are NaN.
 
 import math
 
-import numpy as np
-
 from hybridtrack.compiled import kernel
 
 _EPSILON = 2.220446049250313e-16
@@ -164,7 +162,12 @@ def _undistort(xd, yd, p, limit, tolerance):  # type: ignore[no-untyped-def]
         a, b = 0.0, 0.0
         for k in range(1, 33):
             a, b, residual = _undistort_from(a, b, xd * k / 32.0, yd * k / 32.0, p)
-    if residual <= tolerance and math.hypot(a, b) <= limit * _EDGE:
+    excess = math.hypot(a, b) / limit
+    if excess > 1.0:  # on the rim the slope is nearly zero and rounding moves the point out: does the rim itself fit?
+        a, b = a / excess, b / excess
+        x, y, _, _, _ = distort(a, b, p)
+        residual = math.hypot(xd - x, yd - y)
+    if residual <= tolerance:
         return a, b
     return math.nan, math.nan
 
@@ -182,7 +185,7 @@ def perspective_unproject(uv, p, limit, directions):  # type: ignore[no-untyped-
             scale = invert_radial(rho, limit, p[4], p[5], p[6], 0.0) / rho if rho > 0.0 else 1.0
             a, b = scale * xd, scale * yd
         else:
-            tolerance = max(1e-11 / max(p[0], p[1]), 8.0 * _EPSILON * rho)
+            tolerance = max(4e-11 / max(p[0], p[1]), 8.0 * _EPSILON * rho)  # first term: 4e-11 px
             a, b = _undistort(xd, yd, p, limit, tolerance)
         length = math.sqrt(1.0 + a * a + b * b)
         directions[i, 0], directions[i, 1], directions[i, 2] = a / length, b / length, 1.0 / length
@@ -245,7 +248,8 @@ def fisheye_unproject(uv, p, limit, directions):  # type: ignore[no-untyped-def]
         xd, yd = (uv[i, 0] - p[2]) / p[0], (uv[i, 1] - p[3]) / p[1]
         rho = math.hypot(xd, yd)
         angle = invert_radial(rho, limit, p[4], p[5], p[6], p[7])
+        if math.isnan(angle):
+            directions[i] = math.nan
+            continue
         scale = math.sin(angle) / rho if rho > 0.0 else 1.0
         directions[i, 0], directions[i, 1], directions[i, 2] = scale * xd, scale * yd, math.cos(angle)
-        if math.isnan(angle):
-            directions[i, 2] = np.nan

@@ -24,14 +24,16 @@ _REAL_WITHIN = 1e-3  # imaginary over absolute part; only a candidate, the sign 
 
 
 def _positive_roots(polynomial: Polynomial) -> list[float]:
-    """Positive roots, real or nearly so, of a polynomial whose constant term is not zero."""
+    """Positive roots of a polynomial, real or nearly so; those at zero are left out."""
     coefficients = np.trim_zeros(polynomial.coef, "b")
+    significant = np.abs(coefficients) > 1e-100 * np.abs(coefficients).max(initial=0.0)
+    coefficients = coefficients[np.argmax(significant) :]
     if len(coefficients) < 2:
         return []
-    # Reversed, the polynomial is monic up to its constant term: a tiny leading coefficient does no harm.
+    # Reversed, the polynomial starts with its constant term, which is not small: dividing by it does no harm.
     reciprocals = Polynomial(coefficients[::-1] / coefficients[0]).roots()
     near = np.abs(reciprocals.imag) <= _REAL_WITHIN * np.abs(reciprocals)
-    return [1.0 / float(s) for s in reciprocals.real[near] if s > 1e-9 * np.abs(reciprocals).max()]
+    return [1.0 / float(s) for s in reciprocals.real[near] if s > 1e-14 * np.abs(reciprocals).max()]
 
 
 def _first_negative(margin: Callable[[float], float], candidates: Sequence[float]) -> float:
@@ -69,14 +71,14 @@ def perspective_limit(radial: Sequence[float], tangential: tuple[float, float]) 
     gain = 1.0 + sum((k * r ** (2 * i + 2) for i, k in enumerate(radial)), Polynomial([0.0]))
     slope = gain + r * gain.deriv()
     q = size * r
-    interior = slope * gain - 4.0 * q**2 - (slope + 3.0 * gain) ** 2 / 16.0
+    # The inner minimum is (f' - L)(9 L - f') / 16 - 4 q^2, and f' - L has the factor r^2, as q^2 has.
+    bend = sum(((2 * i + 2) * k * r ** (2 * i) for i, k in enumerate(radial)), Polynomial([0.0]))
+    inner_over_square = bend * (9.0 * gain - slope) / 16.0 - 4.0 * size**2
 
     def margin(radius: float) -> float:
         f, g, w = float(slope(radius)), float(gain(radius)), size * radius
         axis = min(f - 6.0 * w, g - 2.0 * w)
-        return min(axis, float(interior(radius))) if 16.0 * w > f + 3.0 * g else axis
+        return min(axis, float(inner_over_square(radius))) if 16.0 * w > f + 3.0 * g else axis
 
-    # `interior` is zero at r = 0, with a double root; its other roots are those of the quotient by r^2.
-    reduced = Polynomial(interior.coef[2:])
-    polynomials = (slope - 6.0 * q, gain - 2.0 * q, reduced)
+    polynomials = (slope - 6.0 * q, gain - 2.0 * q, inner_over_square)
     return _first_negative(margin, [root for each in polynomials for root in _positive_roots(each)])

@@ -21,9 +21,10 @@ from typing import ClassVar
 import numpy as np
 from numpy.typing import ArrayLike
 
-from hybridtrack.geometry.arrays import FloatArray, with_trailing_shape
+from hybridtrack.geometry.arrays import FloatArray
 from hybridtrack.geometry.lens_arrays import (
     checked_lens,
+    checked_parameters,
     checked_terms,
     grid_over,
     jacobian_rows,
@@ -70,7 +71,7 @@ class PerspectiveLens:
 
     def with_parameters(self, parameters: ArrayLike) -> "PerspectiveLens":
         """A lens of this model with the values (9,) in the order of `names`."""
-        fx, fy, cx, cy, *terms = with_trailing_shape(parameters, "parameters", (9,)).tolist()
+        fx, fy, cx, cy, *terms = checked_parameters(parameters, 9)
         return PerspectiveLens(fx, fy, cx, cy, radial=tuple(terms[:3]), tangential=tuple(terms[3:]))
 
     @cached_property

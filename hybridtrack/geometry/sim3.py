@@ -86,9 +86,7 @@ def decompose(S: ArrayLike) -> tuple[FloatArray, FloatArray, FloatArray]:
     S = with_trailing_shape(S, "S", (4, 4))
     volume = so3.determinant(S[..., :3, :3])
     if np.any(volume <= 0.0):
-        raise ShapeError(
-            f"Expected `S` to hold similarities (det of the block > 0), got det = {np.nanmin(volume):g}."
-        )
+        raise ShapeError(f"Expected `S` to hold similarities (det of the block > 0), got det = {np.nanmin(volume):g}.")
     s = np.cbrt(volume)
     return s, S[..., :3, :3] / s[..., None, None], S[..., :3, 3].copy()
 

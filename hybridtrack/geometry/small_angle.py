@@ -57,9 +57,7 @@ def cosine_remainder_over_fourth(angle: FloatArray) -> FloatArray:
 
 def mixed_remainder_over_fifth(angle: FloatArray) -> FloatArray:
     """(2 a - 3 sin a + a cos a) / (2 a^5)."""
-    return _series_or_closed(
-        angle, _MIXED_FIFTH, lambda a: (2.0 * a - 3.0 * np.sin(a) + a * np.cos(a)) / (2.0 * a**5)
-    )
+    return _series_or_closed(angle, _MIXED_FIFTH, lambda a: (2.0 * a - 3.0 * np.sin(a) + a * np.cos(a)) / (2.0 * a**5))
 
 
 def cotangent_remainder_over_square(angle: FloatArray) -> FloatArray:
