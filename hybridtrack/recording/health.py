@@ -172,7 +172,8 @@ def _event_findings(events: EventHealth) -> list[str]:
             f"The module reports {_plural(len(events.lost), 'interval')} of lost events, {lost_ms:.1f} ms in all."
         )
     if len(events.hot):
-        findings.append(f"{_plural(len(events.hot), 'event pixel')} fire far more than their neighbours.")
+        verb = "fires" if len(events.hot) == 1 else "fire"
+        findings.append(f"{_plural(len(events.hot), 'event pixel')} {verb} far more than the pixels around.")
     for line in events.spectrum.lines:
         if line.harmonic == 1:
             kind = "lamp flicker on mains" if line.is_mains_flicker else "periodic light"

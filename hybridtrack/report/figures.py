@@ -9,7 +9,6 @@ import re
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
-
 from typing import Any
 
 import matplotlib

@@ -10,12 +10,12 @@ from hybridtrack.files import write_text
 from hybridtrack.report.figures import Figure
 
 SYNTHETIC_NOTICE = (
-    "Figures on this page come from synthesis. No recording of a real hybrid module was available to this project: "
-    "the gap between its pixel models and silicon is untested."
+    "Figures on this page come from synthesis. No recording of a real hybrid module was available to this "
+    "project: the gap between its pixel models and silicon is untested."
 )
 POSE_CAUTION = (
-    "A robot that moves on estimated poses needs an independent stop; the health column is not a safety function. Local "
-    "codes and licensed practice come first."
+    "A robot that moves on estimated poses needs an independent stop; the health column is not a safety function. "
+    "Local codes and licensed practice come first."
 )
 BLINK_CAUTION = (
     "A blinking target can trigger photosensitive seizures, and a strobed lamp can be brighter than it looks "
