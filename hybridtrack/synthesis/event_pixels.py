@@ -104,8 +104,7 @@ class EventPixels:
         self._constants[kernels.RESETS] = float(physics.reference == "resets")
         self._state = np.zeros((len(self._alive), kernels.STATE_SIZE))
         self._random = random.integers(0, 2**63, len(self._alive)).astype(np.uint64)
-        self._started = False
-        self._no_delay = np.zeros(len(self._alive))
+        self._last_ns: float | None = None
         self._capacity = 4 * CHUNK_PIXELS
         # A key holds pixel and polarity in its low bits, the stamp above them: it sorts by time.
         self._shift = np.uint64(max(1, int(len(self._alive) - 1).bit_length()) + 1)
@@ -117,15 +116,14 @@ class EventPixels:
 
     def restart(self) -> None:
         """Let the next call of `expose` settle every pixel at its first sample, as after a gap in the recording."""
-        self._started = False
+        self._last_ns = None
 
-    def expose(self, t_ns: Array, light: Array, delay_ns: Array | None = None) -> Events:
+    def expose(self, t_ns: Array, light: Array) -> Events:
         """Carry every pixel on through samples of light, linear between them and on from the last call's last sample.
 
         `t_ns` (T,) rising, in ns; `light` (T, N) or (T, rows, columns) in DN-equivalents, N = rows * columns, best
-        float32. The first call settles the pixels at its first sample. `delay_ns` (N,) shifts the samples of a pixel
-        in time; then events of one call may be later than the first ones of the next, which the readout sorts out.
-        Returns raw events in order of time, before any readout. Raises ShapeError.
+        float32. The first call settles the pixels at its first sample. Returns raw events in order of time, before any
+        readout. Raises ShapeError.
         """
         t = np.ascontiguousarray(t_ns, dtype=float)
         light = np.asarray(light)
@@ -134,27 +132,28 @@ class EventPixels:
         if len(t) == 0:
             return Events.empty()
         light = np.ascontiguousarray(light.reshape(len(t), self.count), dtype=np.float32)
-        delay = self._no_delay if delay_ns is None else np.ascontiguousarray(delay_ns, dtype=float).ravel()
-        first = t[0] if not self._started else float(np.min(self._state[self._alive, kernels.TIME], initial=t[0]))
-        if np.any(np.diff(t) < 0) or (self._started and delay_ns is None and t[0] < first):
+        first = t[0] if self._last_ns is None else self._last_ns
+        if t[0] < first or np.any(np.diff(t) < 0):
             raise ShapeError("Expected times that do not run backwards, got a step back.")
-        base = int(np.floor(min(first, t[0] + float(np.min(delay, initial=0.0))))) - 1
-        return self._sorted_events(self._run(t, light, delay, base), base)
+        base = int(np.floor(first)) - 1
+        keys = self._run(t, light, base)
+        self._last_ns = float(t[-1])
+        return self._sorted_events(keys, base)
 
-    def _run(self, t: Array, light: Array, delay: Array, base: int) -> Array:
-        """Run the kernel, again with a larger buffer where the first was too small; return unsorted keys."""
+    def _run(self, t: Array, light: Array, base: int) -> Array:
+        """Run the kernel, again for chunks whose buffer was too small; return unsorted keys."""
         chunks = -(-self.count // CHUNK_PIXELS)
-        while True:
+        todo, counts = np.ones(chunks, np.bool_), np.zeros(chunks, np.int64)
+        parts = []
+        while np.any(todo):
             keys = np.empty((chunks, self._capacity), np.uint64)
-            counts = np.zeros(chunks, np.int64)
-            state, random = np.empty_like(self._state), np.empty_like(self._random)
-            expose_pixels(t, light, delay, not self._started, self._state, self._random, state, random, self._pixel,
-                          self._alive, self._constants, keys, counts, base, self._shift)
-            if counts.max() <= self._capacity:
-                break
-            self._capacity = int(1.25 * counts.max()) + 64
-        self._state, self._random, self._started = state, random, True
-        return np.concatenate([keys[chunk, : counts[chunk]] for chunk in range(chunks)])
+            expose_pixels(t, light, self._last_ns is None, self._state, self._random, self._pixel, self._alive,
+                          self._constants, CHUNK_PIXELS, todo, keys, counts, base, self._shift)
+            fits = todo & (counts <= self._capacity)
+            parts += [keys[chunk, : counts[chunk]] for chunk in np.flatnonzero(fits)]
+            todo &= ~fits
+            self._capacity = max(self._capacity, int(1.25 * counts.max()))
+        return np.concatenate(parts)
 
     def _sorted_events(self, keys: Array, base: int) -> Events:
         keys.sort()

@@ -233,38 +233,41 @@ def settle(n, t, light, state, random, pixel, constants):  # type: ignore[no-unt
     state[n, NEXT_BACKGROUND] = t + exponential(random, n, pixel[n, 2])
 
 
-@kernel(parallel=True)
-def expose_pixels(t, light, delay, start, state, random, state_out, random_out, pixel, alive, constants, keys, counts,
-                  base, shift):  # type: ignore[no-untyped-def]
-    """Run all pixels through samples `t` (T,) of `light` (T, N); chunk c of pixels writes its keys to `keys[c]`.
+@kernel
+def expose_pixel(n, t, light, start, state, random, pixel, constants, keys, count, base, shift):  # type: ignore[no-untyped-def]
+    """Run pixel `n` through samples `t` (T,) of `light` (T, N); returns the event count."""
+    for k in range(t.shape[0]):
+        now = max(light[k, n] + constants[DARK_LIGHT], LIGHT_FLOOR)
+        if start and k == 0:
+            settle(n, t[k], now, state, random, pixel, constants)
+        elif (now == state[n, LIGHT] and pixel[n, 3] == 0.0 and state[n, NEXT_BACKGROUND] > t[k]
+                and state[n, READY] == -np.inf and abs(state[n, LEVEL] - math.log(now)) < SETTLED):
+            state[n, TIME] = t[k]  # at rest: nothing to do
+        else:
+            count = step(n, t[k], now, state, random, pixel, constants, keys, count, base, shift)
+    return count
 
-    State goes in by `state`, `random` and comes out by `state_out`, `random_out`, so that a run whose buffer was too
-    small can be repeated. `start`: settle at the first sample.
+
+@kernel(parallel=True)
+def expose_pixels(t, light, start, state, random, pixel, alive, constants, size, todo, keys, counts, base, shift):
+    # type: ignore[no-untyped-def]
+    """Run the chunks `todo` (C,) of `size` pixels each through the samples; chunk c writes its keys to `keys[c]`.
+
+    A chunk whose buffer is too small is put back where it was; its entry of `counts` says what it needs.
+    `start`: settle at the first sample.
     """
-    chunks = keys.shape[0]
-    pixels = state.shape[0]
-    size = (pixels + chunks - 1) // chunks
-    for chunk in numba.prange(chunks):
-        count = 0
-        for n in range(chunk * size, min((chunk + 1) * size, pixels)):
-            for column in range(STATE_SIZE):
-                state_out[n, column] = state[n, column]
-            random_out[n] = random[n]
-            if not alive[n]:
-                continue
-            for k in range(t.shape[0]):
-                now = max(light[k, n] + constants[DARK_LIGHT], LIGHT_FLOOR)
-                t_now = t[k] + delay[n]
-                if start and k == 0:
-                    settle(n, t_now, now, state_out, random_out, pixel, constants)
-                    continue
-                if (now == state_out[n, LIGHT] and pixel[n, 3] == 0.0 and state_out[n, NEXT_BACKGROUND] > t_now
-                        and state_out[n, READY] == -np.inf
-                        and abs(state_out[n, LEVEL] - math.log(now)) < SETTLED):
-                    state_out[n, TIME] = t_now
-                    continue
-                count = step(n, t_now, now, state_out, random_out, pixel, constants, keys[chunk], count, base, shift)
-        counts[chunk] = count
+    for chunk in numba.prange(keys.shape[0]):
+        if todo[chunk]:
+            first, last = chunk * size, min((chunk + 1) * size, state.shape[0])
+            state_before, random_before = state[first:last].copy(), random[first:last].copy()
+            count = 0
+            for n in range(first, last):
+                if alive[n]:
+                    count = expose_pixel(n, t, light, start, state, random, pixel, constants, keys[chunk], count, base,
+                                         shift)
+            counts[chunk] = count
+            if count > keys.shape[1]:
+                state[first:last], random[first:last] = state_before, random_before
 
 
 @kernel
