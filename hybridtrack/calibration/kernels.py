@@ -1,0 +1,90 @@
+"""Loops over events. Each takes plain arrays, adds to its output arrays and is linear in the number of events.
+
+Times are int64 ns. A *blink phase* is the time since `epoch_ns` in cycles; set A turns bright at whole numbers.
+"""
+
+import numpy as np
+
+from hybridtrack.compiled import kernel
+
+Array = np.ndarray
+
+# Planes of a fold: what an event is, and in which part of the cycle it falls.
+ON_BRIGHT, OFF_BRIGHT, ON_DARK, OFF_DARK = range(4)
+
+
+@kernel
+def tile_histogram(t: Array, x: Array, y: Array, on: Array, t0_ns: int, bin_ns: int, tile: int, out: Array) -> int:
+    """Add signed polarities to `out` (bins, tile rows, tile columns) from `t0_ns` on.
+
+    Returns how many events were used: it stops at the first stamp past the last bin.
+    """
+    end = t0_ns + bin_ns * out.shape[0]
+    for k in range(len(t)):
+        if t[k] >= end:
+            return k
+        if t[k] >= t0_ns and y[k] // tile < out.shape[1] and x[k] // tile < out.shape[2]:
+            out[(t[k] - t0_ns) // bin_ns, y[k] // tile, x[k] // tile] += 2.0 * on[k] - 1.0
+    return len(t)
+
+
+@kernel
+def fold_events(t: Array, x: Array, y: Array, on: Array, epoch_ns: int, epoch_phase: float, hz: float,
+                duty: float, out: Array) -> None:
+    """Count events by pixel, polarity and half of the cycle into `out` (4, rows, columns)."""
+    rate = hz * 1e-9
+    for k in range(len(t)):
+        phase = (t[k] - epoch_ns) * rate + epoch_phase
+        dark = phase - np.floor(phase) >= duty
+        out[2 * dark + (1 - on[k]), y[k], x[k]] += 1
+
+
+@kernel
+def fold_phase(t: Array, x: Array, y: Array, on: Array, epoch_ns: int, epoch_phase: float, hz: float,
+               selected: Array, out: Array) -> None:
+    """Histogram over the blink phase, `out` (2, bins): ON and OFF events of the `selected` (rows, columns) pixels."""
+    rate = hz * 1e-9
+    bins = out.shape[1]
+    for k in range(len(t)):
+        if selected[y[k], x[k]]:
+            phase = (t[k] - epoch_ns) * rate + epoch_phase
+            out[1 - on[k], int((phase - np.floor(phase)) * bins) % bins] += 1
+
+
+@kernel
+def flip_histogram(t: Array, x: Array, y: Array, on: Array, polarity: int, flips_ns: Array, before_ns: float,
+                   bin_ns: float, selected: Array, out: Array) -> None:
+    """Histogram of events around each flip, `out` (flips, bins), first bin `before_ns` before the flip.
+
+    `flips_ns` (flips,) float, rising, relative to the same origin as `t`; windows of neighbours must not overlap.
+    Counts events of one `polarity` at the `selected` (rows, columns) pixels.
+    """
+    flip = 0
+    width = bin_ns * out.shape[1]
+    for k in range(len(t)):
+        if on[k] != polarity or not selected[y[k], x[k]]:
+            continue
+        while flip < len(flips_ns) and t[k] >= flips_ns[flip] - before_ns + width:
+            flip += 1
+        if flip == len(flips_ns):
+            return
+        since = t[k] - flips_ns[flip] + before_ns
+        if since >= 0.0:
+            out[flip, int(since / bin_ns)] += 1
+
+
+@kernel
+def count_events(x: Array, y: Array, out: Array) -> None:
+    """Count events by pixel into `out` (rows, columns)."""
+    for k in range(len(x)):
+        out[y[k], x[k]] += 1
+
+
+@kernel
+def shortest_intervals(t: Array, x: Array, y: Array, last_ns: Array, shortest_ns: Array) -> None:
+    """Carry the last stamp and the shortest interval between events of each pixel, both (rows, columns) int64."""
+    for k in range(len(t)):
+        interval = t[k] - last_ns[y[k], x[k]]
+        if interval < shortest_ns[y[k], x[k]]:
+            shortest_ns[y[k], x[k]] = interval
+        last_ns[y[k], x[k]] = t[k]

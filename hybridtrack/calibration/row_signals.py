@@ -1,0 +1,94 @@
+"""How bright each row's share of the board is, frame by frame: what the clocks are fitted to.
+
+Under a rolling shutter the light of a pixel in row r of frame n is D + f[n, r] K, where f is the part of the row's
+exposure in which set A is bright. Summed over the row with weights w, all pixels give one number s[n, r] = a + b f[n, r]
+with a and b of the row alone. The first weights are the leading right singular vector of the row's pixels over frames, which
+needs no knowledge of the clocks or the board; later ones are K / sigma^2 from the demodulated pictures.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+Array = np.ndarray
+
+LEAST_FRAMES = 4
+
+
+@dataclass(frozen=True)
+class RowSignals:
+    """Signals of the rows of all views, one line a row.
+
+    `signal` (R, N) with `weight` (R, N): one over its deviation, zero where there is no frame; `stamp_ns`, `exposure_ns`
+    (R, N) of the frames, stamps after `origin_ns`; `order` (R,): rows read before; `row`, `view` (R,): where it comes from.
+    `signed`: whether the sign of b is known to be positive.
+    """
+
+    origin_ns: int
+    signal: Array
+    weight: Array
+    stamp_ns: Array
+    exposure_ns: Array
+    order: Array
+    row: Array
+    view: Array
+    signed: bool
+
+    def __getitem__(self, rows: Array) -> "RowSignals":
+        """The lines selected by a mask or index array."""
+        columns = (getattr(self, name)[rows] for name in
+                   ("signal", "weight", "stamp_ns", "exposure_ns", "order", "row", "view"))
+        return RowSignals(self.origin_ns, *columns, self.signed)
+
+
+def singular_row_signals(light: Array, signed: bool) -> tuple[Array, Array]:
+    """Signals (H, N) of every row of a view's frames (N, H, W), and their deviation (H,), inf where a row shows nothing.
+
+    For `signed` views (all pixels brighten together) the sign makes the row's sum of weights positive.
+    """
+    rows = np.nan_to_num(np.moveaxis(light, 0, 1).astype(np.float64))
+    rows[:, :, :] *= np.all(np.isfinite(light), axis=0)[:, None, :]
+    centred = rows - rows.mean(axis=1, keepdims=True)
+    values, vectors = np.linalg.eigh(centred @ np.swapaxes(centred, 1, 2))
+    leading, second = values[:, -1], np.maximum(values[:, -2], 1e-12)
+    weights = np.einsum("hnw,hn->hw", centred, vectors[:, :, -1]) / np.sqrt(np.maximum(leading, 1e-12))[:, None]
+    if signed:
+        weights *= np.where(weights.sum(axis=1) < 0, -1.0, 1.0)[:, None]
+    signal = np.einsum("hnw,hw->hn", rows, weights)
+    # Noise of a unit-weight sum: what the trailing singular values leave, and a floor for exact data.
+    noise = np.sqrt(values[:, :-1].sum(axis=1) / max(rows.shape[1] - 2, 1) / rows.shape[2])
+    shows = (leading > 8.0 * second) & (leading > 0)
+    return signal, np.where(shows, np.maximum(noise, 1e-4 * np.sqrt(leading / rows.shape[1])), np.inf)
+
+
+def weighted_row_signals(light: Array, swing: Array, sigma: Array) -> tuple[Array, Array]:
+    """Signals (H, N) and deviations (H,) with weights `swing` / `sigma`^2 (H, W): the signal is that of one pixel."""
+    usable = np.isfinite(swing) & np.isfinite(sigma) & np.all(np.isfinite(light), axis=0)
+    safe = np.where(usable & (sigma > 0), sigma, np.inf)
+    weights = np.nan_to_num(np.where(usable, swing, 0.0)) / safe**2
+    # Pixels that don't blink carry noise only.
+    weights[np.abs(np.nan_to_num(swing)) < 4.0 * safe] = 0.0
+    total = np.abs(weights).sum(axis=1)
+    signal = np.einsum("nhw,hw->hn", np.nan_to_num(light).astype(np.float64), weights)
+    variance = np.sum(np.where(weights != 0, weights * safe, 0.0) ** 2, axis=1)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return signal / np.maximum(total, 1e-300)[:, None], np.where(total > 0, np.sqrt(variance) / total, np.inf)
+
+
+def join_row_signals(parts: list[tuple[Array, Array, Array, Array, int]], order: Array, origin_ns: int,
+                     signed: bool) -> RowSignals:
+    """Join the views' (signal (H, N), deviation (H,), stamps (N,), exposures (N,), view number); `order` (H,) of rows."""
+    longest = max(signal.shape[1] for signal, *_ in parts)
+    columns: dict[str, list[Array]] = {name: [] for name in ("signal", "weight", "stamp", "exposure", "order", "row", "view")}
+    for signal, deviation, stamps, exposures, view in parts:
+        rows = np.flatnonzero(np.isfinite(deviation))
+        pad = ((0, 0), (0, longest - signal.shape[1]))
+        times = [np.broadcast_to(np.asarray(a, float), (len(rows), len(stamps))) for a in (stamps - origin_ns, exposures)]
+        columns["signal"].append(np.pad(signal[rows], pad))
+        columns["weight"].append(np.pad(np.repeat(1.0 / deviation[rows, None], len(stamps), axis=1), pad))
+        columns["stamp"].append(np.pad(times[0], pad))
+        columns["exposure"].append(np.pad(times[1], pad, constant_values=1.0))
+        columns["order"].append(order[rows])
+        columns["row"].append(rows)
+        columns["view"].append(np.full(len(rows), view))
+    return RowSignals(origin_ns, *(np.concatenate(column) for column in columns.values()), signed)
