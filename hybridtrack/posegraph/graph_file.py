@@ -10,7 +10,7 @@ from pathlib import Path
 from typing import Any, Literal
 
 import numpy as np
-from pydantic import BaseModel, ConfigDict, Field
+from pydantic import BaseModel, ConfigDict, Field, field_validator
 
 from hybridtrack.errors import DegenerateDataError, FileFormatError, OptionError, ShapeError
 from hybridtrack.files import read_document, write_text
@@ -46,6 +46,13 @@ class _ConstraintRecord(_Record):
     covariance: list[list[float]]
     chi_square: float | None = Field(default=None, ge=0)
     verdict: Literal["kept", "down-weighted", "rejected", "untested"] = "untested"
+
+    @field_validator("covariance")
+    @classmethod
+    def _square(cls, rows: list[list[float]]) -> list[list[float]]:
+        if any(len(row) != len(rows) for row in rows):
+            raise ValueError("a covariance must be square")
+        return rows
 
 
 class _GraphDocument(_Record):
@@ -102,7 +109,7 @@ def load_graph(path: Path | str) -> PoseGraph:
     document = read_document(path, _GraphDocument, LAYOUT)
     try:
         return _graph_of(document)
-    except (OptionError, ShapeError, DegenerateDataError, ValueError) as error:
+    except (OptionError, ShapeError, DegenerateDataError) as error:
         raise FileFormatError(f"{path}: {error}") from None
 
 

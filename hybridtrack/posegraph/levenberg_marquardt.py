@@ -121,6 +121,8 @@ def minimise(
     poses, chi_squares = start, _chi_squares(problem, start)
     cost = weighting.total(chi_squares)
     status = "stalled" if np.isfinite(cost) else "diverged"
+    if problem.fixed.all() and status == "stalled":
+        status = "converged"
     damping, growth, iterations = FIRST_DAMPING, 2.0, 0
     system: _System | None = None
     while status == "stalled" and iterations < options.max_iterations and damping < LARGEST_DAMPING:

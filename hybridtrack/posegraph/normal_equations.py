@@ -88,7 +88,7 @@ class NormalEquations:
                 across.swapaxes(1, 2),
             ]
         )[self._wanted]
-        return (self._sum @ products.reshape(len(products), -1)).reshape(-1, self.dimension, self.dimension)
+        return (self._sum @ products.reshape(len(products), self.dimension**2)).reshape(-1, self.dimension, self.dimension)
 
     def diagonal(self, blocks: Array) -> Array:
         """Diagonal (count * d,) of J'WJ."""

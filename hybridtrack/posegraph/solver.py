@@ -52,7 +52,8 @@ def chi_squares_of(graph: PoseGraph, constraints: Iterable[Constraint], world_fr
     world_from_b = np.array([world_from[c.to_id] for c in chosen]).reshape(-1, 4, 4)
     measured = np.array([c.from_from_to for c in chosen]).reshape(-1, 4, 4)
     raw = group.log(group.inverse(measured) @ group.inverse(world_from_a) @ world_from_b)
-    return np.sum((whitening_of(chosen, group.dimension) @ raw[..., None])[..., 0] ** 2, axis=1)
+    with np.errstate(over="ignore", invalid="ignore"):
+        return np.sum((whitening_of(chosen, group.dimension) @ raw[..., None])[..., 0] ** 2, axis=1)
 
 
 def _verdict(weight: float, untestable: bool) -> str:
@@ -83,7 +84,7 @@ def judged(graph: PoseGraph, problem: PoseProblem, minimum: Minimum) -> SolveRes
         else:
             verdict = "rejected"
         comparable = component[constraint.from_id] == component[constraint.to_id]
-        chi_square = float(values[index]) if comparable else None
+        chi_square = float(values[index]) if comparable and np.isfinite(values[index]) else None
         constraints.append(replace(constraint, chi_square=chi_square, verdict=verdict))
     return SolveResult(
         graph=graph.with_solution(poses, constraints),
