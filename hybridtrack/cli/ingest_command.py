@@ -7,9 +7,6 @@ import typer
 
 from hybridtrack.cli.console import console, report_written, shown_progress
 from hybridtrack.errors import OptionError
-from hybridtrack.module import load_module
-from hybridtrack.recording.event_tables import EventTableOptions
-from hybridtrack.recording.ingest import IngestCounts, IngestOptions, IngestSources, ingest
 
 SENSOR_PANEL = "Frames and sensors"
 EVENT_PANEL = "Events"
@@ -86,6 +83,10 @@ def ingest_command(
         simulate_video(events_from_video, out, cluster, seed)
         report_written(out)
         return
+    from hybridtrack.module import load_module
+    from hybridtrack.recording.event_tables import EventTableOptions
+    from hybridtrack.recording.ingest import IngestOptions, IngestSources, ingest
+
     table = EventTableOptions(
         _column_names(columns), time_unit, polarity, time_origin_ns, pixel_origin, delimiter.replace("\\t", "\t")
     )
@@ -93,9 +94,7 @@ def ingest_command(
     options = IngestOptions(table, stamp, exposure_ns, grey, round(reorder_ms * 1e6))
     sources = IngestSources(events, frames, frame_stamps, imu, triggers)
     with shown_progress() as progress:
-        counts: IngestCounts = ingest(
-            sources, out, load_module(module) if module is not None else None, options, progress
-        )
+        counts = ingest(sources, out, load_module(module) if module is not None else None, options, progress)
     console.print(
         f"{counts.events:,} events, {counts.frames} frames, {counts.imu} IMU samples, {counts.triggers} edges"
     )

@@ -6,9 +6,6 @@ from typing import Annotated
 import typer
 
 from hybridtrack.cli.console import print_findings, print_table, report_written, shown_progress
-from hybridtrack.module import load_module
-from hybridtrack.recording import Recording
-from hybridtrack.recording.health import examine
 
 
 def inspect_command(
@@ -23,12 +20,14 @@ def inspect_command(
     Findings are plain sentences: stamps out of order, pixels off the grid, dropped frames, saturation, a blink that is
     locked to the frame rate. Example: hybridtrack inspect bench.h5 --out bench-look
     """
-    with Recording.open(recording) as opened, shown_progress() as progress:
-        report = examine(opened, load_module(module) if module is not None else None, progress)
-    # The drawing library takes a second to load: only where it is asked for.
+    from hybridtrack.module import load_module
+    from hybridtrack.recording import Recording
+    from hybridtrack.recording.health import examine
     from hybridtrack.report.health_page import health_page, health_table
     from hybridtrack.report.page import write_page
 
+    with Recording.open(recording) as opened, shown_progress() as progress:
+        report = examine(opened, load_module(module) if module is not None else None, progress)
     print_table(health_table(report), str(recording))
     print_findings(report.findings)
     if out is not None:

@@ -1,4 +1,7 @@
-"""The `hybridtrack` command: every subcommand registered, every refusal turned into one sentence and exit code 2."""
+"""The `hybridtrack` command: every subcommand registered, every refusal turned into one sentence and exit code 2.
+
+Commands import the rooms when they run, so that help answers at once.
+"""
 
 import sys
 

@@ -8,13 +8,14 @@ import io
 import re
 from collections.abc import Iterator
 from contextlib import contextmanager
-from dataclasses import dataclass
 from typing import Any
 
 import matplotlib
 from cycler import cycler
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure as Canvas
+
+from hybridtrack.report.page import Figure
 
 INK, RULE, PAPER = "#010203", "#040506", "#070809"
 SERIES = ("#0a0b01", "#0a0b02", "#0a0b03", "#0a0b04", "#0a0b05")
@@ -46,15 +47,6 @@ _STYLE: Any = {
     "image.cmap": "gray",
     "image.interpolation": "nearest",
 }
-
-
-@dataclass(frozen=True)
-class Figure:
-    """One drawn figure: inline `svg`, a `caption` that says what to see in it, and whether it spans the page."""
-
-    svg: str
-    caption: str
-    wide: bool = False
 
 
 def _to_svg(canvas: Canvas, name: str) -> str:

@@ -3,11 +3,8 @@
 from dataclasses import dataclass, field
 from pathlib import Path
 
-import jinja2
-
 from hybridtrack import __version__
 from hybridtrack.files import write_text
-from hybridtrack.report.figures import Figure
 
 SYNTHETIC_NOTICE = (
     "Figures on this page come from synthesis. No recording of a real hybrid module was available to this "
@@ -21,6 +18,15 @@ BLINK_CAUTION = (
     "A blinking target can trigger photosensitive seizures, and a strobed lamp can be brighter than it looks "
     "(photobiological safety: IEC 62471). Local codes and licensed practice come first."
 )
+
+
+@dataclass(frozen=True)
+class Figure:
+    """One drawn figure: inline `svg`, a `caption` that says what to see in it, and whether it spans the page."""
+
+    svg: str
+    caption: str
+    wide: bool = False
 
 
 @dataclass(frozen=True)
@@ -59,6 +65,8 @@ class Page:
 
 def render(page: Page) -> str:
     """The page as one HTML text."""
+    import jinja2  # here, for commands that only print tables load this module too
+
     environment = jinja2.Environment(
         loader=jinja2.PackageLoader("hybridtrack", "report"),
         autoescape=True,
