@@ -24,7 +24,7 @@ _REAL_WITHIN = 1e-3  # imaginary over absolute part; only a candidate, the sign 
 
 
 def _positive_roots(polynomial: Polynomial) -> list[float]:
-    """Positive roots of a polynomial, real or nearly so; those at zero are left out."""
+    """Positive roots of a polynomial, real or nearly so; those at zero and past 1e40 are left out."""
     coefficients = np.trim_zeros(polynomial.coef, "b")
     significant = np.abs(coefficients) > 1e-100 * np.abs(coefficients).max(initial=0.0)
     coefficients = coefficients[np.argmax(significant) :]
@@ -33,7 +33,8 @@ def _positive_roots(polynomial: Polynomial) -> list[float]:
     # Reversed, the polynomial starts with its constant term, which is not small: dividing by it does no harm.
     reciprocals = Polynomial(coefficients[::-1] / coefficients[0]).roots()
     near = np.abs(reciprocals.imag) <= _REAL_WITHIN * np.abs(reciprocals)
-    return [1.0 / float(s) for s in reciprocals.real[near] if s > 1e-14 * np.abs(reciprocals).max()]
+    least = max(1e-14 * np.abs(reciprocals).max(), 1e-40)
+    return [1.0 / float(s) for s in reciprocals.real[near] if s > least]
 
 
 def _first_negative(margin: Callable[[float], float], candidates: Sequence[float]) -> float:

@@ -40,7 +40,8 @@ def _least_eigenvalue(radial: list[float], tangential: tuple[float, float], r: f
         ([0.5, 0.1, 0.0], np.inf),
         ([-5.0 / 12.0, 1.0 / 20.0], 1.0),  # slope (1 - r^2)(1 - r^2 / 4)
         ([-2.0 / 3.0, 1.0 / 5.0], np.inf),  # slope (1 - r^2)^2 touches zero and rises again
-        ([0.0, 0.0, -1e-300], (1.0 / 7e-300) ** (1.0 / 6.0)),
+        ([0.0, 0.0, -1e-100], (1.0 / 7e-100) ** (1.0 / 6.0)),
+        ([-2e-313], np.inf),  # the turn lies past any direction a number can hold
         ([-1.0 / 3.0, 1e-14, 0.0], 1.0),
     ],
 )
