@@ -58,5 +58,5 @@ def compare_pictures(swings: list[Array], amplitudes: list[Array], nominal: Hybr
                 frame_power += float(np.sum(sampled**2))
                 event_power += float(np.sum(event**2))
             scale = np.sqrt(frame_power * event_power)
-            results.append(Agreement(mirror_x, mirror_y, cross / scale if scale > 0 else 0.0))
+            results.append(Agreement(mirror_x, mirror_y, float(cross / scale) if scale > 0 else 0.0))
     return max(results, key=lambda result: abs(result.correlation))

@@ -33,7 +33,8 @@ LINE_RATIO = 4.0  # a line stands out of the spectrum around it by this factor i
 class Blink:
     """A periodic target on the event clock: set A turns bright at `epoch_ns + (k - epoch_phase) / hz`.
 
-    `sigma_hz` is the deviation of `hz`; `epoch_sigma_ns` of the phase, at `centre_ns`. `flicker_hz`: other lines.
+    `sigma_hz` is the deviation of `hz`. `flicker_hz`: other lines in the spectrum. `fold_lead`: a half of the cycle is
+    counted from so many cycles before the flip, much while the phase is that of mean stamps, which lag.
     """
 
     hz: float
@@ -42,6 +43,7 @@ class Blink:
     epoch_phase: float
     duty: float
     flicker_hz: tuple[float, ...] = ()
+    fold_lead: float = 0.1
 
     @property
     def period_ns(self) -> float:
@@ -204,4 +206,4 @@ def find_blink(recording: Recording, shape: tuple[int, int], target: Target) -> 
     angle = resolve_half_turn(spectra, hz, phase_of_squares) - (0.5 - target.duty) * np.pi
     span_s = (spectra.start_ns[-1] - spectra.start_ns[0]) * 1e-9 + BLOCK_BINS * BIN_NS * 1e-9
     flicker = flicker_lines(lines, hz, float(spectra.hz[1]))
-    return Blink(hz, 0.02 / span_s, spectra.origin_ns, float(angle / (2 * np.pi)) % 1.0, target.duty, flicker)
+    return Blink(hz, float(0.02 / span_s), spectra.origin_ns, float(angle / (2 * np.pi)) % 1.0, target.duty, flicker)

@@ -115,7 +115,7 @@ def first_rows(settings: FrameSettings, recording: Recording, frames: list[Array
     parts = []
     for k, chosen in enumerate(frames):
         if len(chosen) >= LEAST_FRAMES:
-            signal, deviation = singular_row_signals(view_light(recording, chosen, mode), signed)
+            signal, deviation = singular_row_signals(view_light(recording, chosen, settings.nominal), signed)
             parts.append((signal, deviation, table.t_start_ns[chosen], table.exposure_ns[chosen], k))
     if not parts:
         raise DegenerateDataError(
@@ -136,7 +136,7 @@ def demodulate_view(settings: FrameSettings, recording: Recording, clocks: Clock
     """Pictures of one view, or None where it has too few frames or their rows all see the same share."""
     if len(chosen) < LEAST_FRAMES:
         return None
-    light = view_light(recording, chosen, settings.nominal.frame_mode) if light is None else light
+    light = view_light(recording, chosen, settings.nominal) if light is None else light
     result = demodulate_frames(light, view_shares(settings, clocks, recording.frames, chosen))
     return result if np.mean(np.isfinite(result.bright_dn)) > 0.02 else None
 
@@ -187,7 +187,7 @@ def second_rows(settings: FrameSettings, recording: Recording, clocks: Clocks, f
     for k, (chosen, picture) in enumerate(zip(frames, demodulated, strict=True)):
         if picture is not None:
             used = chosen[picture.kept]
-            signal, deviation = weighted_row_signals(view_light(recording, used, mode), picture.swing_dn, picture.noise_dn)
+            signal, deviation = weighted_row_signals(view_light(recording, used, settings.nominal), picture.swing_dn, picture.noise_dn)
             parts.append((signal, deviation, table.t_start_ns[used], table.exposure_ns[used], k))
     return join_row_signals(parts, mode.read_order(np.arange(mode.height)), int(table.t_start_ns[0]), True)
 

@@ -140,6 +140,7 @@ def fit_onsets(recording: Recording, blink: Blink, views: list[View], folds: lis
         hz=1e9 / period,
         sigma_hz=float(np.sqrt(covariance[1, 1])) / period * 1e9 / period,
         epoch_phase=float((centre - line[0] / period) % 1.0),
+        fold_lead=0.015,
     )
     view_residual = np.array([
         residual[view_of == k].mean() if np.any(view_of == k) else np.nan for k in range(len(views))

@@ -22,8 +22,6 @@ Array = np.ndarray
 
 BLOCK_CYCLES = 2
 SMOOTH_PX = 1.5
-# A half of the cycle begins this much (in cycles) before the flip: the phase may still be that of mean stamps, which lag.
-FOLD_LEAD = 0.1
 ACTIVE_SHARE = 0.004  # of the event grid must blink for a block to count
 ACTIVE_EVENTS = 0.5  # events per flip that make a pixel active
 
@@ -97,7 +95,7 @@ def signed_amplitude(planes: Array, cycles: int) -> Array:
 
 def add_events(events: Events, blink: Blink, planes: Array) -> None:
     """Count events into `planes` (4, rows, columns)."""
-    phase = blink.epoch_phase + FOLD_LEAD
+    phase = blink.epoch_phase + blink.fold_lead
     fold_events(events.t, events.x, events.y, events.on, blink.epoch_ns, phase, blink.hz, blink.duty, planes)
 
 
@@ -126,8 +124,8 @@ def cycle_blocks(recording: Recording, blink: Blink) -> Iterator[tuple[int, list
     """Yield blocks of `BLOCK_CYCLES` whole cycles: number of the first cycle, and its events in pieces."""
     period = blink.period_ns
     t0_ns, t1_ns = recording.event_span_ns
-    cycle = int(np.ceil(blink.phase(t0_ns) + FOLD_LEAD))
-    origin = blink.epoch_phase + FOLD_LEAD
+    cycle = int(np.ceil(blink.phase(t0_ns) + blink.fold_lead))
+    origin = blink.epoch_phase + blink.fold_lead
     boundary = blink.epoch_ns + int(round((cycle - origin) * period))
     pieces: list[Events] = []
     for events in recording.event_blocks(boundary, t1_ns + 1):
@@ -216,7 +214,7 @@ def view_of_run(blocks: list[Block], run: tuple[int, int], blink: Blink, options
         sway, is_part = path_sway_px(path[part[0] : part[1]]), part[1] - part[0] < len(path)
         first, last = first + part[0], first + part[1]
     cycles = np.array([blocks[first].cycle, blocks[last - 1].cycle + BLOCK_CYCLES])
-    t0_ns, t1_ns = blink.epoch_ns + np.rint((cycles - blink.epoch_phase - FOLD_LEAD) * blink.period_ns).astype(np.int64)
+    t0_ns, t1_ns = blink.epoch_ns + np.rint((cycles - blink.epoch_phase - blink.fold_lead) * blink.period_ns).astype(np.int64)
     return View(int(t0_ns), int(t1_ns), sway, is_part)
 
 
