@@ -2,7 +2,8 @@
 
 Each iteration solves (J'WJ + lambda diag(J'WJ)) x = -J'Wr for the right perturbations x and retracts T exp(x). The
 damping follows the gain ratio (Nielsen 1999) from a start so small that the first steps are Gauss-Newton steps (for
-pose graphs: Grisetti et al. 2010). Robust losses enter as weights at every iteration.
+pose graphs: Grisetti et al. 2010). Robust losses enter as weights, and as less curvature along each residual (Triggs
+et al. 2000): without the second, convergence is only linear where a residual stays large.
 """
 
 from dataclasses import dataclass, field
@@ -12,7 +13,7 @@ import numpy as np
 from hybridtrack.errors import OptionError
 from hybridtrack.posegraph.loss import Loss, Quadratic
 from hybridtrack.posegraph.normal_equations import NormalEquations
-from hybridtrack.posegraph.problem import PoseProblem, linearise, moved, residuals
+from hybridtrack.posegraph.problem import Linearisation, PoseProblem, linearise, moved, residuals
 
 Array = np.ndarray
 
@@ -26,6 +27,8 @@ GAUSS_NEWTON_DAMPING = 1e-3
 NEGLIGIBLE_CHI_SQUARE = 1e-16
 # A longer turn, or change of log scale, in one step lies outside what a linearisation can promise.
 LONGEST_TURN = 3.0
+# Share of a constraint's curvature along its residual that is always left: the equations must stay positive definite.
+LEAST_CURVATURE = 0.05
 
 
 @dataclass(frozen=True)
@@ -78,14 +81,25 @@ class WeightedCost:
         """Derivative (M,) of the cost by every chi-square."""
         return self.factors * np.where(self.robust, self.loss.weight(chi_squares), 1.0)
 
+    def bent(self, line: Linearisation, chi_squares: Array) -> Linearisation:
+        """The linearisation with Jacobians shortened along the residual, as the bend of the loss asks."""
+        if isinstance(self.loss, Quadratic) or not self.robust.any():
+            return line
+        left = np.maximum(1.0 + self.loss.bend(chi_squares), LEAST_CURVATURE)
+        shortening = np.where(self.robust, 1.0 - np.sqrt(left), 0.0) / np.maximum(chi_squares, 1e-300)
+        along = shortening[:, None, None] * line.residual[:, :, None] * line.residual[:, None, :]
+        return Linearisation(line.residual, line.by_a - along @ line.by_a, line.by_b - along @ line.by_b)
+
 
 class _System:
     """Normal equations at one set of poses, solved for several dampings."""
 
-    def __init__(self, equations: NormalEquations, problem: PoseProblem, poses: Array, weights: Array) -> None:
-        line = linearise(problem, poses)
+    def __init__(
+        self, equations: NormalEquations, line: Linearisation, weighting: WeightedCost, chi_squares: Array
+    ) -> None:
+        weights = weighting.weights(chi_squares)
         self._equations = equations
-        self._blocks = equations.hessian_blocks(line, weights)
+        self._blocks = equations.hessian_blocks(weighting.bent(line, chi_squares), weights)
         self._gradient = equations.gradient(line, weights)
         self._diagonal = equations.diagonal(self._blocks)
 
@@ -127,7 +141,7 @@ def minimise(
     system: _System | None = None
     while status == "stalled" and iterations < options.max_iterations and damping < LARGEST_DAMPING:
         iterations += 1
-        system = system or _System(equations, problem, poses, weighting.weights(chi_squares))
+        system = system or _System(equations, linearise(problem, poses), weighting, chi_squares)
         step, predicted = system.step(damping)
         if step is not None:
             if _is_converged(predicted, cost, damping, options):

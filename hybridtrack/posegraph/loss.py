@@ -1,7 +1,8 @@
 """Robust losses: how much of a constraint's chi-square counts, and the weight that follows.
 
-A loss maps s = r' C^-1 r to rho(s) <= s; iteratively reweighted least squares uses the weight rho'(s) (Holland and
-Welsch 1977). `width` is in standard deviations, the unit of sqrt(s).
+A loss maps s = r' C^-1 r to rho(s) <= s. The solver uses the weight rho'(s), and for the curvature along the residual
+the ratio 2 s rho''(s) / rho'(s), here called bend (Triggs et al. 2000, section 4.3). `width` is in standard deviations,
+the unit of sqrt(s).
 """
 
 from dataclasses import dataclass
@@ -23,6 +24,9 @@ class Loss(Protocol):
     def weight(self, chi_square: Array) -> Array:
         """rho'(s), between 0 and 1."""
 
+    def bend(self, chi_square: Array) -> Array:
+        """2 s rho''(s) / rho'(s), at most 0."""
+
 
 def _require_positive(width: float) -> None:
     if not (np.isfinite(width) and width > 0.0):
@@ -40,6 +44,10 @@ class Quadratic:
     def weight(self, chi_square: Array) -> Array:
         """One."""
         return np.ones_like(chi_square)
+
+    def bend(self, chi_square: Array) -> Array:
+        """Zero."""
+        return np.zeros_like(chi_square)
 
 
 @dataclass(frozen=True)
@@ -60,6 +68,10 @@ class Huber:
         """1 inside, k / sqrt(s) outside."""
         return self.width / np.maximum(np.sqrt(chi_square), self.width)
 
+    def bend(self, chi_square: Array) -> Array:
+        """0 inside, -1 outside: a linear cost has no curvature along the residual."""
+        return np.where(chi_square <= self.width**2, 0.0, -1.0)
+
 
 @dataclass(frozen=True)
 class GemanMcClure:
@@ -77,3 +89,7 @@ class GemanMcClure:
     def weight(self, chi_square: Array) -> Array:
         """(c^2 / (c^2 + s))^2."""
         return (self.width**2 / (self.width**2 + chi_square)) ** 2
+
+    def bend(self, chi_square: Array) -> Array:
+        """-4 s / (c^2 + s)."""
+        return -4.0 * chi_square / (self.width**2 + chi_square)

@@ -88,7 +88,8 @@ class NormalEquations:
                 across.swapaxes(1, 2),
             ]
         )[self._wanted]
-        return (self._sum @ products.reshape(len(products), self.dimension**2)).reshape(-1, self.dimension, self.dimension)
+        sums = self._sum @ products.reshape(len(products), self.dimension**2)
+        return sums.reshape(-1, self.dimension, self.dimension)
 
     def diagonal(self, blocks: Array) -> Array:
         """Diagonal (count * d,) of J'WJ."""

@@ -46,7 +46,7 @@ def test_layout_is_the_agreed_one(laps, tmp_path):
 
 
 def test_unknown_fields_survive_rewriting(laps, tmp_path):
-    """Fields of the document, of a pose and of a constraint that this version does not know are kept, also by solving."""
+    """Fields of the document, of a pose and of a constraint that are not known are kept, also by solving."""
     path = tmp_path / "pose_graph.json"
     save_graph(laps(21).graph, path)
     data = json.loads(path.read_text())

@@ -43,7 +43,7 @@ def test_a_factor_of_zero_leaves_a_constraint_out(laps):
 
 
 def test_recovers_from_a_start_far_away(laps):
-    """Poses turned by up to 1 rad at random still lead to the truth: damping takes over where Gauss-Newton overshoots."""
+    """Poses turned by up to 1 rad at random still lead to the truth: damping helps where Gauss-Newton overshoots."""
     made = laps(20, lap=8, seed=None)
     problem = build_problem(made.graph, range(len(made.graph.constraints)))
     rng = np.random.default_rng(4)

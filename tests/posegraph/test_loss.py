@@ -9,11 +9,13 @@ from hybridtrack.posegraph import GemanMcClure, Huber, Quadratic
 
 @pytest.mark.parametrize("loss", [Quadratic(), Huber(2.0), GemanMcClure(2.0)])
 def test_weight_is_the_derivative_of_the_cost(loss):
-    """Checked by differences inside, outside and far outside the width."""
+    """And bend the derivative of the weight: checked by differences inside, outside and far outside the width."""
     s = np.array([0.1, 1.0, 3.9, 4.1, 50.0, 1e4])
     step = 1e-5 * s
     slope = (loss.cost(s + step) - loss.cost(s - step)) / (2.0 * step)
     assert np.allclose(loss.weight(s), slope, rtol=1e-5, atol=1e-9)
+    change = (loss.weight(s + step) - loss.weight(s - step)) / (2.0 * step)
+    assert np.allclose(loss.bend(s), 2.0 * s * change / loss.weight(s), rtol=1e-5, atol=1e-5)
 
 
 @pytest.mark.parametrize("loss", [Quadratic(), Huber(2.0), GemanMcClure(2.0)])

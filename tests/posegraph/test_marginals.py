@@ -22,11 +22,11 @@ def test_chain_covariance_has_a_closed_form(laps):
 
 @pytest.mark.parametrize("group", [SE3, SIM3], ids=["SE3", "Sim3"])
 def test_joint_and_single_covariances_agree(laps, group):
-    """Blocks on the diagonal of a joint covariance are the single ones; the held pose has none; batches change nothing."""
+    """Blocks on the diagonal of a joint covariance are the single ones, in several batches; the held pose has none."""
     made = laps(60, lap=20, group=group)
     marginals = Marginals(solve(made.graph))
     every = marginals.covariances(made.graph.ids)
-    assert COLUMNS_AT_ONCE < 60 * group.dimension
+    assert 60 * group.dimension > COLUMNS_AT_ONCE
     d = group.dimension
     joint = marginals.joint([0, 50, 3])
     for number, pose_id in enumerate((0, 50, 3)):

@@ -1,5 +1,7 @@
 """Chained motion and its covariance between any two poses."""
 
+from itertools import pairwise
+
 import numpy as np
 import pytest
 
@@ -24,7 +26,7 @@ def chained(graph, path):
     """Motion along the path and its covariance on the right, one link after the other."""
     group, d = graph.group, graph.group.dimension
     motion, covariance = np.eye(4), np.zeros((d, d))
-    for here, there in zip(path[:-1], path[1:], strict=True):
+    for here, there in pairwise(path):
         constraint = next(c for c in graph.constraints if {c.from_id, c.to_id} == {here, there})
         step, spread = constraint.from_from_to, constraint.covariance
         if constraint.from_id == there:

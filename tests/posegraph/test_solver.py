@@ -32,13 +32,13 @@ def test_exact_without_noise(laps, group):
 
 @GROUPS
 def test_chi_square_and_nees_are_honest(laps, group):
-    """Over 50 noisy graphs: chi-square over dof, and joint NEES of all poses over theirs, average one.
+    """Over 100 noisy graphs: chi-square over dof, and joint NEES of all poses over theirs, average one.
 
-    Limits are 4 standard errors of a mean of 50, plus 1 % for what is not linear; coverage as the trade asks.
+    Limits are 4 standard errors of a mean of 100, plus 1 % for what is not linear; coverage as the trade asks.
     """
     ratios, nees, inside = [], [], 0
-    for seed in range(50):
-        made = laps(24, lap=8, seed=seed, group=group)
+    for seed in range(100):
+        made = laps(16, lap=6, seed=seed, group=group)
         result = solve(made.graph)
         assert result.status == "converged"
         ratios.append(result.chi_square / result.dof)
@@ -46,14 +46,14 @@ def test_chi_square_and_nees_are_honest(laps, group):
         squared = error @ np.linalg.solve(Marginals(result).joint(made.graph.ids[1:]), error)
         nees.append(squared / len(error))
         inside += squared < chi2.ppf(0.95, len(error))
-    assert abs(np.mean(ratios) - 1.0) < 0.01 + 4.0 * np.sqrt(2.0 / result.dof / 50.0)
-    assert abs(np.mean(nees) - 1.0) < 0.01 + 4.0 * np.sqrt(2.0 / len(error) / 50.0)
-    assert 0.88 <= inside / 50.0 <= 0.99
+    assert abs(np.mean(ratios) - 1.0) < 0.01 + 4.0 * np.sqrt(2.0 / result.dof / 100.0)
+    assert abs(np.mean(nees) - 1.0) < 0.01 + 4.0 * np.sqrt(2.0 / len(error) / 100.0)
+    assert 0.88 <= inside / 100.0 <= 0.99
 
 
 @GROUPS
 def test_a_prior_fixes_the_gauge(laps, group):
-    """With a prior no pose is held: the solution moves to where the prior says, exactly where nothing contradicts it."""
+    """With a prior no pose is held: the solution moves to where the prior says."""
     made = laps(30, lap=10, seed=None, group=group)
     away = group.exp(0.3 * np.ones(group.dimension))
     shifted = made.graph.with_solution(away @ made.graph.world_from_camera(), made.graph.constraints)
