@@ -1,0 +1,354 @@
+"""Compiled ray casting of textured parallelograms.
+
+A surface is the parallelogram `origin + s * edge_u + t * edge_v`, s and t in 0..1. For a camera at `c` with rotation
+`R`, the ray of unit direction d (camera axes) meets its plane where `r R d = (origin - c) + s edge_u + t edge_v`. With
+`M = [edge_u, edge_v, origin - c]` and the *surface map* `H = M^-1 R`, the product `(a, b, w) = H d` holds
+`s = a / w`, `t = b / w` and the inverse distance `w = 1 / r`: no search and one division a ray, whatever the lens.
+
+Rays are cast tile by tile: a tile is a bundle of rays inside a cone, and a short list of surfaces that may meet it.
+Texture is read between two levels of a pyramid of halved pictures, mixed by variance (see `_read`). Where a
+ray passes close to an outline, it is replaced by a few rays spread over the pixel's aperture.
+"""
+
+import math
+
+import numba
+import numpy as np
+
+from hybridtrack.compiled import kernel
+
+# A row of `maps`: H by rows, lengths of the four outline functionals, texels^2 per m^2 over the plane's distance.
+MAP_SIZE = 14
+# A row of `windows`: first texel (x, y) and span in texels (x, y) of the surface's part of its texture, texels^2 per m^2.
+WINDOW_SIZE = 5
+# A row of `looks`: the first four of a row of `windows`, and the tints of the four channels.
+LOOK_SIZE = 8
+
+# Four positions in the unit square, no two in one row or column, to spread rays over an aperture.
+SPREAD_U = np.array([-0.375, -0.125, 0.125, 0.375])
+SPREAD_V = np.array([-0.125, 0.375, -0.375, 0.125])
+
+
+@kernel
+def surface_maps(origins, edges_u, edges_v, one_sided, windows, world_from_camera, maps):
+    """Fill `maps` (T, Q, MAP_SIZE) for poses (T, 4, 4); a surface that shows its back or its rim becomes zeros."""
+    h = np.empty((3, 3))
+    for i in range(world_from_camera.shape[0]):
+        pose = world_from_camera[i]
+        for q in range(origins.shape[0]):
+            maps[i, q] = 0.0
+            ox, oy, oz = origins[q, 0] - pose[0, 3], origins[q, 1] - pose[1, 3], origins[q, 2] - pose[2, 3]
+            ux, uy, uz = edges_u[q, 0], edges_u[q, 1], edges_u[q, 2]
+            vx, vy, vz = edges_v[q, 0], edges_v[q, 1], edges_v[q, 2]
+            nx, ny, nz = uy * vz - uz * vy, uz * vx - ux * vz, ux * vy - uy * vx
+            volume = nx * ox + ny * oy + nz * oz
+            if abs(volume) < 1e-12 or (one_sided[q] and volume < 0.0):
+                continue
+            h[0, 0], h[0, 1], h[0, 2] = vy * oz - vz * oy, vz * ox - vx * oz, vx * oy - vy * ox
+            h[1, 0], h[1, 1], h[1, 2] = oy * uz - oz * uy, oz * ux - ox * uz, ox * uy - oy * ux
+            h[2, 0], h[2, 1], h[2, 2] = nx, ny, nz
+            row = maps[i, q]
+            for j in range(3):
+                for k in range(3):
+                    total = h[j, 0] * pose[0, k] + h[j, 1] * pose[1, k] + h[j, 2] * pose[2, k]
+                    row[3 * j + k] = total / volume
+            for j in range(2):
+                near, far = 0.0, 0.0
+                for k in range(3):
+                    near += row[3 * j + k] ** 2
+                    far += (row[6 + k] - row[3 * j + k]) ** 2
+                row[9 + 2 * j], row[10 + 2 * j] = math.sqrt(near), math.sqrt(far)
+            row[13] = windows[q, 4] * math.sqrt(row[6] ** 2 + row[7] ** 2 + row[8] ** 2)
+
+
+@kernel
+def _may_meet(row, axis, sine):
+    """Whether a cone of rays (unit axis, sine of its half angle) may meet the surface: 0 no, 1 maybe, 2 all of it does.
+
+    The cone is outside when it lies beyond one of the four planes through the camera and an outline, or behind.
+    """
+    if row[13] == 0.0:
+        return 0
+    a = row[0] * axis[0] + row[1] * axis[1] + row[2] * axis[2]
+    b = row[3] * axis[0] + row[4] * axis[1] + row[5] * axis[2]
+    w = row[6] * axis[0] + row[7] * axis[1] + row[8] * axis[2]
+    depth = math.sqrt(row[6] ** 2 + row[7] ** 2 + row[8] ** 2)
+    if a < -row[9] * sine or w - a < -row[10] * sine or b < -row[11] * sine or w - b < -row[12] * sine or w < -depth * sine:
+        return 0
+    if a > row[9] * sine and w - a > row[10] * sine and b > row[11] * sine and w - b > row[12] * sine and w > depth * sine:
+        return 2
+    return 1
+
+
+@kernel
+def _inverse_distances(row, axis, sine):
+    """Smallest and largest inverse distance of the surface's plane over a cone."""
+    w = row[6] * axis[0] + row[7] * axis[1] + row[8] * axis[2]
+    square = row[6] ** 2 + row[7] ** 2 + row[8] ** 2
+    off_axis = max(square - w * w, 0.0)
+    across, along = math.sqrt(off_axis) * sine, w * math.sqrt(1.0 - sine * sine)
+    if w > 0.0 and off_axis <= square * sine * sine:
+        return along - across, math.sqrt(square)
+    return along - across, along + across
+
+
+@kernel
+def _list_tile(maps, parents, axis, sine, candidates):
+    """Write the surfaces that may meet a cone at one of the poses; return how many. -1: the list is full."""
+    count = 0
+    floor = 0.0  # inverse distance beyond which a surface that fills the cone at every pose hides the others
+    for q in parents:
+        meets, fills, farthest = 0, True, np.inf
+        for i in range(maps.shape[0]):
+            meet = _may_meet(maps[i, q], axis, sine)
+            meets = max(meets, meet)
+            fills = fills and meet == 2
+            if fills:
+                farthest = min(farthest, _inverse_distances(maps[i, q], axis, sine)[0])
+        if meets == 0:
+            continue
+        if count == len(candidates):
+            return -1
+        candidates[count] = q
+        count += 1
+        if fills:
+            floor = max(floor, farthest)
+    kept = 0
+    for c in range(count):
+        q = candidates[c]
+        nearest = 0.0
+        for i in range(maps.shape[0]):
+            nearest = max(nearest, _inverse_distances(maps[i, q], axis, sine)[1])
+        if nearest >= floor:
+            candidates[kept] = q
+            kept += 1
+    return kept
+
+
+@kernel
+def list_candidates(maps, groups, group_axes, group_sines, axes, sines, candidates, counts):
+    """List for every tile the surfaces that may meet it at some pose of a short, smooth motion.
+
+    `maps` (K, Q, MAP_SIZE) holds poses along the motion, close enough that the cones' margin covers what lies between. Tiles lie in larger groups, which are tried first:
+    `groups` (tiles,) names each tile's, tiles of a group adjoin. Fills `candidates` (tiles, room) and `counts`; returns
+    whether the room sufficed.
+    """
+    everything = np.arange(maps.shape[1])
+    parents = np.empty(maps.shape[1], np.int64)
+    group, found = -1, 0
+    for tile in range(len(groups)):
+        if groups[tile] != group:
+            group = groups[tile]
+            found = _list_tile(maps, everything, group_axes[group], group_sines[group], parents)
+        counts[tile] = _list_tile(maps, parents[:found], axes[tile], sines[tile], candidates[tile])
+        if counts[tile] < 0:
+            return False
+    return True
+
+
+@kernel
+def _meet(maps, count, directions, margins, first, last, hits, met, outlines):
+    """Meet rays first..last-1 with the listed surfaces, nearest first.
+
+    Fills `hits` with places in the list (-1: nothing met), `met` (., 3) with a, b, w of the module's docstring, and
+    `outlines` with whether an outline not hidden by the surface met lies within `margins` rad.
+    """
+    for n in range(first, last):
+        dx, dy, dz, margin = directions[n, 0], directions[n, 1], directions[n, 2], margins[n]
+        best, best_a, best_b, best_w, outline_w = -1, 0.0, 0.0, 0.0, 0.0
+        for c in range(count):
+            w = maps[c, 6] * dx + maps[c, 7] * dy + maps[c, 8] * dz
+            if w <= best_w:
+                continue
+            a = maps[c, 0] * dx + maps[c, 1] * dy + maps[c, 2] * dz
+            b = maps[c, 3] * dx + maps[c, 4] * dy + maps[c, 5] * dz
+            left, right = maps[c, 9] * margin, maps[c, 10] * margin
+            top, bottom = maps[c, 11] * margin, maps[c, 12] * margin
+            if a < -left or w - a < -right or b < -top or w - b < -bottom:
+                continue
+            if w > outline_w and (a < left or w - a < right or b < top or w - b < bottom):
+                outline_w = w
+            if a >= 0.0 and a <= w and b >= 0.0 and b <= w:
+                best, best_a, best_b, best_w = c, a, b, w
+        hits[n], outlines[n] = best, margin > 0.0 and outline_w > 0.0 and outline_w >= best_w
+        met[n, 0], met[n, 1], met[n, 2] = best_a, best_b, best_w
+
+
+@kernel
+def _read(maps, looks, textures, texels, levels, background, first, last, hits, met, solid_angles, channels, values):
+    """Light along rays first..last-1 that `_meet` has met.
+
+    Level L of a texture averages boxes of 4^L texels^2, so its variance grows as 4^L, and mixing two levels mixes their
+    variances: a footprint of F texels^2 takes the share (F / 4^L - 1) / 3 of the level after L.
+    """
+    for n in range(first, last):
+        best = hits[n]
+        if best < 0:
+            values[n] = background
+            continue
+        inverse = 1.0 / met[n, 2]
+        x = looks[best, 0] + met[n, 0] * inverse * looks[best, 2]
+        y = looks[best, 1] + met[n, 1] * inverse * looks[best, 3]
+        square = solid_angles[n] * maps[best, 13] * inverse * inverse * inverse
+        texture, level, scale = textures[best], 0, 1.0
+        coarsest = levels[texture, 0, 3] - 1
+        while square >= 4.0 and level < coarsest:
+            square, scale, level = 0.25 * square, 0.5 * scale, level + 1
+        share = min(max(square - 1.0, 0.0), 3.0) / 3.0
+        total, weight = 0.0, 1.0 - share
+        while weight > 0.0:
+            start, width, height = levels[texture, level, 0], levels[texture, level, 1], levels[texture, level, 2]
+            px = min(max(x * scale - 0.5, 0.0), width - 1.0)
+            py = min(max(y * scale - 0.5, 0.0), height - 1.0)
+            i, j = int(px), int(py)
+            share_x, share_y = px - i, py - j
+            here = start + j * width + i
+            right, below = here + (i < width - 1), here + (width if j < height - 1 else 0)
+            top = (1.0 - share_x) * texels[here] + share_x * texels[right]
+            bottom = (1.0 - share_x) * texels[below] + share_x * texels[below + right - here]
+            total += weight * ((1.0 - share_y) * top + share_y * bottom)
+            weight, share = share if level < coarsest else 0.0, 0.0
+            level, scale = level + 1, 0.5 * scale
+        values[n] = total * looks[best, 4 + channels[n]]
+
+
+@kernel
+def _bundle(rays, channels, order, begin, end):
+    """Copy the rays of pixels order[begin:end] side by side, and make room for what they meet.
+
+    `rays` is (directions (P, 3), spans of the aperture along u and v (P, 3), solid angle of the footprint (P,), outline
+    margin in rad (P,)).
+    """
+    directions, along_u, along_v, solid_angles, margins = rays
+    pixels = order[begin:end]
+    size = end - begin
+    own = (directions[pixels], along_u[pixels], along_v[pixels], solid_angles[pixels], margins[pixels], channels[pixels])
+    return own, np.empty(size, np.int64), np.empty((size, 3)), np.empty(size, np.bool_), np.empty(size)
+
+
+@kernel
+def _spread(maps, count, look, scene, bundle, first, last, scratch):
+    """Replace the light of rays near an outline by the mean of a few rays spread over their aperture."""
+    own, _, _, outlines, values = bundle
+    directions, along_u, along_v, solid_angles, _, channels = own
+    spread, spread_margins, hits, met, unused, seen, angle, channel = scratch
+    size = len(SPREAD_U)
+    for n in range(first, last):
+        if not outlines[n]:
+            continue
+        for k in range(size):
+            for j in range(3):
+                spread[k, j] = directions[n, j] + SPREAD_U[k] * along_u[n, j] + SPREAD_V[k] * along_v[n, j]
+            angle[k], channel[k] = solid_angles[n], channels[n]
+        _meet(maps, count, spread, spread_margins, 0, size, hits, met, unused)
+        _read(maps, look[0], look[1], scene[0], scene[1], scene[5], 0, size, hits, met, angle, channel, seen)
+        values[n] = seen.mean()
+
+
+@kernel
+def _see(maps, count, look, scene, bundle, first, last, scratch):
+    """Light of rays first..last-1 of a bundle, into its last array."""
+    own, hits, met, outlines, values = bundle
+    _meet(maps, count, own[0], own[4], first, last, hits, met, outlines)
+    _read(maps, look[0], look[1], scene[0], scene[1], scene[5], first, last, hits, met, own[3], own[5], values)
+    _spread(maps, count, look, scene, bundle, first, last, scratch)
+
+
+@kernel
+def _scratch():
+    """Room for the rays that replace one ray."""
+    size = len(SPREAD_U)
+    rays = np.empty((size, 3)), np.zeros(size)
+    return (*rays, np.empty(size, np.int64), np.empty((size, 3)), np.empty(size, np.bool_), np.empty(size), np.empty(size),
+            np.empty(size, np.int64))
+
+
+@kernel
+def _looks_of(scene, ids, count):
+    """Windows and tints (C, LOOK_SIZE) and texture indices (C,) of listed surfaces."""
+    _, _, textures, windows, tints, _ = scene
+    looks, own = np.empty((count, LOOK_SIZE)), np.empty(count, np.int64)
+    for c in range(count):
+        own[c] = textures[ids[c]]
+        for m in range(4):
+            looks[c, m] = windows[ids[c], m]
+            looks[c, 4 + m] = tints[ids[c], m]
+    return looks, own
+
+
+@kernel(parallel=True)
+def render_instants(maps, scene, tiles, candidates, counts, rays, channels, light):
+    """Fill `light` (T, P) with what all pixels see at T poses, `maps` (T, Q, MAP_SIZE).
+
+    `scene` is (texels, levels, textures, windows, tints, background); `tiles` is (order (P,), start (tiles + 1,)):
+    pixels order[start[i]:start[i + 1]] lie in tile i. `rays` as in `_bundle`.
+    """
+    order, start = tiles
+    for tile in numba.prange(len(counts)):
+        count, ids, begin = counts[tile], candidates[tile], start[tile]
+        look, scratch = _looks_of(scene, ids, count), _scratch()
+        bundle = _bundle(rays, channels, order, begin, start[tile + 1])
+        values = bundle[4]
+        local = np.empty((count, MAP_SIZE))
+        for i in range(maps.shape[0]):
+            for c in range(count):
+                for m in range(MAP_SIZE):
+                    local[c, m] = maps[i, ids[c], m]
+            _see(local, count, look, scene, bundle, 0, len(values), scratch)
+            for n in range(len(values)):
+                light[i, order[begin + n]] = values[n]
+
+
+@kernel
+def _between(maps, knot, share, ids, count, local):
+    """Fill `local` (C, MAP_SIZE) with the maps (knots, Q, MAP_SIZE) of listed surfaces, `share` of the way to the next."""
+    for c in range(count):
+        for m in range(MAP_SIZE):
+            below = maps[knot, ids[c], m]
+            local[c, m] = below + share * (maps[knot + 1, ids[c], m] - below)
+
+
+@kernel(parallel=True)
+def render_exposures(maps, weights, knots, scene, tiles, candidates, counts, rays, channels, light):
+    """Add to `light` (P,) what all pixels see, each exposed over samples at its own row's time.
+
+    `maps` (samples, knots, Q, MAP_SIZE) holds every sample's surface maps at a few instants of the readout, `knots`
+    (P,) each pixel's place between them (a real number); `weights` (samples, knots) each sample's share of the exposure,
+    lamp included. Between knots, maps and weights are taken as straight lines. The rest as in `render_instants`.
+    """
+    order, start = tiles
+    last_knot = maps.shape[1] - 2
+    for tile in numba.prange(len(counts)):
+        count, ids, begin = counts[tile], candidates[tile], start[tile]
+        look, scratch = _looks_of(scene, ids, count), _scratch()
+        bundle = _bundle(rays, channels, order, begin, start[tile + 1])
+        values = bundle[4]
+        local = np.empty((count, MAP_SIZE))
+        first = 0
+        while first < len(values):
+            place, last = knots[order[begin + first]], first
+            while last < len(values) and knots[order[begin + last]] == place:
+                last += 1
+            knot = min(int(place), last_knot)
+            share = place - knot
+            for i in range(maps.shape[0]):
+                _between(maps[i], knot, share, ids, count, local)
+                weight = weights[i, knot] + share * (weights[i, knot + 1] - weights[i, knot])
+                _see(local, count, look, scene, bundle, first, last, scratch)
+                for n in range(first, last):
+                    light[order[begin + n]] += weight * values[n]
+            first = last
+
+
+@kernel
+def cast_rays(maps, poses, directions, surface, place, distance):
+    """Meet rays (N, 3) with every surface, no lists: fills surface index (N,) or -1, (s, t) (N, 2), distance (N,).
+
+    `maps` (T, Q, MAP_SIZE); `poses` (N,) names the pose of each ray.
+    """
+    size = directions.shape[0]
+    no_margin, met, outlines = np.zeros(size), np.empty((size, 3)), np.empty(size, np.bool_)
+    for n in range(size):
+        _meet(maps[poses[n]], maps.shape[1], directions, no_margin, n, n + 1, surface, met, outlines)
+        place[n, 0], place[n, 1] = met[n, 0] / met[n, 2], met[n, 1] / met[n, 2]
+        distance[n] = 1.0 / met[n, 2] if surface[n] >= 0 else np.inf
