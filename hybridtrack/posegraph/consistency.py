@@ -30,7 +30,8 @@ class ConsistencyResult:
     """Verdict on loops, all sequences in the order of `loops` (constraint indices).
 
     `kept` (L,) bool; `against_odometry` (L,) chi-square with the group's dimension in degrees of freedom, NaN where
-    odometry does not tie both ends; `consistent` (L, L) bool, True also for pairs that cannot be compared;
+    odometry does not tie both ends; `consistent` (L, L) bool, True also for pairs that cannot be compared; `contested`
+    (L,) bool: in the largest set, but another loop would do as well in its place, so that neither is kept;
     `is_exact`: whether the clique is proven to be the largest.
     """
 
@@ -38,6 +39,7 @@ class ConsistencyResult:
     kept: Array
     against_odometry: Array
     consistent: Array
+    contested: Array
     is_exact: bool
 
 
@@ -138,6 +140,14 @@ def _greedy_clique(adjacent: Array) -> list[int]:
     return clique
 
 
+def _contested(consistent: Array, kept: Array, untied: Array) -> Array:
+    """Kept loops (L,) that one single loop left out contradicts, where odometry cannot say which is right."""
+    outside = np.flatnonzero(~kept & untied)
+    conflicts = ~consistent[outside] & kept
+    decisive = conflicts[conflicts.sum(axis=1) == 1]
+    return decisive.any(axis=0) & untied if len(decisive) else np.zeros_like(kept)
+
+
 def maximum_clique(adjacent: Array, penalty: Array) -> tuple[list[int], bool]:
     """Largest clique of an adjacency matrix (L, L); among equals, that of the smallest sum of `penalty` (L,) in [0, 1].
 
@@ -190,7 +200,8 @@ def consistent_loops(
     """
     chosen = tuple(int(i) for i in loops)
     if not chosen:
-        return ConsistencyResult((), np.zeros(0, bool), np.zeros(0), np.zeros((0, 0), bool), True)
+        none = np.zeros(0, bool)
+        return ConsistencyResult((), none, np.zeros(0), np.zeros((0, 0), bool), none, True)
     tree = odometry_tree(graph, trusted)
     oriented = _oriented(graph, tree, chosen)
     dimension = graph.group.dimension
@@ -205,4 +216,5 @@ def consistent_loops(
     clique, is_exact = maximum_clique(consistent[np.ix_(part, part)], penalty[part])
     kept = np.zeros(len(chosen), dtype=bool)
     kept[part[clique]] = True
-    return ConsistencyResult(chosen, kept, against, consistent, is_exact)
+    contested = _contested(consistent, kept, np.isnan(against))
+    return ConsistencyResult(chosen, kept & ~contested, against, consistent, contested, is_exact)

@@ -129,14 +129,15 @@ def _first_rejections(
     agreed = consistent_loops(graph, loops, trusted, options.confidence, options.trust_odometry)
     limit = float(chi2.ppf(options.confidence, graph.group.dimension))
     reasons = {}
-    for index, kept, against in zip(agreed.loops, agreed.kept, agreed.against_odometry, strict=True):
-        if not kept:
-            alone = options.trust_odometry and against > limit
-            reasons[index] = (
-                f"contradicts odometry (chi-square {against:.1f}, limit {limit:.1f})"
-                if alone
-                else "contradicts loops of the largest consistent set"
-            )
+    for row in np.flatnonzero(~agreed.kept):
+        against = agreed.against_odometry[row]
+        if agreed.contested[row]:
+            sentence = "contradicts another loop, and nothing tells which of the two is right"
+        elif options.trust_odometry and against > limit:
+            sentence = f"contradicts odometry (chi-square {against:.1f}, limit {limit:.1f})"
+        else:
+            sentence = "contradicts loops of the largest consistent set"
+        reasons[agreed.loops[row]] = sentence
     survivors = [i for i in loops if i not in reasons]
     weights, poses = graduated_weights(graph, trusted, survivors, limit, options.solve)
     for index, weight in zip(survivors, weights, strict=True):
