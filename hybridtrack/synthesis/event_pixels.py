@@ -114,6 +114,11 @@ class EventPixels:
         """Number of event pixels."""
         return len(self._alive)
 
+    @property
+    def now_ns(self) -> float:
+        """Time of the last sample, or minus infinity before the first."""
+        return -np.inf if self._last_ns is None else self._last_ns
+
     def restart(self) -> None:
         """Let the next call of `expose` settle every pixel at its first sample, as after a gap in the recording."""
         self._last_ns = None

@@ -249,8 +249,7 @@ def expose_pixel(n, t, light, start, state, random, pixel, constants, keys, coun
 
 
 @kernel(parallel=True)
-def expose_pixels(t, light, start, state, random, pixel, alive, constants, size, todo, keys, counts, base, shift):
-    # type: ignore[no-untyped-def]
+def expose_pixels(t, light, start, state, random, pixel, alive, constants, size, todo, keys, counts, base, shift):  # type: ignore[no-untyped-def]
     """Run the chunks `todo` (C,) of `size` pixels each through the samples; chunk c writes its keys to `keys[c]`.
 
     A chunk whose buffer is too small is put back where it was; its entry of `counts` says what it needs.
@@ -300,8 +299,7 @@ def lowest_row(flags, start):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def read_rows(t, x, y, until, clock, pointer, shape, event_ns, row_ns, queue, wait_max, verdict, out_t, out_index):
-    # type: ignore[no-untyped-def]
+def read_rows(t, x, y, until, clock, pointer, shape, event_ns, row_ns, queue, wait_max, verdict, out_t, out_index):  # type: ignore[no-untyped-def]
     """Scan rows round and round over events sorted by time; returns events read, clock and row pointer.
 
     `verdict` (n,) tells of every event whether it still waits, was read or was lost. `queue`: a pixel whose event
