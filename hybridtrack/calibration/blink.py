@@ -15,9 +15,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from hybridtrack.calibration.kernels import tile_histogram
-from hybridtrack.errors import NoBlinkError
+from hybridtrack.errors import ModuleMismatchError, NoBlinkError
 from hybridtrack.module import Target
-from hybridtrack.recording import Recording
+from hybridtrack.recording import Events, Recording
 
 Array = np.ndarray
 
@@ -85,6 +85,15 @@ def block_spectrum(histogram: Array, start_s: float, fine_hz: Array) -> tuple[Ar
     return np.sum(np.abs(spectrum) ** 2, axis=1), np.sum(z**2, axis=1), np.sum(z * np.abs(z), axis=1)
 
 
+def require_inside(events: Events, shape: tuple[int, int]) -> None:
+    """Raise ModuleMismatchError where events lie outside the grid of `shape` (rows, columns)."""
+    if len(events) and (int(events.x.max()) >= shape[1] or int(events.y.max()) >= shape[0]):
+        raise ModuleMismatchError(
+            f"events must lie on the module's event grid of {shape[1]}x{shape[0]} pixels, and they reach column "
+            f"{int(events.x.max())} and row {int(events.y.max())}"
+        )
+
+
 def block_spectra(recording: Recording, shape: tuple[int, int], nominal_hz: float) -> BlockSpectra:
     """Read all events once and transform them block by block; `shape` of the event grid."""
     origin, last = recording.event_span_ns
@@ -104,6 +113,7 @@ def block_spectra(recording: Recording, shape: tuple[int, int], nominal_hz: floa
             histogram[:] = 0.0
 
     for block in recording.event_blocks():
+        require_inside(block, shape)
         used = 0
         while True:
             part = block[used:]
@@ -186,7 +196,8 @@ def require_line(spectra: BlockSpectra, lines: list[tuple[float, float]], nomina
 def flicker_lines(lines: list[tuple[float, float]], blink_hz: float, resolution_hz: float) -> tuple[float, ...]:
     """Lines that are no harmonic of the blinking, nor aliased into it by the bins."""
     sampling_hz = 1e9 / BIN_NS
-    harmonics = blink_hz * np.arange(1, 40)
+    # Higher harmonics are averaged away by the bins.
+    harmonics = blink_hz * np.arange(1, max(2, int(0.7 * sampling_hz / blink_hz)) + 1)
     folded = np.abs((harmonics + sampling_hz / 2) % sampling_hz - sampling_hz / 2)
     return tuple(hz for hz, _ in lines if np.min(np.abs(folded - hz)) > 1.6 * resolution_hz)
 
@@ -196,7 +207,7 @@ def find_blink(recording: Recording, shape: tuple[int, int], target: Target) -> 
 
     `shape` (rows, columns) of the event grid. The phase is that of mean stamps, late by photoreceptor and readout;
     `onset.py` refines it. On a counterphase target of even duty the name "set A" is a choice, the same in all views.
-    Raises NoBlinkError with what was looked for and what was found.
+    Raises NoBlinkError with what was looked for and what was found, ModuleMismatchError for events off the grid.
     """
     spectra = block_spectra(recording, shape, target.blink_hz)
     lines = spectral_lines(spectra)

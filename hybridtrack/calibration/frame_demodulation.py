@@ -91,11 +91,5 @@ def demodulate_frames(light: Array, share: Array) -> FrameDemodulation:
     floor, slope = photon_transfer(centre, variance)
     noise = np.sqrt(floor + slope * np.maximum(np.nan_to_num(centre), 0.0))
     bright_factor = np.sqrt(inverse[:, 0, 0] + 2 * inverse[:, 0, 1] + inverse[:, 1, 1])
-    return FrameDemodulation(
-        bright_dn=dark + swing,
-        dark_dn=dark,
-        bright_sigma_dn=noise * bright_factor[:, None],
-        dark_sigma_dn=noise * np.sqrt(inverse[:, 0, 0])[:, None],
-        noise_dn=noise,
-        kept=kept,
-    )
+    pictures = (dark + swing, dark, noise * bright_factor[:, None], noise * np.sqrt(inverse[:, 0, 0])[:, None], noise)
+    return FrameDemodulation(*(picture.astype(np.float32) for picture in pictures), kept)

@@ -88,3 +88,18 @@ def shortest_intervals(t: Array, x: Array, y: Array, last_ns: Array, shortest_ns
         if interval < shortest_ns[y[k], x[k]]:
             shortest_ns[y[k], x[k]] = interval
         last_ns[y[k], x[k]] = t[k]
+
+
+@kernel
+def count_quiet_events(t: Array, x: Array, y: Array, epoch_ns: int, epoch_phase: float, hz: float, first: float,
+                       last: float, anytime: Array, out: Array) -> None:
+    """Count events by pixel into `out` (rows, columns): those between two phases of the cycle, or `anytime` there."""
+    rate = hz * 1e-9
+    for k in range(len(t)):
+        if anytime[y[k], x[k]]:
+            out[y[k], x[k]] += 1
+        else:
+            phase = (t[k] - epoch_ns) * rate + epoch_phase
+            phase -= np.floor(phase)
+            if first <= phase < last:
+                out[y[k], x[k]] += 1

@@ -112,11 +112,12 @@ def translation_px(before: Array, after: Array) -> Array:
 
 
 def compare(before: Array | None, after: Array) -> tuple[float, Array]:
-    """Correlation of two smoothed amplitude images, and the shift between them."""
+    """Correlation of two smoothed amplitude images about their means, and the shift between them."""
     if before is None:
         return 0.0, np.zeros(2)
-    scale = float(np.sqrt(np.sum(before**2, dtype=float) * np.sum(after**2, dtype=float)))
-    correlation = float(np.sum(before * after, dtype=float)) / scale if scale > 0 else 0.0
+    a, b = before - before.mean(dtype=float), after - after.mean(dtype=float)
+    scale = float(np.sqrt(np.sum(a**2, dtype=float) * np.sum(b**2, dtype=float)))
+    correlation = float(np.sum(a * b, dtype=float)) / scale if scale > 0 else 0.0
     return correlation, translation_px(before, after)
 
 

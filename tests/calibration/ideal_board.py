@@ -21,7 +21,7 @@ from hybridtrack.module import (
     Target,
     Timing,
 )
-from hybridtrack.recording import RecordingWriter
+from hybridtrack.recording import Recording, RecordingWriter
 
 RASTER = (np.arange(3) - 1.0) / 3.0
 
@@ -257,3 +257,10 @@ def record(scene: Scene, path) -> None:
     with RecordingWriter(path, nominal) as writer:
         record_events(scene, writer)
         record_frames(scene, writer)
+
+
+def opened(scene: Scene, folder, name: str) -> Recording:
+    """Record a scene into a folder and open it."""
+    path = folder / f"{name}.h5"
+    record(scene, path)
+    return Recording.open(path)

@@ -1,0 +1,115 @@
+"""Hot pixels by their rate in still light, dead pixels by their silence inside blinking squares.
+
+Still light is the last fifth of the bright half of a cycle, when a burst is long over, and, for pixels away from
+everything that blinks, all of the view. A pixel is hot where its count is far more than that of its neighbourhood
+could be by chance (Poisson tail); lamps that flicker over a whole patch are not. A pixel is dead where it never fired
+although blinking squares covered it in several views and other pixels there fired many times.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.ndimage import maximum_filter, median_filter
+from scipy.stats import poisson
+
+from hybridtrack.calibration.blink import Blink
+from hybridtrack.calibration.event_light import EventSteps
+from hybridtrack.calibration.kernels import count_quiet_events
+from hybridtrack.calibration.views import View, ViewFold
+from hybridtrack.module import Defects
+from hybridtrack.recording import Recording
+
+Array = np.ndarray
+
+QUIET = (0.78, 0.97)  # part of the bright half in which nothing changes
+HOT_RATIO = 15.0
+HOT_LEAST_HZ = 3.0
+DEAD_VIEWS = 2
+DEAD_FLIPS = 20
+
+
+@dataclass(frozen=True)
+class QuietCounts:
+    """`count` and `time_s` (rows, columns): events in still light, and for how long each pixel was watched."""
+
+    count: Array
+    time_s: Array
+
+    @property
+    def rate_hz(self) -> Array:
+        """Events a second (rows, columns), zero where not watched."""
+        return np.where(self.time_s > 0, self.count / np.maximum(self.time_s, 1e-9), 0.0)
+
+
+def away_from_blinking(fold: ViewFold, reach_px: int = 4) -> Array:
+    """Mask (rows, columns) of pixels with nothing that blinks within `reach_px`.
+
+    A hot pixel alone blinks nowhere: a patch counts where at least three pixels of 3x3 follow the cycle.
+    """
+    follows = (fold.snr() > 5.0) & (np.abs(fold.amplitude()) > 0.3)
+    padded = np.pad(follows.astype(int), 1)
+    rows, columns = follows.shape
+    crowd = sum(padded[i : i + rows, j : j + columns] for i in range(3) for j in range(3))
+    return ~maximum_filter(follows & (crowd >= 3), 2 * reach_px + 1)
+
+
+def quiet_counts(recording: Recording, views: list[View], folds: list[ViewFold], blink: Blink,
+                 shape: tuple[int, int]) -> QuietCounts:
+    """Count events in still light over all views."""
+    count, time_s = np.zeros(shape, np.int64), np.zeros(shape)
+    first, last = QUIET[0] * blink.duty, QUIET[1] * blink.duty
+    for view, fold in zip(views, folds, strict=True):
+        anytime = away_from_blinking(fold)
+        for events in recording.event_blocks(view.t0_ns, view.t1_ns):
+            count_quiet_events(events.t, events.x, events.y, blink.epoch_ns, blink.epoch_phase, blink.hz, first, last,
+                               anytime, count)
+        time_s += (view.t1_ns - view.t0_ns) * 1e-9 * np.where(anytime, 1.0, last - first)
+    return QuietCounts(count, time_s)
+
+
+def hot_pixels(quiet: QuietCounts) -> Array:
+    """Mask (rows, columns) of hot pixels."""
+    rate = quiet.rate_hz
+    around = median_filter(rate, 5, mode="nearest")
+    usual = max(float(np.median(rate)), float(rate.mean()) * 0.1)
+    expected_hz = np.maximum(HOT_RATIO * np.maximum(around, usual), HOT_LEAST_HZ)
+    tail = poisson.sf(quiet.count - 1, expected_hz * quiet.time_s)
+    return (tail < 1e-3 / rate.size) & (rate > expected_hz)
+
+
+def dead_pixels(folds: list[ViewFold], steps: list[EventSteps], least_step: float) -> tuple[Array, Array]:
+    """Mask of dead pixels, and of those that could be judged (rows, columns).
+
+    Judged: inside blinking squares with a log step of at least `least_step` for two views and twenty flips together.
+    """
+    shape = folds[0].planes.shape[1:]
+    views, flips, events = np.zeros(shape, int), np.zeros(shape, int), np.zeros(shape, np.int64)
+    for fold, step in zip(folds, steps, strict=True):
+        with np.errstate(invalid="ignore"):
+            covered = step.log_step > least_step
+        views += covered
+        flips += np.where(covered, 2 * fold.cycles, 0)
+        events += np.where(covered, fold.planes.sum(axis=0, dtype=np.int64), 0)
+    judged = (views >= DEAD_VIEWS) & (flips >= DEAD_FLIPS)
+    return judged & (events <= 0.01 * flips), judged
+
+
+def pixel_list(mask: Array) -> list[tuple[int, int]]:
+    """`[x, y]` of the pixels in a mask (rows, columns)."""
+    y, x = np.nonzero(mask)
+    return [(int(a), int(b)) for a, b in zip(x, y, strict=True)]
+
+
+def find_defects(quiet: QuietCounts, folds: list[ViewFold], steps: list[EventSteps],
+                 least_step: float) -> tuple[Defects, list[str]]:
+    """Hot and dead pixels, and findings."""
+    hot = hot_pixels(quiet)
+    dead, judged = dead_pixels(folds, steps, least_step)
+    findings = []
+    share = float(np.mean(judged))
+    if share < 0.9:
+        findings.append(
+            f"dead pixels can only be told on the {100 * share:.0f} % of the event grid that blinking squares covered in "
+            f"{DEAD_VIEWS} views or more"
+        )
+    return Defects(hot=pixel_list(hot), dead=pixel_list(dead & ~hot)), findings
