@@ -1,0 +1,44 @@
+"""Recipes of board recordings that the calibration study draws, one a seed.
+
+Layouts, target kinds, mirroring, clear site and centroid vary; the nominal module that the estimator is given always
+says that nothing is mirrored and that the clear site is where the data sheet puts it.
+"""
+
+from pathlib import Path
+from typing import Any
+
+from hybridtrack.synthesis.recipe import Recipe, recipe_from_data
+
+LAYOUTS: dict[str, dict[str, Any]] = {
+    "4x4, bin 2": {},
+    "2x2, bin 1": {
+        "colour_array": {"width": 640, "height": 400},
+        "cluster": {"width": 2, "height": 2, "filters": None, "clear_site": [1, 0]},
+        "frame_mode": {"width": 640, "height": 400, "binning": 1},
+    },
+    "4x4, bin 2, omitted": {"frame_mode": {"clear_in_frame": "omitted"}},
+    "4x4, cropped, filled": {
+        "frame_mode": {"width": 600, "height": 380, "crop": [40, 20], "clear_in_frame": "filled"},
+    },
+}
+TARGETS = ("lamp_panel", "bench_screen")
+
+
+def layout_of(seed: int) -> str:
+    """Name of the layout that a seed uses: the first two for half of the seeds each, then the others too."""
+    names = list(LAYOUTS)
+    return names[seed % 2] if seed % 4 < 2 else names[seed // 2 % len(names)]
+
+
+def board_scenario(targets: Path, seed: int, views: int = 12, dwell_s: float = 0.5) -> Recipe:
+    """The recipe of one seed. `targets` is the folder that holds the example targets and modules."""
+    target = TARGETS[seed // 2 % 2]
+    data = {
+        "kind": "board",
+        "name": f"board {seed}",
+        "module": {"file": targets / "wren.module.json", "overrides": LAYOUTS[layout_of(seed)]},
+        "target": {"file": targets / f"{target}.target.json"},
+        "truth": {"mirror_x": "random", "mirror_y": "random", "clear_site": "random", "centroid_px": 0.25},
+        "views": {"count": views, "dwell_s": dwell_s, "tilt_max_deg": 35.0},
+    }
+    return recipe_from_data(data, f"board scenario {seed}")

@@ -1,0 +1,56 @@
+"""`hybridtrack bench`: how far results can be trusted, on synthetic recordings of seeds not used in tuning."""
+
+import sys
+from collections.abc import Callable
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+from hybridtrack.cli.console import console, print_table, report_written, shown_progress
+from hybridtrack.report.page import Table
+
+if TYPE_CHECKING:
+    from hybridtrack.benchmark.study import Study
+
+bench_app = typer.Typer(
+    no_args_is_help=True, help="Measure accuracy and speed on synthetic recordings with known truth."
+)
+
+Seeds = Annotated[int, typer.Option(help="How many recordings, one a seed.")]
+First = Annotated[int, typer.Option(help="First seed; seeds below 1000 were used in tuning.")]
+Out = Annotated[Path | None, typer.Option(help="Folder for the table as CSV.")]
+
+
+def _finish(name: str, run: Callable[[Callable[[str, float], None]], "Study"], out: Path | None) -> None:
+    from hybridtrack.benchmark.study import write_study_csv
+
+    with shown_progress() as progress:
+        study = run(progress)
+    print_table(Table(study.columns, study.rows), study.title)
+    for note in study.notes:
+        console.print(note, soft_wrap=True, markup=False)
+    for check in study.checks:
+        console.print(check.sentence(), soft_wrap=True, markup=False)
+    if out is not None:
+        write_study_csv(study, out / f"{name}.csv")
+        report_written(out / f"{name}.csv")
+    if not study.passed:
+        sys.exit(1)
+
+
+@bench_app.command("calibration")
+def bench_calibration(
+    seeds: Seeds = 10,
+    first_seed: First = 1000,
+    views: Annotated[int, typer.Option(help="Views a recording.")] = 12,
+    dwell_s: Annotated[float, typer.Option(help="Seconds a view.")] = 0.5,
+    out: Out = None,
+) -> None:
+    """Calibrate synthetic modules of several layouts and compare with the truth. Exit code 1 where a limit fails."""
+    from hybridtrack.benchmark.calibration_study import run_calibration_study
+    from hybridtrack.examples import example_folder
+
+    chosen = list(range(first_seed, first_seed + seeds))
+    targets = example_folder("calib_targets")
+    _finish("calibration", lambda progress: run_calibration_study(chosen, targets, views, dwell_s, progress), out)
