@@ -9,6 +9,8 @@ from scipy.signal import welch
 from hybridtrack.recording.arrays import Array
 
 MAINS_FLICKER_HZ = (100.0, 120.0)
+SIDEBAND_SHARE, SIDEBAND_WIDTH = 0.1, 0.12  # of the line's power and frequency
+LEAST_SHARE = 1e-5  # of the strongest line's power; a weaker one changes nothing
 
 
 @dataclass(frozen=True)
@@ -36,13 +38,33 @@ class Spectrum:
 
 
 def _harmonic_of(hz: float, found: list[SpectralLine], sample_hz: float, tolerance_hz: float) -> int:
-    """Number of the harmonic of an earlier line that `hz` is, folded at the sampling rate or not; else 1."""
+    """Number of the harmonic of an earlier line that `hz` is, folded at the sampling rate or not; else 0."""
     for line in found:
         for unfolded in (hz, sample_hz - hz, sample_hz + hz):
             number = round(unfolded / line.hz)
-            if line.harmonic == 1 and number >= 2 and abs(unfolded - number * line.hz) < tolerance_hz:
+            if number >= 1 and abs(unfolded - number * line.hz) < tolerance_hz:
                 return number
-    return 1
+    return 0
+
+
+def _classified(peaks: list[tuple[float, float, float]], sample_hz: float, resolution_hz: float) -> list[SpectralLine]:
+    """Tell lines from their harmonics and sidebands; `peaks` are (hz, power, strength), the strongest first.
+
+    Pauses and changes of view modulate a blink, so that much weaker companions around a line or its harmonics are that
+    line's. Mains flicker is never taken for a companion.
+    """
+    own: list[SpectralLine] = []
+    harmonics: list[SpectralLine] = []
+    for hz, power, strength in peaks:
+        line = SpectralLine(hz, resolution_hz, strength, 1)
+        number = _harmonic_of(hz, own, sample_hz, 2 * resolution_hz)
+        strongest = peaks[0]
+        weak = power < SIDEBAND_SHARE * strongest[1] and not line.is_mains_flicker
+        if number > 1:
+            harmonics.append(SpectralLine(hz, resolution_hz, strength, number))
+        elif number == 0 and not (weak and _harmonic_of(hz, own[:1], sample_hz, SIDEBAND_WIDTH * strongest[0])):
+            own.append(line)
+    return own + harmonics
 
 
 def rate_spectrum(rate: Array, bin_s: float, max_lines: int = 8, min_strength: float = 20.0) -> Spectrum:
@@ -65,18 +87,14 @@ def rate_spectrum(rate: Array, bin_s: float, max_lines: int = 8, min_strength: f
         & (hz[inner] > 10.0)
     )
     resolution = float(hz[1])
-    found: list[SpectralLine] = []
-    for peak in sorted(peaks, key=lambda index: -power[index])[: 4 * max_lines]:
+    found: list[tuple[float, float, float]] = []
+    for peak in sorted(peaks, key=lambda index: -power[index])[: 8 * max_lines]:
+        if power[peak] < LEAST_SHARE * power[peaks].max():
+            break
         low, middle, high = np.log(power[peak - 1 : peak + 2] + 1e-300)
         curvature = low - 2 * middle + high
         offset = 0.5 * (low - high) / curvature if curvature < 0 else 0.0
         line_hz = float(hz[peak] + np.clip(offset, -0.5, 0.5) * resolution)
-        if any(abs(line_hz - other.hz) < 3 * resolution for other in found):
-            continue
-        found.append(SpectralLine(line_hz, resolution, float(strength[peak]), 1))
-    fundamentals: list[SpectralLine] = []
-    for line in sorted(found, key=lambda item: item.hz):
-        harmonic = _harmonic_of(line.hz, fundamentals, 1.0 / bin_s, 2 * resolution)
-        fundamentals.append(SpectralLine(line.hz, resolution, line.strength, harmonic))
-    fundamentals.sort(key=lambda item: (item.harmonic > 1, -item.strength))
-    return Spectrum(hz, power, tuple(fundamentals[:max_lines]))
+        found.append((line_hz, float(power[peak]), float(strength[peak])))
+    lines = _classified(found, 1.0 / bin_s, resolution)
+    return Spectrum(hz, power, tuple(lines[:max_lines]))
