@@ -11,8 +11,13 @@ import hybridtrack.threads  # noqa: F401  before anything that starts a pool
 
 import typer
 
+from hybridtrack.cli.bench_command import bench_app
+from hybridtrack.cli.calibrate_command import calibrate_command
 from hybridtrack.cli.ingest_command import ingest_command
 from hybridtrack.cli.inspect_command import inspect_command
+from hybridtrack.cli.odometry_command import odometry_command
+from hybridtrack.cli.synthesise_command import synthesise_command
+from hybridtrack.cli.track_command import track_command
 from hybridtrack.errors import HybridtrackError
 
 app = typer.Typer(
@@ -27,8 +32,13 @@ app = typer.Typer(
         "A new module usually goes through: inspect, calibrate, track, odometry. Try 'hybridtrack demo' first."
     ),
 )
-app.command("inspect")(inspect_command)
 app.command("ingest")(ingest_command)
+app.command("inspect")(inspect_command)
+app.command("calibrate")(calibrate_command)
+app.command("track")(track_command)
+app.command("odometry")(odometry_command)
+app.command("synthesise")(synthesise_command)
+app.add_typer(bench_app, name="bench")
 
 
 def main() -> None:
