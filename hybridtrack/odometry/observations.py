@@ -1,0 +1,219 @@
+"""From tracks to what each frame saw: rays with their own times and the covariance of each.
+
+Under a rolling shutter every row sees the world from another pose. A view's pose belongs to mid-exposure of its middle
+row; an observation keeps `dt_s`, its own time less that, and the estimators move the pose there. Minimal solvers, which
+know no motion yet, take `rays_at_frame`: the track itself, interpolated between its own samples to the view's time.
+
+An observation's residual is linear in the unit direction n of the point: r = W n with W = L^-1 d(uv)/d(direction) at
+the measured ray b, L L' = covariance in px. A lens sees directions only, so W b = 0, and r is the reprojection error
+over its standard deviation, for any lens and without projecting again.
+"""
+
+from dataclasses import dataclass
+from typing import Protocol
+
+import numpy as np
+
+from hybridtrack.errors import DegenerateDataError
+from hybridtrack.geometry import Lens
+from hybridtrack.module import HybridModule
+from hybridtrack.recording import FrameTable
+
+Array = np.ndarray
+
+NS = 1e-9
+FRAME_SOURCES = ("frame", "both")
+
+
+class TrackTable(Protocol):
+    """The columns of a tracks file that odometry reads; N samples sorted by time, then id."""
+
+    id: Array
+    t_ns: Array
+    uv: Array
+    cov: Array
+    state: Array
+    source: Array
+    states: tuple[str, ...]
+    sources: tuple[str, ...]
+
+
+@dataclass(frozen=True, eq=False)
+class View:
+    """What one frame saw: N rays.
+
+    `t_ns` mid-exposure of the middle row (event clock); `ids` (N,) of tracks; `uv` (N, 2) raw colour px; `dt_s` (N,)
+    own time less t_ns; `rays` (N, 3) unit; `whitening` (N, 2, 3) W of the module docstring; `rays_at_frame` (N, 3)
+    unit, where the track was at t_ns.
+    """
+
+    index: int
+    t_ns: int
+    ids: Array
+    uv: Array
+    dt_s: Array
+    rays: Array
+    whitening: Array
+    rays_at_frame: Array
+
+    def __len__(self) -> int:
+        return len(self.ids)
+
+    def select(self, rows: Array) -> "View":
+        """The view with only some of its rays; `rows` as indices or mask."""
+        return View(self.index, self.t_ns, *(column[rows] for column in self.columns))
+
+    @property
+    def columns(self) -> tuple[Array, ...]:
+        """All per-ray columns, in the order of the constructor."""
+        return self.ids, self.uv, self.dt_s, self.rays, self.whitening, self.rays_at_frame
+
+    @property
+    def ray_sigma_rad(self) -> float:
+        """Median standard deviation of a ray's direction, in one axis."""
+        if not len(self):
+            return float("nan")
+        return float(np.median(1.0 / np.sqrt(0.5 * np.sum(self.whitening**2, axis=(1, 2)))))
+
+
+@dataclass(frozen=True)
+class FrameTimes:
+    """`t_ns` int64 (K,) mid-exposure of each frame's middle row, event clock; `readout_s` from first row to last."""
+
+    t_ns: Array
+    readout_s: float
+
+    @property
+    def interval_s(self) -> float:
+        """Median time between frames."""
+        return float(np.median(np.diff(self.t_ns))) * NS if len(self.t_ns) > 1 else float("inf")
+
+
+def row_times_ns(frames: FrameTable, module: HybridModule, rows: Array) -> Array:
+    """Mid-exposure on the event clock, float64 ns (K, R), of frame rows (R,) in every frame."""
+    timing, mode = module.known_timing(), module.frame_mode
+    order = mode.read_order(rows) if mode.shutter == "rolling" else np.zeros(len(rows))
+    start = timing.exposure_start_ns(frames.t_start_ns[:, None], order[None, :])
+    return start + 0.5 * timing.true_exposure_ns(frames.exposure_ns)[:, None]
+
+
+def frame_times(frames: FrameTable, module: HybridModule) -> FrameTimes:
+    """Times of all frames. Raises NotCalibratedError where the module's clocks are not known."""
+    height = module.frame_mode.height
+    times = row_times_ns(frames, module, np.array([0.0, 0.5 * (height - 1), height - 1.0]))
+    readout = float(np.abs(times[0, 2] - times[0, 0])) * NS if len(times) else 0.0
+    return FrameTimes(np.round(times[:, 1]).astype(np.int64), readout)
+
+
+def whitening_of(lens: Lens, rays: Array, covariance_px: Array, floor_px: float) -> Array:
+    """W (N, 2, 3) of rays (N, 3) whose pixels have covariance (N, 3) as uu, uv, vv, and `floor_px` beside it."""
+    _, by_direction, _ = lens.project_with_jacobians(rays)
+    matrix = np.empty((len(rays), 2, 2))
+    matrix[:, 0, 0] = covariance_px[:, 0] + floor_px**2
+    matrix[:, 0, 1] = matrix[:, 1, 0] = covariance_px[:, 1]
+    matrix[:, 1, 1] = covariance_px[:, 2] + floor_px**2
+    return np.linalg.inv(np.linalg.cholesky(matrix)) @ by_direction
+
+
+def view_of(index: int, t_ns: int, samples: dict[str, Array], lens: Lens, floor_px: float) -> View:
+    """A view from `ids` (N,), `uv`, `uv_at_frame` (N, 2), `dt_s` (N,), `covariance` (N, 3).
+
+    Samples whose position or covariance is not finite, or which the lens does not reach, are left out.
+    """
+    rays = lens.unproject(samples["uv"], allow_outside=True)
+    at_frame = lens.unproject(samples["uv_at_frame"], allow_outside=True)
+    at_frame = np.where(np.isfinite(at_frame).all(axis=1, keepdims=True), at_frame, rays)
+    covariance = samples["covariance"].astype(float)
+    good = np.isfinite(rays).all(axis=1) & np.isfinite(covariance).all(axis=1)
+    good &= (covariance[:, 0] >= 0) & (covariance[:, 0] * covariance[:, 2] >= covariance[:, 1] ** 2 * (1 - 1e-3))
+    rays = rays[good]
+    return View(
+        index,
+        int(t_ns),
+        samples["ids"][good],
+        samples["uv"][good],
+        samples["dt_s"][good],
+        rays,
+        whitening_of(lens, rays, covariance[good], floor_px),
+        at_frame[good],
+    )
+
+
+def _usable(tracks: TrackTable) -> Array:
+    """Indices of samples that are not lost, sorted by track, then time."""
+    lost = [i for i, name in enumerate(tracks.states) if name == "lost"]
+    usable = ~np.isin(tracks.state, lost) & np.isfinite(tracks.uv).all(axis=1)
+    chosen = np.flatnonzero(usable)
+    return chosen[np.lexsort((tracks.t_ns[chosen], tracks.id[chosen]))]
+
+
+def _nearest(t_s: Array, at_s: Array) -> Array:
+    """Index (M,) of the sample in t_s (S,) nearest to each time (M,)."""
+    right = np.clip(np.searchsorted(t_s, at_s), 1, max(len(t_s) - 1, 1))
+    right = np.minimum(right, len(t_s) - 1)
+    left = np.maximum(right - 1, 0)
+    return np.where(at_s - t_s[left] <= t_s[right] - at_s, left, right)
+
+
+def _samples_of_frames(t_s: Array, from_frame: Array, times: FrameTimes, frame_s: Array) -> tuple[Array, Array]:
+    """Frames (M,) that one track with samples at t_s (S,) was seen in, and the sample (M,) taken for each.
+
+    Within the readout around a frame, a sample that comes from a frame goes before one from events alone.
+    """
+    reach = 0.5 * times.readout_s + min(2e-3, 0.25 * times.interval_s)
+    first = np.searchsorted(frame_s, t_s[0] - reach)
+    last = np.searchsorted(frame_s, t_s[-1] + reach, side="right")
+    at_s = frame_s[first:last]
+    chosen = _nearest(t_s, at_s)
+    own = np.flatnonzero(from_frame)
+    if len(own):
+        best = own[_nearest(t_s[own], at_s)]
+        chosen = np.where(np.abs(t_s[best] - at_s) <= reach, best, chosen)
+    seen = np.abs(t_s[chosen] - at_s) <= reach
+    return np.arange(first, last)[seen], chosen[seen]
+
+
+def _interpolated(t_s: Array, uv: Array, at_s: Array) -> Array:
+    """Positions (M, 2) of one track (S,), (S, 2) at times (M,), extended by its end slopes."""
+    if len(t_s) < 2:
+        return np.repeat(uv[:1], len(at_s), axis=0)
+    left = np.clip(np.searchsorted(t_s, at_s) - 1, 0, len(t_s) - 2)
+    span = np.maximum(t_s[left + 1] - t_s[left], 1e-9)
+    share = np.clip((at_s - t_s[left]) / span, -1.0, 2.0)[:, None]
+    return uv[left] * (1.0 - share) + uv[left + 1] * share
+
+
+def gather_views(tracks: TrackTable, times: FrameTimes, lens: Lens, floor_px: float) -> list[View]:
+    """One view for every frame, empty where no track was seen.
+
+    Raises DegenerateDataError where the tracks hold no sample near any frame.
+    """
+    order = _usable(tracks)
+    epoch = int(times.t_ns[0]) if len(times.t_ns) else 0
+    t_s, uv, ids = (tracks.t_ns[order] - epoch) * NS, tracks.uv[order], tracks.id[order]
+    frame_s = (times.t_ns - epoch) * NS
+    wanted = [i for i, name in enumerate(tracks.sources) if name in FRAME_SOURCES]
+    from_frame = np.isin(tracks.source[order], wanted)
+    starts = np.flatnonzero(np.r_[True, np.diff(ids) != 0]) if len(ids) else np.empty(0, np.int64)
+    frames, samples, moved = [], [], []
+    for start, stop in zip(starts, np.r_[starts[1:], len(ids)], strict=True):
+        seen, chosen = _samples_of_frames(t_s[start:stop], from_frame[start:stop], times, frame_s)
+        frames.append(seen)
+        samples.append(start + chosen)
+        moved.append(_interpolated(t_s[start:stop], uv[start:stop], frame_s[seen]))
+    if not frames or not sum(len(f) for f in frames):
+        raise DegenerateDataError("tracks: expected samples within the readout of some frame, got none")
+    frame, sample, at_frame = np.concatenate(frames), np.concatenate(samples), np.concatenate(moved)
+    views = []
+    for index, t_ns in enumerate(times.t_ns):
+        here = np.flatnonzero(frame == index)
+        rows = sample[here]
+        table = {
+            "ids": ids[rows],
+            "uv": uv[rows],
+            "uv_at_frame": at_frame[here],
+            "dt_s": t_s[rows] - frame_s[index],
+            "covariance": tracks.cov[order[rows]],
+        }
+        views.append(view_of(index, int(t_ns), table, lens, floor_px))
+    return views
