@@ -39,7 +39,7 @@ def path_figure(result: OdometryResult) -> Figure | None:
         for segment in np.unique(trajectory.segment[trajectory.found]):
             part = trajectory.world_from_camera[trajectory.segment == segment, :3, 3]
             sheet.axes.plot(part[:, across], part[:, down], color=SERIES[0])
-        poses = {node: result.graph.pose(node)[:3, 3] for node in result.graph.nodes} if result.loops else {}
+        poses = {pose.id: pose.world_from_camera[:3, 3] for pose in result.graph.poses}
         for loop in result.loops:
             ends = [poses.get(loop.loop.from_id), poses.get(loop.loop.to_id)]
             if loop.used and all(end is not None for end in ends):
