@@ -128,8 +128,8 @@ def block_spectra(recording: Recording, shape: tuple[int, int], nominal_hz: floa
     return BlockSpectra(origin, np.array(starts), hz, np.array(powers), fine_hz, np.array(squares), np.array(sums))
 
 
-def spectral_lines(spectra: BlockSpectra) -> list[tuple[float, float]]:
-    """Lines (Hz, power over the spectrum around it) above 20 Hz, strongest first, in the sum over all blocks."""
+def spectral_lines(spectra: BlockSpectra) -> list[tuple[float, float, float]]:
+    """Lines (Hz, power over the spectrum around it, power) above 20 Hz, strongest first, in the sum over all blocks."""
     power = spectra.power.sum(axis=0)
     lines = []
     for k in range(int(20.0 / spectra.hz[1]), len(power) - 3):
@@ -141,8 +141,7 @@ def spectral_lines(spectra: BlockSpectra) -> list[tuple[float, float]]:
         if ratio > LINE_RATIO:
             weights = power[k - 1 : k + 2]
             lines.append((float(weights @ spectra.hz[k - 1 : k + 2] / weights.sum()), ratio, float(power[k])))
-    lines.sort(key=lambda line: -line[2])
-    return [(hz, ratio) for hz, ratio, _ in lines]
+    return sorted(lines, key=lambda line: -line[2])
 
 
 def refine_frequency(spectra: BlockSpectra) -> tuple[float, float]:
@@ -177,10 +176,10 @@ def resolve_half_turn(spectra: BlockSpectra, hz: float, phase_of_squares: float)
     return 0.5 * phase_of_squares + (0.0 if side >= 0 else np.pi)
 
 
-def require_line(spectra: BlockSpectra, lines: list[tuple[float, float]], nominal_hz: float) -> None:
+def require_line(spectra: BlockSpectra, lines: list[tuple[float, float, float]], nominal_hz: float) -> None:
     """Raise NoBlinkError unless a line stands near the nominal rate in the sum, or strongly in some block."""
     close = SEARCH * nominal_hz + spectra.hz[1]
-    if any(abs(hz - nominal_hz) < close for hz, _ in lines):
+    if any(abs(hz - nominal_hz) < close for hz, *_ in lines):
         return
     near = np.abs(spectra.hz - nominal_hz) < close
     around = (np.abs(spectra.hz - nominal_hz) < close + 12 * spectra.hz[1]) & ~near & (spectra.hz > 10.0)
@@ -193,13 +192,23 @@ def require_line(spectra: BlockSpectra, lines: list[tuple[float, float]], nomina
     )
 
 
-def flicker_lines(lines: list[tuple[float, float]], blink_hz: float, resolution_hz: float) -> tuple[float, ...]:
-    """Lines that are no harmonic of the blinking, nor aliased into it by the bins."""
+def flicker_lines(lines: list[tuple[float, float, float]], blink_hz: float, resolution_hz: float) -> tuple[float, ...]:
+    """Lines that are no harmonic of the blinking, nor one that the bins alias.
+
+    A harmonic above half the sampling rate shows at its alias with at most its power before, less what averaging over
+    a bin leaves: sinc^2. Only a line well above that is another light's.
+    """
     sampling_hz = 1e9 / BIN_NS
-    # Higher harmonics are averaged away by the bins.
-    harmonics = blink_hz * np.arange(1, max(2, int(0.7 * sampling_hz / blink_hz)) + 1)
+    harmonics = blink_hz * np.arange(1, int(4 * sampling_hz / blink_hz))
     folded = np.abs((harmonics + sampling_hz / 2) % sampling_hz - sampling_hz / 2)
-    return tuple(hz for hz, _ in lines if np.min(np.abs(folded - hz)) > 1.6 * resolution_hz)
+    strongest = max((power for hz, _, power in lines if np.min(np.abs(harmonics[:3] - hz)) < 1.6 * resolution_hz), default=0.0)
+    limit = np.where(harmonics < sampling_hz / 2, np.inf, 4.0 * strongest * np.sinc(harmonics / sampling_hz) ** 2)
+    found = []
+    for hz, _, power in lines:
+        explained = limit[np.abs(folded - hz) < 1.6 * resolution_hz]
+        if power > explained.sum():
+            found.append(hz)
+    return tuple(found)
 
 
 def find_blink(recording: Recording, shape: tuple[int, int], target: Target) -> Blink:

@@ -9,6 +9,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from hybridtrack.calibration.demodulation_kernels import fit_row_lines
+
 Array = np.ndarray
 
 LEAST_SPREAD = 0.02  # least variance of f over the frames for a row to be resolved
@@ -30,32 +32,43 @@ class FrameDemodulation:
         """Light of the blinking alone (H, W): positive in set A, negative in a counterphase set B."""
         return self.bright_dn - self.dark_dn
 
+    def swapped(self) -> "FrameDemodulation":
+        """The same with the names of the two states exchanged."""
+        return FrameDemodulation(self.dark_dn, self.bright_dn, self.dark_sigma_dn, self.bright_sigma_dn, self.noise_dn, self.kept)
 
-def row_lines(light: Array, share: Array) -> tuple[Array, Array, Array, Array]:
-    """Fit D + f K: D, K (H, W), the rows' inverse normal matrices (H, 2, 2), and residuals (N, H, W).
 
-    `light` (N, H, W), `share` (N, H).
-    """
-    f = np.where(np.isfinite(share), share, 0.0)
-    mean = f.mean(axis=0)
-    spread = np.mean((f - mean) ** 2, axis=0)
-    resolved = spread > LEAST_SPREAD
-    safe = np.where(resolved, spread, 1.0)
-    centre = light.mean(axis=0)
-    swing = np.einsum("nh,nhw->hw", f - mean, light - centre) / (safe * len(f))[:, None]
-    swing = np.where(resolved[:, None], swing, np.nan)
-    dark = centre - mean[:, None] * swing
-    residual = light - dark - f[:, :, None] * swing
-    n = len(f)
-    inverse = np.empty((len(mean), 2, 2))
-    inverse[:, 1, 1] = 1.0 / (safe * n)
-    inverse[:, 0, 1] = inverse[:, 1, 0] = -mean / (safe * n)
-    inverse[:, 0, 0] = 1.0 / n + mean**2 / (safe * n)
-    return dark, swing, inverse, residual
+@dataclass(frozen=True)
+class RowLines:
+    """`dark` D and `swing` K (H, W), `variance` of a sample about its line (H, W), `frame_rms` (N,) of the residuals of each
+    frame, and the rows' inverse normal matrices `inverse` (H, 2, 2) for (D, K)."""
+
+    dark: Array
+    swing: Array
+    variance: Array
+    frame_rms: Array
+    inverse: Array
+
+
+def row_lines(light: Array, share: Array) -> RowLines:
+    """Fit D + f K to `light` (N, H, W) with `share` f (N, H); NaN where a row's shares are too alike."""
+    count, height, width = light.shape
+    dark, swing, square = (np.empty((height, width)) for _ in range(3))
+    frame_square = np.empty((height, count))
+    share = np.ascontiguousarray(share, dtype=float)
+    fit_row_lines(np.ascontiguousarray(light), share, LEAST_SPREAD, dark, swing, square, frame_square)
+    mean, spread = share.mean(axis=0), np.maximum(share.var(axis=0), 1e-12)
+    inverse = np.empty((height, 2, 2))
+    inverse[:, 1, 1] = 1.0 / (spread * count)
+    inverse[:, 0, 1] = inverse[:, 1, 0] = -mean / (spread * count)
+    inverse[:, 0, 0] = 1.0 / count + mean**2 / (spread * count)
+    known = np.isfinite(frame_square).any(axis=1)
+    frame_rms = np.sqrt(np.nanmean(frame_square[known], axis=0)) if np.any(known) else np.full(count, np.nan)
+    return RowLines(dark, swing, square / max(count - 2, 1), frame_rms, inverse)
 
 
 def photon_transfer(mean: Array, variance: Array) -> tuple[float, float]:
     """Line variance = a + b mean through medians over bins of the mean; both at least zero, a above quantisation."""
+    mean, variance = mean[::2, ::2].ravel(), variance[::2, ::2].ravel()
     usable = np.isfinite(mean) & np.isfinite(variance)
     if np.count_nonzero(usable) < 100:
         return 1.0, 0.0
@@ -70,26 +83,26 @@ def photon_transfer(mean: Array, variance: Array) -> tuple[float, float]:
     return max(float(floor), 1e-6), float(slope)
 
 
-def steady_frames(residual: Array) -> Array:
-    """Mask (N,) of frames whose residual (N, H, W) is not far above the others': a frame that overlaps a transit is."""
-    size = np.sqrt(np.nanmean(residual.astype(np.float64) ** 2, axis=(1, 2)))
-    return size <= 2.0 * np.median(size) + 1e-9
+def steady_frames(frame_rms: Array) -> Array:
+    """Mask (N,) of frames whose residual is not far above the others': a frame that overlaps a transit is."""
+    return frame_rms <= 2.0 * np.median(frame_rms) + 1e-9
 
 
 def demodulate_frames(light: Array, share: Array) -> FrameDemodulation:
     """Demodulate a view's linear light (N, H, W), NaN where saturated, with the shares f (N, H)."""
     kept = np.ones(len(light), bool)
-    for _ in range(3):
-        dark, swing, inverse, residual = row_lines(light[kept], share[kept])
-        steady = steady_frames(residual)
+    lines = row_lines(light, share)
+    for _ in range(2):
+        steady = steady_frames(lines.frame_rms)
         if np.all(steady) or np.count_nonzero(steady) < 4:
             break
         kept[np.flatnonzero(kept)[~steady]] = False
-    freedom = max(np.count_nonzero(kept) - 2, 1)
-    variance = np.sum(residual.astype(np.float64) ** 2, axis=0) / freedom
-    centre = dark + share[kept].mean(axis=0)[:, None] * swing
-    floor, slope = photon_transfer(centre, variance)
+        lines = row_lines(light[kept], share[kept])
+    centre = lines.dark + share[kept].mean(axis=0)[:, None] * lines.swing
+    floor, slope = photon_transfer(centre, lines.variance)
     noise = np.sqrt(floor + slope * np.maximum(np.nan_to_num(centre), 0.0))
+    inverse = lines.inverse
     bright_factor = np.sqrt(inverse[:, 0, 0] + 2 * inverse[:, 0, 1] + inverse[:, 1, 1])
-    pictures = (dark + swing, dark, noise * bright_factor[:, None], noise * np.sqrt(inverse[:, 0, 0])[:, None], noise)
+    dark_factor = np.sqrt(inverse[:, 0, 0])
+    pictures = (lines.dark + lines.swing, lines.dark, noise * bright_factor[:, None], noise * dark_factor[:, None], noise)
     return FrameDemodulation(*(picture.astype(np.float32) for picture in pictures), kept)

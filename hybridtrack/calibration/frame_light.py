@@ -18,14 +18,15 @@ GAMMA = 2.2
 
 def linear_dn(image: Array, mode: FrameMode) -> Array:
     """Light above black (H, W) float32 in DN of a linear response, from a picture (H, W) or (H, W, 3); NaN if saturated."""
-    dn = image.astype(np.float32)
-    saturated = dn >= mode.white_dn
-    light = dn - np.float32(mode.black_dn)
+    # A picture has few levels: each is turned once.
+    levels = np.arange(np.iinfo(image.dtype).max + 1, dtype=np.float32)
+    light = levels - np.float32(mode.black_dn)
     if mode.response == "gamma":
         span = np.float32(mode.white_dn - mode.black_dn)
         light = span * (np.maximum(light, 0.0) / span) ** np.float32(GAMMA)
-    light = np.where(saturated, np.float32(np.nan), light)
-    return light.mean(axis=2) if light.ndim == 3 else light
+    light[levels >= mode.white_dn] = np.nan
+    turned = light[image]
+    return turned.mean(axis=2) if turned.ndim == 3 else turned
 
 
 def mosaic_period(module: HybridModule) -> tuple[int, int]:

@@ -231,9 +231,13 @@ def fit_frames(settings: FrameSettings, recording: Recording, views: list[View],
     agreement = agree(settings, demodulated, amplitudes)
     if agreement.correlation < 0:
         clocks = swapped(clocks, settings.blink.period_ns)
+        demodulated = [None if picture is None else picture.swapped() for picture in demodulated]
     readout_ns = clocks.line_time_ns * settings.nominal.frame_mode.height
-    frames = [frames_of_view(table, view, clocks.offset_ns, readout_ns) for view in views]
-    demodulated = [demodulate_view(settings, recording, clocks, chosen) for chosen in frames]
+    first_choice, frames = frames, [frames_of_view(table, view, clocks.offset_ns, readout_ns) for view in views]
+    demodulated = [
+        picture if np.array_equal(before, chosen) else demodulate_view(settings, recording, clocks, chosen)
+        for picture, before, chosen in zip(demodulated, first_choice, frames, strict=True)
+    ]
     rows = second_rows(settings, recording, clocks, frames, demodulated)
     fit, findings = final_clocks(settings, rows, clocks)
     demodulated = [demodulate_view(settings, recording, fit.clocks, chosen) for chosen in frames]

@@ -46,10 +46,10 @@ def singular_row_signals(light: Array, signed: bool) -> tuple[Array, Array]:
 
     For `signed` views (all pixels brighten together) the sign makes the row's sum of weights positive.
     """
-    rows = np.nan_to_num(np.moveaxis(light, 0, 1).astype(np.float64))
-    rows[:, :, :] *= np.all(np.isfinite(light), axis=0)[:, None, :]
+    known = np.all(np.isfinite(light), axis=0)
+    rows = np.where(known[:, None, :], np.moveaxis(light, 0, 1), np.float32(0.0))
     centred = rows - rows.mean(axis=1, keepdims=True)
-    values, vectors = np.linalg.eigh(centred @ np.swapaxes(centred, 1, 2))
+    values, vectors = np.linalg.eigh((centred @ np.swapaxes(centred, 1, 2)).astype(np.float64))
     leading, second = values[:, -1], np.maximum(values[:, -2], 1e-12)
     weights = np.einsum("hnw,hn->hw", centred, vectors[:, :, -1]) / np.sqrt(np.maximum(leading, 1e-12))[:, None]
     if signed:
@@ -64,13 +64,14 @@ def singular_row_signals(light: Array, signed: bool) -> tuple[Array, Array]:
 def weighted_row_signals(light: Array, swing: Array, sigma: Array) -> tuple[Array, Array]:
     """Signals (H, N) and deviations (H,) with weights `swing` / `sigma`^2 (H, W): the signal is that of one pixel."""
     usable = np.isfinite(swing) & np.isfinite(sigma) & np.all(np.isfinite(light), axis=0)
-    safe = np.where(usable & (sigma > 0), sigma, np.inf)
-    weights = np.nan_to_num(np.where(usable, swing, 0.0)) / safe**2
+    usable &= sigma > 0
+    safe = np.where(usable, sigma, 1.0)
+    weights = np.where(usable, swing, 0.0) / safe**2
     # Pixels that don't blink carry noise only.
-    weights[np.abs(np.nan_to_num(swing)) < 4.0 * safe] = 0.0
+    weights[np.abs(weights) * safe < 4.0] = 0.0
     total = np.abs(weights).sum(axis=1)
-    signal = np.einsum("nhw,hw->hn", np.nan_to_num(light).astype(np.float64), weights)
-    variance = np.sum(np.where(weights != 0, weights * safe, 0.0) ** 2, axis=1)
+    signal = np.einsum("nhw,hw->hn", np.nan_to_num(light, copy=False), weights)
+    variance = np.sum((weights * safe) ** 2, axis=1)
     with np.errstate(divide="ignore", invalid="ignore"):
         return signal / np.maximum(total, 1e-300)[:, None], np.where(total > 0, np.sqrt(variance) / total, np.inf)
 
