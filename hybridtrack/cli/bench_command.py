@@ -54,3 +54,22 @@ def bench_calibration(
     chosen = list(range(first_seed, first_seed + seeds))
     targets = example_folder("calib_targets")
     _finish("calibration", lambda progress: run_calibration_study(chosen, targets, views, dwell_s, progress), out)
+
+
+@bench_app.command("odometry")
+def bench_odometry(
+    seeds: Seeds = 3,
+    first_seed: First = 1000,
+    recipe: Annotated[str, typer.Option(help="Greenhouse recipe in the folder sequences.")] = "greenhouse_lap",
+    out: Out = None,
+) -> None:
+    """Calibrate modules from a board, run laps of the greenhouse with them, and compare with the truth.
+
+    Frames alone and hybrid stand side by side. Exit code 1 where a limit fails.
+    """
+    from hybridtrack.benchmark.odometry_study import run_odometry_study
+    from hybridtrack.examples import example_folder
+
+    chosen = list(range(first_seed, first_seed + seeds))
+    sequences = example_folder("sequences")
+    _finish("odometry", lambda progress: run_odometry_study(chosen, sequences, recipe, progress), out)
