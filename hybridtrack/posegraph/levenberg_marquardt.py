@@ -115,50 +115,66 @@ class _System:
         return by_pose, float(step @ (damping * self._diagonal * step - self._gradient))
 
 
-def _chi_squares(problem: PoseProblem, poses: Array) -> Array:
+@dataclass(frozen=True, eq=False)
+class _State:
+    """Poses (N, 4, 4) with their chi-squares (M,) and cost."""
+
+    poses: Array
+    chi_squares: Array
+    cost: float
+
+
+def _evaluated(problem: PoseProblem, poses: Array, weighting: WeightedCost) -> _State:
     with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
-        return np.sum(residuals(problem, poses) ** 2, axis=1)
+        chi_squares = np.sum(residuals(problem, poses) ** 2, axis=1)
+    return _State(poses, chi_squares, weighting.total(chi_squares))
 
 
-def _is_converged(predicted: float, cost: float, damping: float, options: SolveOptions) -> bool:
-    return damping <= GAUSS_NEWTON_DAMPING and predicted <= NEGLIGIBLE_CHI_SQUARE + options.relative_decrease * cost
+def _is_last(predicted: float, cost: float, damping: float, lowered: bool, options: SolveOptions) -> bool:
+    """Whether a step that was predicted to lower the cost so little ends the search."""
+    negligible = predicted <= NEGLIGIBLE_CHI_SQUARE + options.relative_decrease * cost
+    at_rounding = not lowered and predicted <= ROUNDING_SHARE * cost
+    return damping <= GAUSS_NEWTON_DAMPING and (negligible or at_rounding)
+
+
+def _search(
+    problem: PoseProblem, state: _State, weighting: WeightedCost, options: SolveOptions, equations: NormalEquations
+) -> tuple[_State, str, int]:
+    """Best state found, "converged" or "stalled", and the number of iterations."""
+    damping, growth = FIRST_DAMPING, 2.0
+    system: _System | None = None
+    for iteration in range(1, options.max_iterations + 1):
+        system = system or _System(equations, linearise(problem, state.poses), weighting, state.chi_squares)
+        step, predicted = system.step(damping)
+        lowered = False
+        if step is not None:
+            before, tried = state, _evaluated(problem, moved(problem, state.poses, step), weighting)
+            lowered = tried.cost < before.cost
+            if lowered:
+                state, system = tried, None
+            if _is_last(predicted, before.cost, damping, lowered, options):
+                return state, "converged", iteration
+        if lowered:
+            gain = (before.cost - state.cost) / predicted
+            damping = max(damping * max(1.0 / 3.0, 1.0 - (2.0 * gain - 1.0) ** 3), SMALLEST_DAMPING)
+            growth = 2.0
+        else:
+            damping, growth = damping * growth, growth * 2.0
+            if damping > LARGEST_DAMPING:
+                return state, "stalled", iteration
+    return state, "stalled", options.max_iterations
 
 
 def minimise(
-    problem: PoseProblem,
-    start: Array,
-    weighting: WeightedCost,
-    options: SolveOptions,
-    equations: NormalEquations,
+    problem: PoseProblem, start: Array, weighting: WeightedCost, options: SolveOptions, equations: NormalEquations
 ) -> Minimum:
     """Minimise the weighted cost over the free poses, from `start` (N, 4, 4)."""
-    poses, chi_squares = start, _chi_squares(problem, start)
-    cost = weighting.total(chi_squares)
-    status = "stalled" if np.isfinite(cost) else "diverged"
-    if problem.fixed.all() and status == "stalled":
+    state, iterations = _evaluated(problem, start, weighting), 0
+    if not np.isfinite(state.cost):
+        status = "diverged"
+    elif problem.fixed.all():
         status = "converged"
-    damping, growth, iterations = FIRST_DAMPING, 2.0, 0
-    system: _System | None = None
-    while status == "stalled" and iterations < options.max_iterations and damping < LARGEST_DAMPING:
-        iterations += 1
-        system = system or _System(equations, linearise(problem, poses), weighting, chi_squares)
-        step, predicted = system.step(damping)
-        if step is not None:
-            if _is_converged(predicted, cost, damping, options):
-                status = "converged"
-                break
-            trial = moved(problem, poses, step)
-            trial_chi_squares = _chi_squares(problem, trial)
-            trial_cost = weighting.total(trial_chi_squares)
-            if trial_cost < cost:
-                gain = (cost - trial_cost) / predicted
-                poses, chi_squares, cost, system = trial, trial_chi_squares, trial_cost, None
-                damping = max(damping * max(1.0 / 3.0, 1.0 - (2.0 * gain - 1.0) ** 3), SMALLEST_DAMPING)
-                growth = 2.0
-                continue
-            if damping <= GAUSS_NEWTON_DAMPING and predicted <= ROUNDING_SHARE * cost:
-                status = "converged"
-                break
-        damping, growth = damping * growth, growth * 2.0
-    poses = np.where(problem.fixed[:, None, None], poses, problem.group.orthonormal(poses))
-    return Minimum(poses, weighting.weights(chi_squares), chi_squares, status, iterations)
+    else:
+        state, status, iterations = _search(problem, state, weighting, options, equations)
+    poses = np.where(problem.fixed[:, None, None], state.poses, problem.group.orthonormal(state.poses))
+    return Minimum(poses, weighting.weights(state.chi_squares), state.chi_squares, status, iterations)

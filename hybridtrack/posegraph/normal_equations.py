@@ -1,34 +1,21 @@
 """Sparse normal equations of a pose problem, assembled without loops and factorised in a fill-reducing order.
 
-The order comes from the pattern of poses, not of single numbers: SuperLU's minimum-degree ordering of the N x N pattern
-gives a permutation of poses, the d x d blocks are laid out in it, and the factorisation keeps that order (NATURAL). The
-search then works on a matrix d^2 times smaller, which on long laps is several times faster than ordering the full
-matrix.
+The order comes from the pattern of poses, not of single numbers (`ordering.py`): the d x d blocks are laid out in it,
+and the factorisation keeps it (NATURAL). The search for it works on a matrix d^2 times smaller, which on long laps is
+several times faster than ordering the full matrix.
 """
 
 import warnings
 from typing import Any
 
 import numpy as np
-from scipy.sparse import bsr_matrix, coo_matrix, csc_matrix, csr_matrix
+from scipy.sparse import bsr_matrix, csc_matrix, csr_matrix
 from scipy.sparse.linalg import MatrixRankWarning, splu
 
+from hybridtrack.posegraph.ordering import elimination_order
 from hybridtrack.posegraph.problem import Linearisation, PoseProblem
 
 Array = np.ndarray
-
-
-def minimum_degree_order(count: int, a: Array, b: Array) -> Array:
-    """Position (count,) of every row in a minimum-degree elimination order of the graph with edges a - b."""
-    if count == 0:
-        return np.zeros(0, dtype=np.int64)
-    ones = np.ones(len(a))
-    pattern = coo_matrix((np.r_[-ones, -ones], (np.r_[a, b], np.r_[b, a])), shape=(count, count)).tocsr()
-    degree = np.asarray(abs(pattern).sum(axis=1)).ravel()
-    dominant = (pattern + coo_matrix((degree + 1.0, (np.arange(count), np.arange(count))))).tocsc()
-    return splu(
-        dominant, permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0, options={"SymmetricMode": True}
-    ).perm_c.astype(np.int64)
 
 
 class NormalEquations:
@@ -43,7 +30,7 @@ class NormalEquations:
         self.count = int(free.sum())
         index = np.where(free, np.cumsum(free) - 1, -1)
         inner = free[problem.a] & free[problem.b]
-        order = minimum_degree_order(self.count, index[problem.a[inner]], index[problem.b[inner]])
+        order = elimination_order(self.count, index[problem.a[inner]], index[problem.b[inner]])
         self.position = np.full(len(free), -1, dtype=np.int64)
         self.position[free] = order
         self._order = order

@@ -69,8 +69,8 @@ def gauge(graph: PoseGraph, indices: Iterable[int]) -> set[int]:
             if component_of_segment.setdefault(pose.segment, number) != number:
                 first = min(members, key=lambda p: (p.t_ns, p.id))
                 raise DegenerateDataError(
-                    f"pose graph: expected the poses of segment {pose.segment} to be tied together by constraints, "
-                    f"got a part of {len(members)} poses around pose {first.id} that is not connected to the rest"
+                    f"pose graph: expected constraints that tie segment {pose.segment} together, "
+                    f"got {len(members)} of its poses from {first.id} on not connected to the rest"
                 )
         if WORLD not in component:
             held.add(min(members, key=lambda p: (p.t_ns, p.id)).id)

@@ -1,4 +1,21 @@
-"""Solve a pose graph with every constraint that is not rejected, and say how far the result can be trusted."""
+"""Solve a pose graph with every constraint that is not rejected, and say how far the result can be trusted.
+
+>>> import numpy as np
+>>> graph = PoseGraph()
+>>> for i in range(3):
+...     graph.add_pose(i, 1000 * i, np.eye(4))
+>>> step = np.eye(4)
+>>> step[0, 3] = 1.0
+>>> index = graph.add_constraint(0, 1, "odometry", step, np.eye(6))
+>>> solve(graph)
+Traceback (most recent call last):
+hybridtrack.errors.DegenerateDataError: pose graph: expected constraints that tie segment 0 together, \
+got 1 of its poses from 2 on not connected to the rest
+>>> index = graph.add_constraint(1, 2, "odometry", step, np.eye(6))
+>>> result = solve(graph)
+>>> result.status, result.graph.pose(2).world_from_camera[:3, 3].round(9).tolist()
+('converged', [2.0, 0.0, 0.0])
+"""
 
 from collections.abc import Iterable
 from dataclasses import dataclass, replace

@@ -70,5 +70,5 @@ def test_the_tree_keeps_odometry_and_the_most_certain_of_doubles(laps):
 def test_refuses_a_torn_segment(laps, start):
     """A chain with a link left out is two parts of one segment."""
     graph = laps(10, lap=50).graph
-    with pytest.raises(DegenerateDataError, match="segment 0 to be tied together"):
+    with pytest.raises(DegenerateDataError, match="tie segment 0 together"):
         start(graph, [i for i in range(9) if i != 4])

@@ -55,7 +55,7 @@ def test_refuses_constraints_left_without_weight(laps):
     weights = result.weights.copy()
     weights[2] = 0.0
     broken = type(result)(result.graph, result.status, 1, 0.0, 0, weights)
-    with pytest.raises(DegenerateDataError, match="segment 0 to be tied together"):
+    with pytest.raises(DegenerateDataError, match="tie segment 0 together"):
         Marginals(broken)
 
 

@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from hybridtrack.posegraph import SE3, SIM3
-from hybridtrack.posegraph.normal_equations import NormalEquations, minimum_degree_order
+from hybridtrack.posegraph.normal_equations import NormalEquations
 from hybridtrack.posegraph.problem import build_problem, linearise
 
 
@@ -55,13 +55,6 @@ def test_order_is_a_permutation_that_keeps_fill_low(laps):
     ordered = equations.factorised(equations.hessian_blocks(line, np.ones(len(problem.a)))).L.nnz
     dense_band = 399 * 6 * 40 * 6
     assert ordered < 0.5 * dense_band
-
-
-def test_order_of_nothing_and_of_loners():
-    """No pose, and poses without neighbours, have an order too."""
-    none = np.zeros(0, dtype=np.int64)
-    assert minimum_degree_order(0, none, none).tolist() == []
-    assert sorted(minimum_degree_order(3, none, none).tolist()) == [0, 1, 2]
 
 
 def test_singular_equations_give_none(laps):
