@@ -4,6 +4,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from hybridtrack.benchmark.metrics import map_displacement
 from hybridtrack.module import HybridModule
 
 
@@ -11,7 +12,7 @@ from hybridtrack.module import HybridModule
 class CalibrationScore:
     """Errors of one calibration, estimate minus truth.
 
-    `map_rms_px`: displacement of the event map over all event pixels, colour px. `focal_percent`: the worse of fx and
+    `map_rms_px`: displacement of the event map over the field, colour px. `focal_percent`: the worse of fx and
     fy. `offset_us`: frame offset against true offset plus true event latency, where the estimate includes it.
     `offset_sigmas`: the same in stated deviations. Thresholds in percent of truth.
     """
@@ -33,11 +34,6 @@ def _percent(estimate: float | None, truth: float | None) -> float:
     if estimate is None or not truth:
         return float("nan")
     return 100.0 * (estimate / truth - 1.0)
-
-
-def map_displacement(estimate: HybridModule, truth: HybridModule) -> np.ndarray:
-    """Displacement (rows, columns, 2) in colour px of the estimated event map against the true one."""
-    return estimate.event_pixel_positions() - truth.event_pixel_positions()
 
 
 def _share(found: list[tuple[int, int]], true: list[tuple[int, int]]) -> float:

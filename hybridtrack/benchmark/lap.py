@@ -14,13 +14,14 @@ from hybridtrack.benchmark.calibration_score import CalibrationScore, score_cali
 from hybridtrack.benchmark.metrics import TrajectoryError, absolute_trajectory_error, poses_at
 from hybridtrack.calibration import CalibrationResult, calibrate
 from hybridtrack.errors import DegenerateDataError, OptionError
-from hybridtrack.odometry import OdometryOptions, OdometryResult, run_odometry
+from hybridtrack.odometry import OdometryOptions, OdometryResult, odometry_of_tracks
 from hybridtrack.recording import Recording
 from hybridtrack.recording.truth import Truth, read_truth
 from hybridtrack.synthesis.board import BoardRecipe
 from hybridtrack.synthesis.generate import generate
 from hybridtrack.synthesis.greenhouse import GreenhouseRecipe
 from hybridtrack.synthesis.recipe import load_recipe
+from hybridtrack.tracking import TrackerOptions, Tracks, track_recording
 
 Progress = Callable[[str, float], None]
 
@@ -79,15 +80,23 @@ def score_path(result: OdometryResult, truth: Truth) -> TrajectoryError:
     return absolute_trajectory_error(trajectory.world_from_camera[chosen][inside], true[inside])
 
 
-def run_lap(
-    recordings: LapRecordings, calibration: CalibrationResult, mode: str, progress: Progress
-) -> tuple[OdometryResult, TrajectoryError]:
-    """Odometry over the lap with the estimated module, then its score."""
+@dataclass(frozen=True)
+class LapRun:
+    """Tracks, odometry and the error of its path, for one mode."""
+
+    tracks: Tracks
+    odometry: OdometryResult
+    error: TrajectoryError
+
+
+def run_lap(recordings: LapRecordings, calibration: CalibrationResult, mode: str, progress: Progress) -> LapRun:
+    """Tracks and odometry over the lap with the estimated module, then their score."""
+
+    def show(stage: str, part: float) -> None:
+        progress(f"{mode}: {stage}", part)
+
+    module = calibration.module
     with Recording.open(recordings.lap) as opened:
-        result = run_odometry(
-            opened,
-            calibration.module,
-            OdometryOptions(mode=mode),
-            lambda stage, part: progress(f"{mode}: {stage}", part),
-        )
-    return result, score_path(result, read_truth(recordings.lap))
+        tracks = track_recording(opened, module, TrackerOptions(mode=mode), progress=show)  # type: ignore[arg-type]
+        result = odometry_of_tracks(tracks, opened, module, OdometryOptions(mode=mode), show)
+    return LapRun(tracks, result, score_path(result, read_truth(recordings.lap)))

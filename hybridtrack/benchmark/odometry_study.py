@@ -7,7 +7,7 @@ from tempfile import TemporaryDirectory
 
 import numpy as np
 
-from hybridtrack.benchmark.lap import calibrate_board, make_recordings, run_lap
+from hybridtrack.benchmark.lap import LapRun, calibrate_board, make_recordings, run_lap
 from hybridtrack.benchmark.study import Check, Study
 from hybridtrack.errors import HybridtrackError
 
@@ -27,6 +27,15 @@ COLUMNS = (
 MODES = ("hybrid", "frames")
 
 
+def _row(seed: int, run: LapRun, mode: str, seconds: float) -> tuple[str, ...]:
+    error, summary = run.error, run.odometry.summary
+    lost = int(np.count_nonzero(~run.odometry.trajectory.found))
+    return (
+        str(seed), mode, f"{error.path_m:.2f}", f"{error.percent:.3f}", f"{1e3 * error.rms_m:.1f}",
+        f"{error.turn_rms_deg:.3f}", str(lost), str(summary["segments"]), str(summary["loops_used"]), f"{seconds:.1f}",
+    )  # fmt: skip
+
+
 def run_odometry_study(seeds: list[int], sequences: Path, lap_recipe: str, progress: Progress) -> Study:
     """Synthesise, calibrate and run one lap a seed, in both modes. `sequences` is the folder of recipes."""
     rows: list[tuple[str, ...]] = []
@@ -43,19 +52,14 @@ def run_odometry_study(seeds: list[int], sequences: Path, lap_recipe: str, progr
             for mode in MODES:
                 began = time.perf_counter()
                 try:
-                    result, error = run_lap(recordings, calibration, mode, show)
+                    run = run_lap(recordings, calibration, mode, show)
                 except HybridtrackError as refusal:
                     percents[mode].append(float("nan"))
                     rows.append((str(seed), mode, f"refused: {refusal}", *[""] * 7))
                     continue
-                percents[mode].append(error.percent)
-                lost = int(np.count_nonzero(~result.trajectory.found))
-                loops, segments = result.summary["loops_used"], result.summary["segments"]
-                closed += mode == "hybrid" and loops > 0
-                rows.append((
-                    str(seed), mode, f"{error.path_m:.2f}", f"{error.percent:.3f}", f"{1e3 * error.rms_m:.1f}",
-                    f"{error.turn_rms_deg:.3f}", str(lost), str(segments), str(loops), f"{time.perf_counter() - began:.1f}",
-                ))  # fmt: skip
+                percents[mode].append(run.error.percent)
+                closed += mode == "hybrid" and run.odometry.summary["loops_used"] > 0
+                rows.append(_row(seed, run, mode, time.perf_counter() - began))
     return Study(
         title=f"Odometry over {len(seeds)} synthetic greenhouse laps ({lap_recipe}), each with its calibrated module",
         columns=COLUMNS,

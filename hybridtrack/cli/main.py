@@ -13,6 +13,7 @@ import typer
 
 from hybridtrack.cli.bench_command import bench_app
 from hybridtrack.cli.calibrate_command import calibrate_command
+from hybridtrack.cli.demo_command import demo_command
 from hybridtrack.cli.ingest_command import ingest_command
 from hybridtrack.cli.inspect_command import inspect_command
 from hybridtrack.cli.odometry_command import odometry_command
@@ -39,6 +40,7 @@ app.command("track")(track_command)
 app.command("odometry")(odometry_command)
 app.command("synthesise")(synthesise_command)
 app.add_typer(bench_app, name="bench")
+app.command("demo")(demo_command)
 
 
 def main() -> None:
