@@ -87,7 +87,8 @@ class LensFit:
 
     `camera_from_board` (V, 4, 4), in the order of `boards` that went in, whose `view` numbers are `views` (V,).
     `residuals_px` (M, 2) with `residual_view` (M,) and `residual_uv` (M, 2): all corners. `parameters`, `covariance`:
-    the lens block, poses and nuisance marginalised. `condition`: of the column-scaled normal matrix.
+    the lens block, poses and nuisance marginalised. `condition`: of the column-scaled Jacobian. `joint_covariance`
+    (P + 6V square): the lens block, then each view's pose twist (right side, translation and rotation vector).
     """
 
     lens: Lens
@@ -100,6 +101,7 @@ class LensFit:
     covariance: Array
     condition: float
     findings: list[str] = field(default_factory=list)
+    joint_covariance: Array = field(default_factory=lambda: np.zeros((0, 0)))
 
     @property
     def rms_px(self) -> float:

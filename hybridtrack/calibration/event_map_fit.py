@@ -1,0 +1,341 @@
+"""The event-to-colour map by direct alignment of every event pixel that sees the board.
+
+Board poses, lens, levels and blur come from the frames; they predict each event pixel's log step of light through its own
+one-pixel aperture, wherever the map puts it. Gauss-Newton moves the map, together with the curve of counts against steps
+(see `event_map_normal`), until predicted and measured counts agree. In log light an edge's half-amplitude point lies on
+its dark side; since the light model knows that, no bias comes of it. The aliased event picture is never interpolated.
+
+Covariance: from the normal equations, plus what the deviations of poses and lens do to the map, all scaled by how much
+more the views disagree than these explain. The die's lattice is then tested, and kept where it holds.
+"""
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from hybridtrack.calibration.apertures import frame_aperture
+from hybridtrack.calibration.board_view import place_on_board
+from hybridtrack.calibration.count_curve import CountNoise, fit_noise, straight_curve
+from hybridtrack.calibration.event_map_normal import (
+    MAP_TERMS,
+    MapBasis,
+    MapModel,
+    MapNormal,
+    accumulate,
+    left_over,
+    map_basis,
+)
+from hybridtrack.calibration.event_map_start import event_positions, find_map_start, lattice_matrix
+from hybridtrack.calibration.event_prediction import EventSteps, only, predict_steps
+from hybridtrack.calibration.lattice_test import LatticeVerdict, judge_lattice
+from hybridtrack.calibration.view_data import MAP_PARAMETERS, BoardCorners, EventMapFit, LensFit, ViewImages
+from hybridtrack.calibration.view_light import ViewLight, fit_view_light
+from hybridtrack.errors import BoardNotFoundError, DegenerateDataError
+from hybridtrack.module import ColourFromEvent, HybridModule, LatticeTest, Target
+
+Array = np.ndarray
+
+_STEPS = 25
+_CLOSE_PX = 2e-4
+_LEAST_PIXELS = 300
+_ODD_GAIN = 6.0  # deviations of the gains' spread beyond which a pixel is left out
+_PATCHES = (16, 10)
+
+
+@dataclass(frozen=True)
+class _Views:
+    """What stays fixed: views in the lens fit's order, their light, and the lens fit."""
+
+    images: list[ViewImages]
+    lights: list[ViewLight]
+    poses: Array
+    lens_fit: LensFit
+    order: Array
+    target: Target
+
+
+@dataclass(frozen=True)
+class _State:
+    """What moves: event positions as matrix (2, 3) plus radial term, blur factor, count model, pixels in use."""
+
+    matrix: Array
+    radial: float
+    log_blur: float
+    model: MapModel
+    usable: Array
+
+
+def _measured_views(views: list[ViewImages], lens_fit: LensFit, target: Target, nominal: HybridModule) -> _Views:
+    """Fit the light of every view that has a pose."""
+    mode, aperture = nominal.frame_mode, frame_aperture(nominal.frame_mode, nominal.cluster)
+    columns, rows = np.meshgrid(np.arange(mode.width), np.arange(mode.height))
+    centres = mode.colour_from_frame(np.stack([columns, rows], axis=-1)).reshape(-1, 2)
+    by_number = {view.index: view for view in views}
+    images, lights, order = [], [], []
+    for n, number in enumerate(lens_fit.views.tolist()):
+        place = place_on_board(lens_fit.lens, lens_fit.camera_from_board[n], centres)
+        light = fit_view_light(by_number[number], place, aperture, target) if number in by_number else None
+        if light is not None:
+            images.append(by_number[number])
+            lights.append(light)
+            order.append(n)
+    if len(images) < 2:
+        raise BoardNotFoundError(f"event map: expected at least 2 views with the board well in the frame, got {len(images)}")
+    return _Views(images, lights, lens_fit.camera_from_board[order], lens_fit, np.array(order), target)
+
+
+def _positions(state: _State, nominal: HybridModule, centre: Array) -> Array:
+    uv = event_positions(nominal, state.matrix)
+    offset = uv - centre
+    r2 = np.sum((offset / nominal.colour_array.half_diagonal_px) ** 2, axis=-1, keepdims=True)
+    return uv + state.radial * r2 * offset
+
+
+def _predict(views: _Views, state: _State, positions: Array) -> list[EventSteps]:
+    out = []
+    for view, light, pose in zip(views.images, views.lights, views.poses, strict=True):
+        steps = predict_steps(view, light, views.lens_fit, pose, views.target, positions, float(np.exp(state.log_blur)))
+        out.append(only(steps, state.usable[steps.pixel]))
+    return out
+
+
+def _signed(all_steps: list[EventSteps], sign: float) -> list[EventSteps]:
+    """Steps with the blink's other half called bright: the convention of a counterphase board's phase."""
+    return all_steps if sign > 0 else [replace(steps, count=-steps.count) for steps in all_steps]
+
+
+def _blink_sign(all_steps: list[EventSteps]) -> float:
+    return 1.0 if sum(float(np.sum(s.step * s.count)) for s in all_steps) >= 0 else -1.0
+
+
+def _first_model(all_steps: list[EventSteps], pixels: int) -> MapModel:
+    steps, counts = (np.concatenate([getattr(s, name) for s in all_steps]) for name in ("step", "count"))
+    curve = straight_curve(steps, counts)
+    spread = float(np.median(np.abs(counts - curve.value(steps)))) * 1.48 + 1e-3
+    top = float(curve.heights[-1])
+    return MapModel(curve, np.zeros(len(all_steps)), CountNoise(spread**2, 0.0, (0.3 * top) ** 2 * 0.0), 0.05**2,
+                    np.ones(pixels))  # fmt: skip
+
+
+def _stepped_model(model: MapModel, normal: MapNormal, step: Array, seen: Array) -> MapModel:
+    """The count model after a Gauss-Newton step, its gains and their spread brought up to date."""
+    size = len(model.curve.knots)
+    heights = model.curve.heights + step[MAP_TERMS + 1 : MAP_TERMS + 1 + size]
+    heights = np.maximum.accumulate(np.maximum(heights, 0.0))
+    log_scale = model.log_scale + np.clip(step[MAP_TERMS + 1 + size :], -0.3, 0.3)
+    excess = np.clip(normal.gain_excess, -0.5, 0.5)
+    # Expectation step (Dempster et al. 1977); the median keeps odd pixels from widening it.
+    square = excess[seen] ** 2
+    spread = float(np.median(square) / 0.455 + np.median(normal.gain_variance[seen]))
+    gain_variance = float(np.clip(spread, 1e-5, 0.3**2))
+    return replace(model, curve=replace(model.curve, heights=heights), log_scale=log_scale, gain=1.0 + excess,
+                   gain_variance=gain_variance)  # fmt: skip
+
+
+def _moved_map(state: _State, basis: MapBasis, step: Array, nominal: HybridModule) -> _State:
+    """The state with the map moved by coefficients (7,)."""
+    change = affine_of(step[:6], nominal)
+    return replace(state, matrix=state.matrix + change, radial=state.radial + float(step[6]))
+
+
+def affine_of(coefficients: Array, nominal: HybridModule) -> Array:
+    """Matrix (2, 3) of the affine displacement with coefficients (6,) of `MapBasis`."""
+    width, height = nominal.event_grid.width, nominal.event_grid.height
+    rows = np.asarray(coefficients, float).reshape(2, 3)
+    by_x, by_y = rows[:, 1] / (width / 2.0), rows[:, 2] / (height / 2.0)
+    at_origin = rows[:, 0] - by_x * (width - 1) / 2.0 - by_y * (height - 1) / 2.0
+    return np.stack([by_x, by_y, at_origin], axis=1)
+
+
+def coefficient_jacobian(nominal: HybridModule) -> Array:
+    """d (a, b, c, d, e, f, radial) / d coefficients, (7, 7)."""
+    out = np.zeros((MAP_TERMS, MAP_TERMS))
+    for k in range(6):
+        out[:6, k] = affine_of(np.eye(6)[k], nominal).ravel()
+    out[6, 6] = 1.0
+    return out
+
+
+def _noise_of(all_steps: list[EventSteps], model: MapModel, basis: MapBasis) -> CountNoise:
+    parts = [left_over(steps, v, model, basis) for v, steps in enumerate(all_steps)]
+    residual, predicted, slope = (np.concatenate(each) for each in zip(*parts, strict=True))
+    return fit_noise(residual, predicted, slope)
+
+
+def _align(views: _Views, state: _State, nominal: HybridModule, centre: Array,
+           sign: float) -> tuple[_State, list[EventSteps], MapBasis, MapNormal]:
+    """Gauss-Newton until the map stands still."""
+    for iteration in range(_STEPS):
+        positions = _positions(state, nominal, centre)
+        basis = map_basis(nominal, positions, centre)
+        all_steps = _signed(_predict(views, state, positions), sign)
+        if iteration > 0:
+            state = replace(state, model=replace(state.model, noise=_noise_of(all_steps, state.model, basis)))
+        normal = accumulate(all_steps, state.model, basis, state.log_blur)
+        step = np.linalg.solve(normal.matrix, normal.right)
+        if iteration < 2:
+            step[6] = 0.0
+        step[:6] = np.clip(step[:6], -1.5, 1.5)
+        seen = np.zeros(len(state.usable), bool)
+        for steps in all_steps:
+            seen[steps.pixel] = True
+        model = _stepped_model(state.model, normal, step, seen)
+        usable = state.usable
+        if iteration > 3:
+            usable = usable & (np.abs(model.gain - 1.0) < _ODD_GAIN * np.sqrt(model.gain_variance))
+        state = replace(_moved_map(state, basis, step[:7], nominal), model=model, usable=usable,
+                        log_blur=float(np.clip(state.log_blur + step[7], -0.7, 0.7)))  # fmt: skip
+        if iteration > 5 and float(np.abs(step[:7]).max()) < _CLOSE_PX:
+            break
+    return state, all_steps, basis, normal
+
+
+def _nuisance_covariance(lens_fit: LensFit, order: Array) -> Array:
+    """Joint covariance of the poses of the used views (6 each), then the lens."""
+    size = len(lens_fit.parameters)
+    poses = (size + 6 * order[:, None] + np.arange(6)).ravel()
+    at = np.concatenate([poses, np.arange(size)])
+    return lens_fit.joint_covariance[np.ix_(at, at)]
+
+
+def _nuisance_columns(normal: MapNormal) -> Array:
+    """Cross terms (V, S, 6V + P) of each view with all nuisances."""
+    views, size, width = normal.nuisance.shape
+    lens = width - 6
+    out = np.zeros((views, size, 6 * views + lens))
+    for v in range(views):
+        out[v, :, 6 * v : 6 * v + 6] = normal.nuisance[v, :, :6]
+        out[v, :, 6 * views :] = normal.nuisance[v, :, 6:]
+    return out
+
+
+def map_covariance(normal: MapNormal, nuisance: Array) -> tuple[Array, Array, float, int]:
+    """Covariance (7, 7) of the coefficients, cross covariance (7, P) with the lens, its factor over what noise and poses
+    explain, and the factor's degrees of freedom."""
+    views = len(normal.scores)
+    inverse = np.linalg.inv(normal.matrix)
+    columns = _nuisance_columns(normal)
+    gain = (inverse @ columns.sum(0))[:MAP_TERMS]
+    covariance = inverse[:MAP_TERMS, :MAP_TERMS] + gain @ nuisance @ gain.T
+    cross = -gain @ nuisance[:, 6 * views :]
+    # Scores of the map with all else of z eliminated.
+    rest = normal.matrix[MAP_TERMS:, MAP_TERMS:]
+    T = np.concatenate([np.eye(MAP_TERMS), -normal.matrix[:MAP_TERMS, MAP_TERMS:] @ np.linalg.inv(rest)], axis=1)
+    total = 0.0
+    for v in range(views):
+        pulled = T @ columns[v]
+        spread = T @ normal.information[v] @ T.T + pulled @ nuisance @ pulled.T
+        score = T @ normal.scores[v]
+        total += float(score @ np.linalg.solve(0.5 * (spread + spread.T), score))
+    degrees = MAP_TERMS * (views - 1)
+    return covariance, cross, total / degrees, degrees
+
+
+def _patches(all_steps: list[EventSteps], state: _State, basis: MapBasis, nominal: HybridModule) -> tuple[Array, Array]:
+    """Displacement (M, 2) px that each patch of the event grid still asks for, at its middle (M, 2) in event px."""
+    grid = nominal.event_grid
+    normal, right = np.zeros((_PATCHES[0] * _PATCHES[1], 2, 2)), np.zeros((_PATCHES[0] * _PATCHES[1], 2))
+    for v, steps in enumerate(all_steps):
+        residual, predicted, slope_px = left_over(steps, v, state.model, basis)
+        weight = 1.0 / state.model.noise.variance(predicted, slope_px)
+        slope = np.exp(state.model.log_scale[v]) * state.model.gain[steps.pixel] * state.model.curve.slope(steps.step)
+        J = steps.d_uv * slope[:, None]
+        patch = (steps.pixel // grid.width) * _PATCHES[1] // grid.height * _PATCHES[0]
+        patch = patch + (steps.pixel % grid.width) * _PATCHES[0] // grid.width
+        np.add.at(normal, patch, weight[:, None, None] * J[:, :, None] * J[:, None, :])
+        np.add.at(right, patch, (weight * residual)[:, None] * J)
+    solid = np.linalg.eigvalsh(normal)[:, 0] > 25.0  # deviation under 0.2 px each way
+    index = np.flatnonzero(solid)
+    middle = np.stack([(index % _PATCHES[0] + 0.5) * grid.width / _PATCHES[0] - 0.5,
+                       (index // _PATCHES[0] + 0.5) * grid.height / _PATCHES[1] - 0.5], axis=1)  # fmt: skip
+    return middle, np.linalg.solve(normal[solid], right[solid][..., None])[..., 0]
+
+
+def _clear_site(at_centre: Array, nominal: HybridModule) -> tuple[tuple[int, int], Array, list[str]]:
+    """Clear site (column, row), centroid (2,), and findings, from the offset (2,) inside the cluster."""
+    pitch, findings = np.array([nominal.cluster.width, nominal.cluster.height]), []
+    site = np.clip(np.round(at_centre).astype(int), 0, pitch - 1)
+    centroid = at_centre - site
+    if np.any(np.abs(centroid) > 0.4):
+        findings.append(
+            f"event map: the optical centroid lies ({centroid[0]:+.2f}, {centroid[1]:+.2f}) px from the clear site "
+            f"{site[0]}, {site[1]}, so that a neighbouring site is nearly as likely; the map itself does not depend on it"
+        )
+    return (int(site[0]), int(site[1])), centroid, findings
+
+
+def _lattice_findings(verdict: LatticeVerdict, factor: float) -> list[str]:
+    findings = []
+    if verdict.linear:
+        findings.append(f"event map: not the die's lattice (p {verdict.linear_p:.1g}); the affine map is reported as measured")
+    if verdict.radial:
+        findings.append(f"event map: a radial term is needed (p {verdict.radial_p:.1g})")
+    if factor > 4.0:
+        findings.append(
+            f"event map: views disagree {np.sqrt(factor):.1f} times more than their noise explains; deviations are enlarged "
+            "by that; check that the board is flat and held still"
+        )
+    return findings
+
+
+def _result(state: _State, base: Array, verdict: LatticeVerdict, mirror: tuple[bool, bool], centre: Array,
+            nominal: HybridModule) -> tuple[ColourFromEvent, tuple[int, int], list[str]]:
+    """The map with the terms that the verdict keeps, about the lattice `base` (2, 3)."""
+    matrix = base + affine_of(verdict.coefficients[:6], nominal)
+    if not verdict.linear:
+        matrix[:, :2] = lattice_matrix(nominal, mirror, (0.0, 0.0))[:, :2]
+    middle = np.array([(nominal.event_grid.width - 1) / 2.0, (nominal.event_grid.height - 1) / 2.0, 1.0])
+    at_centre = (matrix - lattice_matrix(nominal, mirror, (0.0, 0.0))) @ middle
+    site, centroid, findings = _clear_site(at_centre, nominal)
+    fitted = ColourFromEvent(
+        matrix=tuple(tuple(float(x) for x in row) for row in matrix), centroid=(float(centroid[0]), float(centroid[1])),
+        radial=float(verdict.coefficients[6]), centre=(float(centre[0]), float(centre[1])),
+        lattice=LatticeTest(consistent=not verdict.linear, p_value=verdict.linear_p),
+    )  # fmt: skip
+    return fitted, site, findings
+
+
+def _kept_parameters(verdict: LatticeVerdict) -> Array:
+    """Which of MAP_PARAMETERS were estimated."""
+    linear = verdict.linear
+    return np.flatnonzero([linear, linear, True, linear, linear, True, verdict.radial])
+
+
+def fit_event_map(views: list[ViewImages], boards: list[BoardCorners], lens_fit: LensFit, target: Target,
+                  nominal: HybridModule) -> EventMapFit:
+    """Find mirroring, clear site and map from all views in `lens_fit`.
+
+    Of `nominal` only sizes, cluster pitch and frame mode are believed. `boards` are not needed beyond the poses that
+    came of them. Raises DegenerateDataError where frames and events do not agree.
+    """
+    measured = _measured_views(views, lens_fit, target, nominal)
+    start = find_map_start(measured.images, nominal)
+    centre = np.array([(nominal.colour_array.width - 1) / 2.0, (nominal.colour_array.height - 1) / 2.0])
+    pixels = nominal.event_grid.width * nominal.event_grid.height
+    matrix = lattice_matrix(nominal, start.mirror, start.offset)
+    state = _State(matrix, 0.0, 0.0, None, np.ones(pixels, bool))  # type: ignore[arg-type]
+    all_steps = _predict(measured, state, _positions(state, nominal, centre))
+    total = sum(len(steps.pixel) for steps in all_steps)
+    if total < _LEAST_PIXELS:
+        raise DegenerateDataError(f"event map: expected at least {_LEAST_PIXELS} event pixels on the board, got {total}")
+    sign = _blink_sign(all_steps)
+    state = replace(state, model=_first_model(_signed(all_steps, sign), pixels))
+    state, all_steps, basis, normal = _align(measured, state, nominal, centre, sign)
+    covariance, cross, factor, degrees = map_covariance(normal, _nuisance_covariance(lens_fit, measured.order))
+    factor = max(factor, 1.0)
+    base = lattice_matrix(nominal, start.mirror, (0.0, 0.0))
+    deviation = state.matrix - base
+    width, height = nominal.event_grid.width, nominal.event_grid.height
+    middle = deviation @ np.array([(width - 1) / 2.0, (height - 1) / 2.0, 1.0])
+    by_x, by_y = deviation[:, 0] * width / 2.0, deviation[:, 1] * height / 2.0
+    coefficients = np.array([middle[0], by_x[0], by_y[0], middle[1], by_x[1], by_y[1], state.radial])
+    verdict = judge_lattice(coefficients, covariance * factor, degrees)
+    fitted, site, findings = _result(state, base, verdict, start.mirror, centre, nominal)
+    J, kept = coefficient_jacobian(nominal), _kept_parameters(verdict)
+    patch_xy, patch_px = _patches(all_steps, state, basis, nominal)
+    return EventMapFit(
+        colour_from_event=fitted, mirror_x=start.mirror[0], mirror_y=start.mirror[1], clear_site=site,
+        parameters=tuple(MAP_PARAMETERS[k] for k in kept), covariance=(J @ verdict.covariance @ J.T)[np.ix_(kept, kept)],
+        cross_covariance=(J @ cross)[kept], residual_xy=patch_xy, residuals_px=patch_px,
+        findings=findings + _lattice_findings(verdict, factor),
+    )  # fmt: skip
