@@ -20,7 +20,7 @@ class OdometryOptions:
     does not know. `seed` fixes every random draw.
     """
 
-    mode: Mode = "hybrid"
+    mode: str = "hybrid"
     start_depth: float = 1.0
     seed: int = 1
     # observations

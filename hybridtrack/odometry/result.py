@@ -18,7 +18,7 @@ Array = np.ndarray
 WEAK_SHARE = 0.5
 CONTAINS = (
     "noise of independent rays: of the frame's own against the map, and of the nearest keyframe's in the joint "
-    "adjustment; for errors that remain after a similarity alignment of the positions. Not the lens, not the clocks, not "
+    "adjustment; for errors that remain after a similarity alignment of the positions. Not the lens, the clocks, nor "
     "errors that one track repeats from frame to frame"
 )
 

@@ -2,6 +2,7 @@
 
 from collections.abc import Callable
 from dataclasses import replace
+from typing import cast
 
 from hybridtrack.errors import DegenerateDataError
 from hybridtrack.module import HybridModule
@@ -9,7 +10,7 @@ from hybridtrack.odometry.finishing import finish
 from hybridtrack.odometry.map_file import colours_of
 from hybridtrack.odometry.observations import TrackTable, frame_times, gather_views
 from hybridtrack.odometry.odometer import Odometer
-from hybridtrack.odometry.options import OdometryOptions
+from hybridtrack.odometry.options import Mode, OdometryOptions
 from hybridtrack.odometry.places import Place, describe
 from hybridtrack.odometry.result import OdometryResult, result_of
 from hybridtrack.recording import Recording
@@ -63,7 +64,7 @@ def run_odometry(
     if chosen.mode == "hybrid":
         recording.require_events()
     module.lens_model()
-    tracks = track_recording(recording, module, TrackerOptions(mode=chosen.mode), progress=progress)
+    tracks = track_recording(recording, module, TrackerOptions(mode=cast(Mode, chosen.mode)), progress=progress)
     if not len(tracks):
         raise DegenerateDataError(f"{recording.path}: expected at least one track, and the tracker found none")
     return odometry_of_tracks(tracks, recording, module, chosen, progress)
