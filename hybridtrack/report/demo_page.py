@@ -83,8 +83,8 @@ def truth_path_figure(result: DemoResult) -> Figure:
     """Estimated paths laid on the true one by a similarity, from above and from the side."""
     true = result.truth.world_from_camera[:, :3, 3]
     caption = (
-        "The trolley's path: truth in ink, hybrid in colour over it, frames alone dotted. Estimates are laid on the truth "
-        "by the one similarity that a single camera leaves open."
+        "The trolley's path: truth in ink, hybrid in colour over it, frames alone dotted. Estimates are laid on "
+        "the truth by the one similarity that a single camera leaves open."
     )
     spans = np.argsort(-np.ptp(true, axis=0))
     first, second, third = (int(axis) for axis in spans)
@@ -169,8 +169,8 @@ def demo_page(result: DemoResult) -> Page:
         sections=(
             Section(
                 "1. A board blinks",
-                "The nominal module says nothing of the lens and clocks. Twelve squares by nine blink; where "
-                "event pixels fire and what frames show at the same instants tie the two halves of the module together.",
+                "The nominal module says nothing of the lens and clocks. Twelve squares by nine blink; where event "
+                "pixels fire and what frames show at the same instants tie the two halves of the module together.",
                 figures=tuple(figure for figure in figures if figure is not None),
             ),
             Section(
