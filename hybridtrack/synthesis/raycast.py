@@ -11,10 +11,18 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from hybridtrack.errors import ShapeError
 from hybridtrack.geometry import Lens
 from hybridtrack.geometry.arrays import FloatArray, with_trailing_shape
 from hybridtrack.synthesis.raycast_kernels import (
+    ALONG_U,
+    ALONG_V,
+    CHANNEL,
     MAP_SIZE,
+    MARGIN,
+    RAY,
+    RAY_SIZE,
+    SOLID_ANGLE,
     cast_rays,
     list_candidates,
     render_exposures,
@@ -27,9 +35,10 @@ Array = np.ndarray
 
 # Motion on the colour array, in px, that a tile's list of surfaces allows for beyond the poses it was made at.
 LIST_MARGIN_PX = 4.0
-_TILE_PX, _GROUP_PX = 32, 128
+_TILE_PX, _GROUP_PX = (64, 32), 128
 # Poses between two at which tiles are listed: at most half a pixel apart, they stay within the margin.
-_LIST_STRIDE = 8
+_LIST_STRIDE = 12
+_MAPS_AT_ONCE = 200_000  # 22 MB
 
 
 @dataclass(frozen=True)
@@ -49,14 +58,14 @@ class Aperture:
 class PixelRays:
     """Rays of P pixels, sorted into tiles. Made by `pixel_rays`.
 
-    `rays`: directions, steps that span the aperture along u and v (all (P, 3)), solid angle of the footprint and
-    outline margin (both (P,)). `order`, `start`: pixels by tile; those `unreached` by the lens are in none.
-    `tiles`, `groups`: cone axes and sines.
+    `positions` (P, 2) and `directions` (P, 3), NaN beyond the lens's reach, in the caller's order. `rays` (R, RAY_SIZE),
+    see the kernels, tile after tile; ray n is pixel `order[n]`'s, tile i starts at `start[i]`. Pixels `unreached` by the
+    lens have no ray. `tiles`, `groups`: cone axes and sines.
     """
 
     positions: FloatArray
-    rays: tuple[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray]
-    channels: Array
+    directions: FloatArray
+    rays: FloatArray
     order: Array
     start: Array
     tiles: tuple[FloatArray, FloatArray]
@@ -65,21 +74,16 @@ class PixelRays:
     unreached: Array
 
     @property
-    def directions(self) -> FloatArray:
-        """Unit directions (P, 3), NaN beyond the lens's reach."""
-        return self.rays[0]
-
-    @property
     def size(self) -> int:
         """Number of pixels."""
         return len(self.positions)
 
 
-def _cones(directions: FloatArray, order: Array, start: Array, margin_rad: float) -> tuple[FloatArray, FloatArray]:
+def _cones(rays: FloatArray, start: Array, margin_rad: float) -> tuple[FloatArray, FloatArray]:
     """Axes (tiles, 3) and sines of half angles (tiles,) of cones around each tile's rays."""
     axes, sines = np.empty((len(start) - 1, 3)), np.empty(len(start) - 1)
     for i, (begin, end) in enumerate(zip(start[:-1], start[1:], strict=True)):
-        members = directions[order[begin:end]]
+        members = rays[begin:end, RAY : RAY + 3]
         axis = members.mean(axis=0)
         axes[i] = axis / np.linalg.norm(axis)
         widest = math.acos(min(1.0, float((members @ axes[i]).min())))
@@ -92,13 +96,23 @@ def _starts(labels: Array) -> Array:
     return np.concatenate([[0], np.flatnonzero(np.diff(labels)) + 1, [len(labels)]]).astype(np.int64)
 
 
+def _tile_order(positions: FloatArray, inside: Array) -> tuple[Array, Array, Array]:
+    """Pixels `inside` sorted by group, tile and place; where tiles and where groups start among them."""
+    column, row = (np.floor(positions[inside] / _TILE_PX).astype(np.int64) + 1).T
+    stride = 1 << 20
+    tile = row * stride + column
+    group = (row * _TILE_PX[1] // _GROUP_PX) * stride + column * _TILE_PX[0] // _GROUP_PX
+    sort = np.lexsort((inside, tile, group))
+    return inside[sort], _starts(tile[sort]), _starts(group[sort])
+
+
 def pixel_rays(lens: Lens, positions: FloatArray, aperture: Aperture, channels: Array | None = None) -> PixelRays:
     """Rays of pixels at colour-array `positions` (P, 2), the same `aperture` for all.
 
     `channels` (P,): index into `scene.CHANNELS` of each pixel's filter, None: all clear. Pixels that the lens does not
     reach see nothing but the background.
     """
-    positions = np.ascontiguousarray(with_trailing_shape(positions, "positions", ("P", 2)).reshape(-1, 2))
+    positions = np.ascontiguousarray(with_trailing_shape(positions, "positions", ("P", 2)))
     directions = lens.unproject(positions, allow_outside=True)
     steps = []
     for axis in (0, 1):
@@ -108,25 +122,24 @@ def pixel_rays(lens: Lens, positions: FloatArray, aperture: Aperture, channels: 
     px_area = np.linalg.norm(np.cross(steps[0], steps[1]), axis=-1)
     footprint_px = 2.0 * aperture.deviation_px  # a texel box of width b, read bilinearly, has the variance b^2 / 4
     box_px = math.sqrt(12.0) * aperture.deviation_px
-    solid_angle = footprint_px**2 * px_area
-    margin = 0.5 * box_px * np.maximum(*(np.linalg.norm(step, axis=-1) for step in steps))
-    inside = np.flatnonzero(np.isfinite(directions).all(axis=-1) & np.isfinite(margin))
-    column, row = (np.floor(positions[inside] / _TILE_PX).astype(np.int64) + 1).T
-    ratio = _GROUP_PX // _TILE_PX
-    stride = 1 << 20
-    tile_label, group_label = row * stride + column, (row // ratio) * stride + column // ratio
-    sort = np.lexsort((inside, tile_label, group_label))
-    order, tile_label, group_label = inside[sort], tile_label[sort], group_label[sort]
-    start, group_start = _starts(tile_label), _starts(group_label)
+    rays = np.zeros((len(positions), RAY_SIZE))
+    rays[:, RAY : RAY + 3] = directions
+    rays[:, ALONG_U : ALONG_U + 3], rays[:, ALONG_V : ALONG_V + 3] = box_px * steps[0], box_px * steps[1]
+    rays[:, SOLID_ANGLE] = footprint_px**2 * px_area
+    rays[:, MARGIN] = 0.5 * box_px * np.maximum(*(np.linalg.norm(step, axis=-1) for step in steps))
+    rays[:, CHANNEL] = 0 if channels is None else channels
+    inside = np.flatnonzero(np.isfinite(rays).all(axis=-1))
+    order, start, group_start = _tile_order(positions, inside)
+    sorted_rays = rays[order]
     margin_rad = LIST_MARGIN_PX * float(np.sqrt(px_area[inside].max())) if len(inside) else 0.0
     return PixelRays(
         positions,
-        (directions, box_px * steps[0], box_px * steps[1], solid_angle, margin),
-        np.zeros(len(positions), np.int64) if channels is None else np.asarray(channels, np.int64),
+        directions,
+        sorted_rays,
         order,
         start,
-        _cones(directions, order, start, margin_rad),
-        _cones(directions, order, group_start, margin_rad),
+        _cones(sorted_rays, start, margin_rad),
+        _cones(sorted_rays, group_start, margin_rad),
         np.searchsorted(group_start, start[:-1], side="right") - 1,
         np.setdiff1d(np.arange(len(positions)), inside),
     )
@@ -167,26 +180,25 @@ class RayCaster:
         light = np.zeros((len(maps), self.rays.size), np.float32)
         light[:, self.rays.unreached] = self.scene.background
         tiles = (self.rays.order, self.rays.start)
-        render_instants(maps, self._packed, tiles, candidates, counts, self.rays.rays, self.rays.channels, light)
+        render_instants(maps, self._packed, tiles, candidates, counts, self.rays.rays, light)
         return light
 
-    def exposures(self, world_from_camera: FloatArray, weights: FloatArray, knots: FloatArray) -> Array:
+    def exposures(
+        self, world_from_camera: FloatArray, weights: FloatArray, knots: FloatArray, way_stations: FloatArray
+    ) -> Array:
         """Light (P,) float32 of every pixel over an exposure of its own.
 
         `world_from_camera` (samples, knots, 4, 4): poses of each sample of the exposure at a few instants of the
         readout, `weights` (samples, knots) its share, `knots` (P,) where between the knots each pixel is read.
-        Samples are at most half a colour px of motion apart.
+        `way_stations` (K, 4, 4): poses along all of the motion, no more than `LIST_MARGIN_PX` apart.
         """
         samples, count = world_from_camera.shape[:2]
         maps = maps_of(self.scene, world_from_camera.reshape(-1, 4, 4)).reshape(samples, count, -1, MAP_SIZE)
-        listed = np.unique(np.append(np.arange(0, samples, _LIST_STRIDE), samples - 1))
-        candidates, counts = self._lists(maps[listed].reshape(-1, *maps.shape[2:]))
+        candidates, counts = self._lists(maps_of(self.scene, way_stations))
         light = np.zeros(self.rays.size, np.float32)
         light[self.rays.unreached] = weights.sum(axis=0).mean() * self.scene.background
         tiles = (self.rays.order, self.rays.start)
-        render_exposures(
-            maps, weights, knots, self._packed, tiles, candidates, counts, self.rays.rays, self.rays.channels, light
-        )
+        render_exposures(maps, weights, knots, self._packed, tiles, candidates, counts, self.rays.rays, light)
         return light
 
 
@@ -199,16 +211,23 @@ class Hits:
     distance: FloatArray
 
 
-def cast(scene: Scene, world_from_camera: FloatArray, directions: FloatArray) -> Hits:
-    """Meet rays of unit `directions` (N, 3), camera axes, from one pose (4, 4) or a pose a ray (N, 4, 4)."""
+def cast(
+    scene: Scene, world_from_camera: FloatArray, directions: FloatArray, pose_of_ray: Array | None = None
+) -> Hits:
+    """Meet rays of unit `directions` (N, 3), camera axes, from one pose (4, 4) or several (K, 4, 4).
+
+    `pose_of_ray` (N,) names each ray's pose, in rising order; None: the one pose.
+    """
     directions = np.ascontiguousarray(with_trailing_shape(directions, "directions", ("N", 3)))
     poses = with_trailing_shape(world_from_camera, "world_from_camera", (4, 4)).reshape(-1, 4, 4)
     count = len(directions)
+    index = np.zeros(count, np.int64) if pose_of_ray is None else np.asarray(pose_of_ray, np.int64)
+    if len(index) != count or np.any(np.diff(index) < 0):
+        raise ShapeError(f"Expected `pose_of_ray` to name a pose for each of {count} rays in rising order.")
     hits = Hits(np.empty(count, np.int64), np.empty((count, 2)), np.empty(count))
-    block = max(1, 4_000_000 // (scene.size * MAP_SIZE))  # poses whose maps fit in a few tens of MB
-    for begin in range(0, count, block) if len(poses) > 1 else [0]:
-        rows = slice(begin, begin + block) if len(poses) > 1 else slice(None)
-        index = np.arange(len(directions[rows])) if len(poses) > 1 else np.zeros(count, np.int64)
-        maps = maps_of(scene, poses[rows] if len(poses) > 1 else poses)
-        cast_rays(maps, index, directions[rows], hits.surface[rows], hits.place[rows], hits.distance[rows])
+    block = max(1, _MAPS_AT_ONCE // scene.size)
+    for first in range(0, len(poses), block):
+        rows = slice(*np.searchsorted(index, [first, first + block]))
+        maps = maps_of(scene, poses[first : first + block])
+        cast_rays(maps, index[rows] - first, directions[rows], hits.surface[rows], hits.place[rows], hits.distance[rows])
     return hits

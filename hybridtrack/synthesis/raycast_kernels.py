@@ -21,8 +21,13 @@ from hybridtrack.compiled import kernel
 MAP_SIZE = 14
 # A row of `windows`: first texel (x, y) and span in texels (x, y) of the surface's part of its texture, texels^2 per m^2.
 WINDOW_SIZE = 5
-# A row of `looks`: the first four of a row of `windows`, and the tints of the four channels.
-LOOK_SIZE = 8
+# A row of `looks`: the first four of a row of `windows`, the tints of the four channels, the texture's index.
+LOOK_TEXTURE, LOOK_SIZE = 8, 9
+# A row of `rays`: direction, spans of the aperture along u and v (3 each), solid angle of the footprint, outline margin
+# in rad, channel. One array, for passing many to a compiled function costs as much as its work.
+RAY, ALONG_U, ALONG_V, SOLID_ANGLE, MARGIN, CHANNEL, RAY_SIZE = 0, 3, 6, 9, 10, 11, 12
+# A row of `found`: what a ray meets (see `_meet`), and the light along it.
+BEST, MET_A, MET_B, MET_W, OUTLINE, SEEN, FOUND_SIZE = range(7)
 
 # Four positions in the unit square, no two in one row or column, to spread rays over an aperture.
 SPREAD_U = np.array([-0.375, -0.125, 0.125, 0.375])
@@ -94,7 +99,8 @@ def _inverse_distances(row, axis, sine):
 
 @kernel
 def _list_tile(maps, parents, axis, sine, candidates):
-    """Write the surfaces that may meet a cone at one of the poses; return how many. -1: the list is full."""
+    """Write the surfaces that may meet a cone at one of the poses, near ones first, so that most rays reject the rest by
+    distance alone; return how many. -1: the list is full."""
     count = 0
     floor = 0.0  # inverse distance beyond which a surface that fills the cone at every pose hides the others
     for q in parents:
@@ -114,14 +120,20 @@ def _list_tile(maps, parents, axis, sine, candidates):
         if fills:
             floor = max(floor, farthest)
     kept = 0
+    near = np.empty(count)
     for c in range(count):
         q = candidates[c]
         nearest = 0.0
         for i in range(maps.shape[0]):
             nearest = max(nearest, _inverse_distances(maps[i, q], axis, sine)[1])
-        if nearest >= floor:
-            candidates[kept] = q
-            kept += 1
+        if nearest < floor:
+            continue
+        place = kept
+        while place > 0 and near[place - 1] < nearest:
+            near[place], candidates[place] = near[place - 1], candidates[place - 1]
+            place -= 1
+        near[place], candidates[place] = nearest, q
+        kept += 1
     return kept
 
 
@@ -147,16 +159,16 @@ def list_candidates(maps, groups, group_axes, group_sines, axes, sines, candidat
 
 
 @kernel
-def _meet(maps, count, directions, margins, first, last, hits, met, outlines):
+def _meet(maps, rays, first, last, margin_scale, found):
     """Meet rays first..last-1 with the listed surfaces, nearest first.
 
-    Fills `hits` with places in the list (-1: nothing met), `met` (., 3) with a, b, w of the module's docstring, and
-    `outlines` with whether an outline not hidden by the surface met lies within `margins` rad.
+    Fills columns of `found`: place in the list (-1: nothing met), a, b, w of the module's docstring, and whether an
+    outline not hidden by the surface met lies within the ray's margin times `margin_scale`.
     """
     for n in range(first, last):
-        dx, dy, dz, margin = directions[n, 0], directions[n, 1], directions[n, 2], margins[n]
+        dx, dy, dz, margin = rays[n, RAY], rays[n, RAY + 1], rays[n, RAY + 2], margin_scale * rays[n, MARGIN]
         best, best_a, best_b, best_w, outline_w = -1, 0.0, 0.0, 0.0, 0.0
-        for c in range(count):
+        for c in range(maps.shape[0]):
             w = maps[c, 6] * dx + maps[c, 7] * dy + maps[c, 8] * dz
             if w <= best_w:
                 continue
@@ -170,31 +182,31 @@ def _meet(maps, count, directions, margins, first, last, hits, met, outlines):
                 outline_w = w
             if a >= 0.0 and a <= w and b >= 0.0 and b <= w:
                 best, best_a, best_b, best_w = c, a, b, w
-        hits[n], outlines[n] = best, margin > 0.0 and outline_w > 0.0 and outline_w >= best_w
-        met[n, 0], met[n, 1], met[n, 2] = best_a, best_b, best_w
+        found[n, BEST], found[n, MET_A], found[n, MET_B], found[n, MET_W] = best, best_a, best_b, best_w
+        found[n, OUTLINE] = margin > 0.0 and outline_w > 0.0 and outline_w >= best_w
 
 
 @kernel
-def _read(maps, looks, textures, texels, levels, background, first, last, hits, met, solid_angles, channels, values):
-    """Light along rays first..last-1 that `_meet` has met.
+def _read(maps, looks, texels, levels, background, rays, first, last, found):
+    """Fill the column of light of `found` for rays first..last-1 that `_meet` has met.
 
     Level L of a texture averages boxes of 4^L texels^2, so its variance grows as 4^L, and mixing two levels mixes their
     variances: a footprint of F texels^2 takes the share (F / 4^L - 1) / 3 of the level after L.
     """
     for n in range(first, last):
-        best = hits[n]
+        best = int(found[n, BEST])
         if best < 0:
-            values[n] = background
+            found[n, SEEN] = background
             continue
-        inverse = 1.0 / met[n, 2]
-        x = looks[best, 0] + met[n, 0] * inverse * looks[best, 2]
-        y = looks[best, 1] + met[n, 1] * inverse * looks[best, 3]
-        square = solid_angles[n] * maps[best, 13] * inverse * inverse * inverse
-        texture, level, scale = textures[best], 0, 1.0
+        inverse = 1.0 / found[n, MET_W]
+        x = looks[best, 0] + found[n, MET_A] * inverse * looks[best, 2]
+        y = looks[best, 1] + found[n, MET_B] * inverse * looks[best, 3]
+        square = rays[n, SOLID_ANGLE] * maps[best, 13] * inverse * inverse * inverse
+        texture, level, scale = int(looks[best, LOOK_TEXTURE]), 0, 1.0
         coarsest = levels[texture, 0, 3] - 1
         while square >= 4.0 and level < coarsest:
             square, scale, level = 0.25 * square, 0.5 * scale, level + 1
-        share = min(max(square - 1.0, 0.0), 3.0) / 3.0
+        share = min(max(square - 1.0, 0.0), 3.0) / 3.0 if level < coarsest else 0.0
         total, weight = 0.0, 1.0 - share
         while weight > 0.0:
             start, width, height = levels[texture, level, 0], levels[texture, level, 1], levels[texture, level, 2]
@@ -203,140 +215,127 @@ def _read(maps, looks, textures, texels, levels, background, first, last, hits, 
             i, j = int(px), int(py)
             share_x, share_y = px - i, py - j
             here = start + j * width + i
-            right, below = here + (i < width - 1), here + (width if j < height - 1 else 0)
-            top = (1.0 - share_x) * texels[here] + share_x * texels[right]
-            bottom = (1.0 - share_x) * texels[below] + share_x * texels[below + right - here]
+            right, below = 1 if i < width - 1 else 0, width if j < height - 1 else 0
+            top = (1.0 - share_x) * texels[here] + share_x * texels[here + right]
+            bottom = (1.0 - share_x) * texels[here + below] + share_x * texels[here + below + right]
             total += weight * ((1.0 - share_y) * top + share_y * bottom)
-            weight, share = share if level < coarsest else 0.0, 0.0
+            weight, share = share, 0.0
             level, scale = level + 1, 0.5 * scale
-        values[n] = total * looks[best, 4 + channels[n]]
+        found[n, SEEN] = total * looks[best, 4 + int(rays[n, CHANNEL])]
 
 
 @kernel
-def _bundle(rays, channels, order, begin, end):
-    """Copy the rays of pixels order[begin:end] side by side, and make room for what they meet.
+def _spread(maps, looks, texels, levels, background, rays, first, last, found, spread, met):
+    """Replace the light of rays near an outline by the mean of a few rays spread over their aperture.
 
-    `rays` is (directions (P, 3), spans of the aperture along u and v (P, 3), solid angle of the footprint (P,), outline
-    margin in rad (P,)).
+    `spread` and `met` are room for those rays and for what they meet.
     """
-    directions, along_u, along_v, solid_angles, margins = rays
-    pixels = order[begin:end]
-    size = end - begin
-    own = (directions[pixels], along_u[pixels], along_v[pixels], solid_angles[pixels], margins[pixels], channels[pixels])
-    return own, np.empty(size, np.int64), np.empty((size, 3)), np.empty(size, np.bool_), np.empty(size)
-
-
-@kernel
-def _spread(maps, count, look, scene, bundle, first, last, scratch):
-    """Replace the light of rays near an outline by the mean of a few rays spread over their aperture."""
-    own, _, _, outlines, values = bundle
-    directions, along_u, along_v, solid_angles, _, channels = own
-    spread, spread_margins, hits, met, unused, seen, angle, channel = scratch
-    size = len(SPREAD_U)
+    size, count = len(SPREAD_U), 0
     for n in range(first, last):
-        if not outlines[n]:
-            continue
-        for k in range(size):
-            for j in range(3):
-                spread[k, j] = directions[n, j] + SPREAD_U[k] * along_u[n, j] + SPREAD_V[k] * along_v[n, j]
-            angle[k], channel[k] = solid_angles[n], channels[n]
-        _meet(maps, count, spread, spread_margins, 0, size, hits, met, unused)
-        _read(maps, look[0], look[1], scene[0], scene[1], scene[5], 0, size, hits, met, angle, channel, seen)
-        values[n] = seen.mean()
-
-
-@kernel
-def _see(maps, count, look, scene, bundle, first, last, scratch):
-    """Light of rays first..last-1 of a bundle, into its last array."""
-    own, hits, met, outlines, values = bundle
-    _meet(maps, count, own[0], own[4], first, last, hits, met, outlines)
-    _read(maps, look[0], look[1], scene[0], scene[1], scene[5], first, last, hits, met, own[3], own[5], values)
-    _spread(maps, count, look, scene, bundle, first, last, scratch)
-
-
-@kernel
-def _scratch():
-    """Room for the rays that replace one ray."""
-    size = len(SPREAD_U)
-    rays = np.empty((size, 3)), np.zeros(size)
-    return (*rays, np.empty(size, np.int64), np.empty((size, 3)), np.empty(size, np.bool_), np.empty(size), np.empty(size),
-            np.empty(size, np.int64))
+        if found[n, OUTLINE] != 0.0:
+            for k in range(size):
+                for j in range(3):
+                    along = SPREAD_U[k] * rays[n, ALONG_U + j] + SPREAD_V[k] * rays[n, ALONG_V + j]
+                    spread[count, RAY + j] = rays[n, RAY + j] + along
+                spread[count, SOLID_ANGLE], spread[count, CHANNEL] = rays[n, SOLID_ANGLE], rays[n, CHANNEL]
+                count += 1
+    if count == 0:
+        return
+    _meet(maps, spread, 0, count, 0.0, met)
+    _read(maps, looks, texels, levels, background, spread, 0, count, met)
+    count = 0
+    for n in range(first, last):
+        if found[n, OUTLINE] != 0.0:
+            total = 0.0
+            for k in range(size):
+                total += met[count + k, SEEN]
+            found[n, SEEN] = total / size
+            count += size
 
 
 @kernel
 def _looks_of(scene, ids, count):
-    """Windows and tints (C, LOOK_SIZE) and texture indices (C,) of listed surfaces."""
+    """Windows, tints and texture index (C, LOOK_SIZE) of listed surfaces."""
     _, _, textures, windows, tints, _ = scene
-    looks, own = np.empty((count, LOOK_SIZE)), np.empty(count, np.int64)
+    looks = np.empty((count, LOOK_SIZE))
     for c in range(count):
-        own[c] = textures[ids[c]]
+        looks[c, LOOK_TEXTURE] = textures[ids[c]]
         for m in range(4):
             looks[c, m] = windows[ids[c], m]
             looks[c, 4 + m] = tints[ids[c], m]
-    return looks, own
+    return looks
 
 
 @kernel(parallel=True)
-def render_instants(maps, scene, tiles, candidates, counts, rays, channels, light):
-    """Fill `light` (T, P) with what all pixels see at T poses, `maps` (T, Q, MAP_SIZE).
+def render_instants(maps, scene, tiles, candidates, counts, rays, light):
+    """Fill `light` (T, P) with what pixels see at T poses, `maps` (T, Q, MAP_SIZE).
 
-    `scene` is (texels, levels, textures, windows, tints, background); `tiles` is (order (P,), start (tiles + 1,)):
-    pixels order[start[i]:start[i + 1]] lie in tile i. `rays` as in `_bundle`.
+    `scene` is (texels, levels, textures, windows, tints, background); `tiles` is (order (R,), start (tiles + 1,)): rays
+    start[i] to start[i + 1] of `rays` (R, RAY_SIZE) lie in tile i, and ray n is pixel order[n]'s.
     """
     order, start = tiles
+    texels, levels, background = scene[0], scene[1], scene[5]
     for tile in numba.prange(len(counts)):
-        count, ids, begin = counts[tile], candidates[tile], start[tile]
-        look, scratch = _looks_of(scene, ids, count), _scratch()
-        bundle = _bundle(rays, channels, order, begin, start[tile + 1])
-        values = bundle[4]
+        count, ids, begin, end = counts[tile], candidates[tile], start[tile], start[tile + 1]
+        looks, own = _looks_of(scene, ids, count), rays[begin:end]
+        found = np.empty((end - begin, FOUND_SIZE))
+        room = len(SPREAD_U) * (end - begin)
+        spread, met = np.zeros((room, RAY_SIZE)), np.empty((room, FOUND_SIZE))
         local = np.empty((count, MAP_SIZE))
         for i in range(maps.shape[0]):
             for c in range(count):
                 for m in range(MAP_SIZE):
                     local[c, m] = maps[i, ids[c], m]
-            _see(local, count, look, scene, bundle, 0, len(values), scratch)
-            for n in range(len(values)):
-                light[i, order[begin + n]] = values[n]
+            _meet(local, own, 0, end - begin, 1.0, found)
+            _read(local, looks, texels, levels, background, own, 0, end - begin, found)
+            _spread(local, looks, texels, levels, background, own, 0, end - begin, found, spread, met)
+            for n in range(begin, end):
+                light[i, order[n]] = found[n - begin, SEEN]
 
 
 @kernel
-def _between(maps, knot, share, ids, count, local):
-    """Fill `local` (C, MAP_SIZE) with the maps (knots, Q, MAP_SIZE) of listed surfaces, `share` of the way to the next."""
-    for c in range(count):
+def _between(maps, i, knot, share, ids, local):
+    """Fill `local` (C, MAP_SIZE) with the maps (samples, knots, Q, MAP_SIZE) of listed surfaces at sample `i`, `share` of
+    the way from a knot to the next."""
+    for c in range(local.shape[0]):
         for m in range(MAP_SIZE):
-            below = maps[knot, ids[c], m]
-            local[c, m] = below + share * (maps[knot + 1, ids[c], m] - below)
+            below = maps[i, knot, ids[c], m]
+            local[c, m] = below + share * (maps[i, knot + 1, ids[c], m] - below)
 
 
 @kernel(parallel=True)
-def render_exposures(maps, weights, knots, scene, tiles, candidates, counts, rays, channels, light):
-    """Add to `light` (P,) what all pixels see, each exposed over samples at its own row's time.
+def render_exposures(maps, weights, knots, scene, tiles, candidates, counts, rays, light):
+    """Add to `light` (P,) what pixels see, each exposed over samples at its own row's time.
 
     `maps` (samples, knots, Q, MAP_SIZE) holds every sample's surface maps at a few instants of the readout, `knots`
     (P,) each pixel's place between them (a real number); `weights` (samples, knots) each sample's share of the exposure,
     lamp included. Between knots, maps and weights are taken as straight lines. The rest as in `render_instants`.
     """
     order, start = tiles
+    texels, levels, background = scene[0], scene[1], scene[5]
     last_knot = maps.shape[1] - 2
     for tile in numba.prange(len(counts)):
-        count, ids, begin = counts[tile], candidates[tile], start[tile]
-        look, scratch = _looks_of(scene, ids, count), _scratch()
-        bundle = _bundle(rays, channels, order, begin, start[tile + 1])
-        values = bundle[4]
+        count, ids, begin, end = counts[tile], candidates[tile], start[tile], start[tile + 1]
+        looks, own = _looks_of(scene, ids, count), rays[begin:end]
+        found = np.empty((end - begin, FOUND_SIZE))
+        room = len(SPREAD_U) * (end - begin)
+        spread, met = np.zeros((room, RAY_SIZE)), np.empty((room, FOUND_SIZE))
         local = np.empty((count, MAP_SIZE))
         first = 0
-        while first < len(values):
+        while first < end - begin:
             place, last = knots[order[begin + first]], first
-            while last < len(values) and knots[order[begin + last]] == place:
+            while last < end - begin and knots[order[begin + last]] == place:
                 last += 1
             knot = min(int(place), last_knot)
             share = place - knot
             for i in range(maps.shape[0]):
-                _between(maps[i], knot, share, ids, count, local)
+                _between(maps, i, knot, share, ids, local)
                 weight = weights[i, knot] + share * (weights[i, knot + 1] - weights[i, knot])
-                _see(local, count, look, scene, bundle, first, last, scratch)
+                _meet(local, own, first, last, 1.0, found)
+                _read(local, looks, texels, levels, background, own, first, last, found)
+                _spread(local, looks, texels, levels, background, own, first, last, found, spread, met)
                 for n in range(first, last):
-                    light[order[begin + n]] += weight * values[n]
+                    light[order[begin + n]] += weight * found[n, SEEN]
             first = last
 
 
@@ -346,9 +345,22 @@ def cast_rays(maps, poses, directions, surface, place, distance):
 
     `maps` (T, Q, MAP_SIZE); `poses` (N,) names the pose of each ray.
     """
-    size = directions.shape[0]
-    no_margin, met, outlines = np.zeros(size), np.empty((size, 3)), np.empty(size, np.bool_)
-    for n in range(size):
-        _meet(maps[poses[n]], maps.shape[1], directions, no_margin, n, n + 1, surface, met, outlines)
-        place[n, 0], place[n, 1] = met[n, 0] / met[n, 2], met[n, 1] / met[n, 2]
-        distance[n] = 1.0 / met[n, 2] if surface[n] >= 0 else np.inf
+    ray, found = np.zeros((1, RAY_SIZE)), np.empty((1, FOUND_SIZE))
+    for n in range(directions.shape[0]):
+        for j in range(3):
+            ray[0, RAY + j] = directions[n, j]
+        _meet(maps[poses[n]], ray, 0, 1, 0.0, found)
+        surface[n] = int(found[0, BEST])
+        place[n, 0], place[n, 1] = found[0, MET_A] / found[0, MET_W], found[0, MET_B] / found[0, MET_W]
+        distance[n] = 1.0 / found[0, MET_W] if surface[n] >= 0 else np.inf
+
+
+@kernel(parallel=True)
+def light_between(seen, index, share, level, gain, light):
+    """Fill `light` (M, P): what is seen (T, P) at `share` (M,) of the way from instant `index` (M,) to the next, times
+    the lamps' `level` (M,) and each pixel's `gain` (P,)."""
+    for m in numba.prange(len(index)):
+        i, part, lamp = index[m], np.float32(share[m]), np.float32(level[m])
+        after = min(i + 1, seen.shape[0] - 1)
+        for p in range(seen.shape[1]):
+            light[m, p] = (seen[i, p] + part * (seen[after, p] - seen[i, p])) * lamp * gain[p]
