@@ -7,10 +7,13 @@ them. Pixels differ by a gain, views by a scale (light and temperature change be
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.optimize import nnls
 
 Array = np.ndarray
 
 KNOTS = 14
+# Counts are whole numbers behind their mean: no smooth curve follows their steps more closely than this.
+_LEAST_DEVIATION = 0.1
 
 
 @dataclass(frozen=True)
@@ -77,21 +80,21 @@ class CountNoise:
 
 
 def fit_noise(residual: Array, count: Array, slope_px: Array) -> CountNoise:
-    """Fit the three terms to squared residuals, gross ones cut; none falls below a share of the mean."""
+    """Fit the three terms to squared residuals, gross ones cut.
+
+    Pixels away from edges repeat almost exactly from cycle to cycle, pixels on edges do not: what counts as gross
+    follows the terms, not the mean.
+    """
     square = residual**2
-    cut = 25.0 * np.median(square) / 0.455 + 1e-12
-    square = np.minimum(square, cut)
     design = np.stack([np.ones_like(count), count**2, slope_px**2], axis=1)
-    weight = np.ones(len(square))
-    terms = np.array([np.mean(square), 0.0, 0.0])
-    active = np.ones(3, bool)
-    for _ in range(6):
-        normal = (design * weight[:, None]).T @ design
-        right = (design * weight[:, None]).T @ square
-        terms = np.zeros(3)
-        terms[active] = np.linalg.lstsq(normal[np.ix_(active, active)], right[active], rcond=None)[0]
-        active &= terms > 0
-        active[0] = True
-        terms = np.maximum(terms, [0.02 * float(np.mean(square)) + 1e-9, 0.0, 0.0])
-        weight = 1.0 / (design @ terms) ** 2  # squared residuals scatter in proportion to their mean
+    terms = np.array([np.mean(np.minimum(square, 100.0 * np.median(square) + 1e-12)), 0.0, 0.0])
+    edge = slope_px > 0.1 * float(slope_px.max(initial=1e-9))
+    if edge.any():
+        terms[2] = float(np.median(square[edge]) / 0.455 / np.median(slope_px[edge] ** 2))
+    for _ in range(8):
+        variance = design @ terms
+        cut, weight = np.minimum(square, 20.0 * variance), 1.0 / variance**2
+        # Squared residuals scatter in proportion to their mean, hence the weights.
+        terms, _ = nnls((design * weight[:, None]).T @ design, (design * weight[:, None]).T @ cut)
+        terms[0] = max(terms[0], _LEAST_DEVIATION**2)
     return CountNoise(*(float(t) for t in terms))

@@ -26,7 +26,13 @@ from hybridtrack.calibration.event_map_normal import (
     map_basis,
 )
 from hybridtrack.calibration.event_map_start import event_positions, find_map_start, lattice_matrix
-from hybridtrack.calibration.event_prediction import EventSteps, only, predict_steps
+from hybridtrack.calibration.event_prediction import (
+    PixelPlaces,
+    PixelSteps,
+    choose_pixels,
+    picture_motion,
+    predict_steps,
+)
 from hybridtrack.calibration.lattice_test import LatticeVerdict, judge_lattice
 from hybridtrack.calibration.view_data import MAP_PARAMETERS, BoardCorners, EventMapFit, LensFit, ViewImages
 from hybridtrack.calibration.view_light import ViewLight, fit_view_light
@@ -36,6 +42,7 @@ from hybridtrack.module import ColourFromEvent, HybridModule, LatticeTest, Targe
 Array = np.ndarray
 
 _STEPS = 25
+_PLACED_AT = (0, 3)
 _CLOSE_PX = 2e-4
 _LEAST_PIXELS = 300
 _ODD_GAIN = 6.0  # deviations of the gains' spread beyond which a pixel is left out
@@ -91,51 +98,30 @@ def _positions(state: _State, nominal: HybridModule, centre: Array) -> Array:
     return uv + state.radial * r2 * offset
 
 
-def _predict(views: _Views, state: _State, positions: Array) -> list[EventSteps]:
-    out = []
+def _choose(views: _Views, state: _State, positions: Array) -> list[PixelPlaces]:
+    """Pixels that take part, placed from `positions`."""
+    chosen = []
     for view, light, pose in zip(views.images, views.lights, views.poses, strict=True):
-        steps = predict_steps(view, light, views.lens_fit, pose, views.target, positions, float(np.exp(state.log_blur)))
-        out.append(only(steps, state.usable[steps.pixel]))
-    return out
+        places = choose_pixels(view, light, views.lens_fit, pose, views.target, positions)
+        chosen.append(places.only(state.usable[places.pixel]))
+    return chosen
 
 
-def _signed(all_steps: list[EventSteps], sign: float) -> list[EventSteps]:
-    """Steps with the blink's other half called bright: the convention of a counterphase board's phase."""
-    return all_steps if sign > 0 else [replace(steps, count=-steps.count) for steps in all_steps]
+def _predict(chosen: list[PixelPlaces], state: _State, moved: Array, target: Target) -> list[PixelSteps]:
+    """Steps with the pixels moved by `moved` (He * We, 2) from where they were placed."""
+    factor = float(np.exp(state.log_blur))
+    return [predict_steps(places, target, moved[places.pixel], factor) for places in chosen]
 
 
-def _blink_sign(all_steps: list[EventSteps]) -> float:
+def _signed(views: _Views, sign: float) -> _Views:
+    """The views with the blink's other half called bright: the convention of a counterphase board's phase."""
+    if sign > 0:
+        return views
+    return replace(views, images=[replace(view, amplitude=-view.amplitude) for view in views.images])
+
+
+def _blink_sign(all_steps: list[PixelSteps]) -> float:
     return 1.0 if sum(float(np.sum(s.step * s.count)) for s in all_steps) >= 0 else -1.0
-
-
-def _first_model(all_steps: list[EventSteps], pixels: int) -> MapModel:
-    steps, counts = (np.concatenate([getattr(s, name) for s in all_steps]) for name in ("step", "count"))
-    curve = straight_curve(steps, counts)
-    spread = float(np.median(np.abs(counts - curve.value(steps)))) * 1.48 + 1e-3
-    top = float(curve.heights[-1])
-    return MapModel(curve, np.zeros(len(all_steps)), CountNoise(spread**2, 0.0, (0.3 * top) ** 2 * 0.0), 0.05**2,
-                    np.ones(pixels))  # fmt: skip
-
-
-def _stepped_model(model: MapModel, normal: MapNormal, step: Array, seen: Array) -> MapModel:
-    """The count model after a Gauss-Newton step, its gains and their spread brought up to date."""
-    size = len(model.curve.knots)
-    heights = model.curve.heights + step[MAP_TERMS + 1 : MAP_TERMS + 1 + size]
-    heights = np.maximum.accumulate(np.maximum(heights, 0.0))
-    log_scale = model.log_scale + np.clip(step[MAP_TERMS + 1 + size :], -0.3, 0.3)
-    excess = np.clip(normal.gain_excess, -0.5, 0.5)
-    # Expectation step (Dempster et al. 1977); the median keeps odd pixels from widening it.
-    square = excess[seen] ** 2
-    spread = float(np.median(square) / 0.455 + np.median(normal.gain_variance[seen]))
-    gain_variance = float(np.clip(spread, 1e-5, 0.3**2))
-    return replace(model, curve=replace(model.curve, heights=heights), log_scale=log_scale, gain=1.0 + excess,
-                   gain_variance=gain_variance)  # fmt: skip
-
-
-def _moved_map(state: _State, basis: MapBasis, step: Array, nominal: HybridModule) -> _State:
-    """The state with the map moved by coefficients (7,)."""
-    change = affine_of(step[:6], nominal)
-    return replace(state, matrix=state.matrix + change, radial=state.radial + float(step[6]))
 
 
 def affine_of(coefficients: Array, nominal: HybridModule) -> Array:
@@ -156,38 +142,83 @@ def coefficient_jacobian(nominal: HybridModule) -> Array:
     return out
 
 
-def _noise_of(all_steps: list[EventSteps], model: MapModel, basis: MapBasis) -> CountNoise:
+def _first_model(all_steps: list[PixelSteps], pixels: int) -> MapModel:
+    steps, counts = (np.concatenate([getattr(s, name) for s in all_steps]) for name in ("step", "count"))
+    curve = straight_curve(steps, counts)
+    spread = float(np.median(np.abs(counts - curve.value(steps)))) * 1.48 + 1e-3
+    return MapModel(curve, np.zeros(len(all_steps)), CountNoise(spread**2, 0.0, 0.0), 0.05**2,
+                    np.ones(pixels))  # fmt: skip
+
+
+def _stepped_model(model: MapModel, normal: MapNormal, step: Array, seen: Array) -> MapModel:
+    """The count model after a Gauss-Newton step, its gains and their spread brought up to date."""
+    size = len(model.curve.knots)
+    heights = model.curve.heights + step[MAP_TERMS + 1 : MAP_TERMS + 1 + size]
+    heights = np.maximum.accumulate(np.maximum(heights, 0.0))
+    log_scale = model.log_scale + np.clip(step[MAP_TERMS + 1 + size :], -0.3, 0.3)
+    excess = np.clip(normal.gain_excess, -0.5, 0.5)
+    # Expectation step (Dempster et al. 1977); the median keeps odd pixels from widening it.
+    square = excess[seen] ** 2
+    spread = float(np.median(square) / 0.455 + np.median(normal.gain_variance[seen]))
+    gain_variance = float(np.clip(spread, 1e-5, 0.3**2))
+    return replace(model, curve=replace(model.curve, heights=heights), log_scale=log_scale, gain=1.0 + excess,
+                   gain_variance=gain_variance)  # fmt: skip
+
+
+def _stepped(state: _State, normal: MapNormal, step: Array, all_steps: list[PixelSteps], nominal: HybridModule,
+             with_odd: bool) -> _State:
+    """The state after a Gauss-Newton step; `with_odd` also drops pixels whose gain is odd."""
+    seen = np.zeros(len(state.usable), bool)
+    for steps in all_steps:
+        seen[steps.pixel] = True
+    model, usable = _stepped_model(state.model, normal, step, seen), state.usable
+    if with_odd:
+        usable = usable & (np.abs(model.gain - 1.0) < _ODD_GAIN * np.sqrt(model.gain_variance))
+    return replace(
+        state, matrix=state.matrix + affine_of(step[:6], nominal), radial=state.radial + float(step[6]), model=model,
+        usable=usable, log_blur=float(np.clip(state.log_blur + step[MAP_TERMS], -0.7, 0.7)),
+    )  # fmt: skip
+
+
+def _noise_of(all_steps: list[PixelSteps], model: MapModel, basis: MapBasis) -> CountNoise:
     parts = [left_over(steps, v, model, basis) for v, steps in enumerate(all_steps)]
     residual, predicted, slope = (np.concatenate(each) for each in zip(*parts, strict=True))
     return fit_noise(residual, predicted, slope)
 
 
-def _align(views: _Views, state: _State, nominal: HybridModule, centre: Array,
-           sign: float) -> tuple[_State, list[EventSteps], MapBasis, MapNormal]:
-    """Gauss-Newton until the map stands still."""
+@dataclass(frozen=True)
+class _Aligned:
+    """The state at the end, the pixels and steps there, and the normal equations about it."""
+
+    state: _State
+    steps: list[PixelSteps]
+    basis: MapBasis
+    normal: MapNormal
+
+
+def _align(views: _Views, state: _State, nominal: HybridModule, centre: Array) -> _Aligned:
+    """Gauss-Newton until the map stands still. Pixels are placed anew after a few steps, then only moved."""
+    target = views.target
     for iteration in range(_STEPS):
         positions = _positions(state, nominal, centre)
-        basis = map_basis(nominal, positions, centre)
-        all_steps = _signed(_predict(views, state, positions), sign)
+        if iteration in _PLACED_AT:
+            placed, basis = positions, map_basis(nominal, positions, centre)
+            chosen = _choose(views, state, positions)
+        all_steps = _predict(chosen, state, (positions - placed).reshape(-1, 2), target)
         if iteration > 0:
             state = replace(state, model=replace(state.model, noise=_noise_of(all_steps, state.model, basis)))
         normal = accumulate(all_steps, state.model, basis, state.log_blur)
         step = np.linalg.solve(normal.matrix, normal.right)
-        if iteration < 2:
-            step[6] = 0.0
         step[:6] = np.clip(step[:6], -1.5, 1.5)
-        seen = np.zeros(len(state.usable), bool)
-        for steps in all_steps:
-            seen[steps.pixel] = True
-        model = _stepped_model(state.model, normal, step, seen)
-        usable = state.usable
-        if iteration > 3:
-            usable = usable & (np.abs(model.gain - 1.0) < _ODD_GAIN * np.sqrt(model.gain_variance))
-        state = replace(_moved_map(state, basis, step[:7], nominal), model=model, usable=usable,
-                        log_blur=float(np.clip(state.log_blur + step[7], -0.7, 0.7)))  # fmt: skip
-        if iteration > 5 and float(np.abs(step[:7]).max()) < _CLOSE_PX:
+        step[6] = step[6] if iteration >= 2 else 0.0
+        state = _stepped(state, normal, step, all_steps, nominal, with_odd=iteration > 3)
+        if iteration > max(_PLACED_AT) and float(np.abs(step[:MAP_TERMS]).max()) < _CLOSE_PX:
             break
-    return state, all_steps, basis, normal
+    chosen = [places.only(state.usable[places.pixel]) for places in chosen]
+    moved = (_positions(state, nominal, centre) - placed).reshape(-1, 2)
+    all_steps = _predict(chosen, state, moved, target)
+    motions = [picture_motion(places, views.lens_fit, pose) for places, pose in zip(chosen, views.poses, strict=True)]
+    return _Aligned(state, all_steps, basis, accumulate(all_steps, state.model, basis, state.log_blur, motions))
 
 
 def _nuisance_covariance(lens_fit: LensFit, order: Array) -> Array:
@@ -231,7 +262,7 @@ def map_covariance(normal: MapNormal, nuisance: Array) -> tuple[Array, Array, fl
     return covariance, cross, total / degrees, degrees
 
 
-def _patches(all_steps: list[EventSteps], state: _State, basis: MapBasis, nominal: HybridModule) -> tuple[Array, Array]:
+def _patches(all_steps: list[PixelSteps], state: _State, basis: MapBasis, nominal: HybridModule) -> tuple[Array, Array]:
     """Displacement (M, 2) px that each patch of the event grid still asks for, at its middle (M, 2) in event px."""
     grid = nominal.event_grid
     normal, right = np.zeros((_PATCHES[0] * _PATCHES[1], 2, 2)), np.zeros((_PATCHES[0] * _PATCHES[1], 2))
@@ -314,13 +345,16 @@ def fit_event_map(views: list[ViewImages], boards: list[BoardCorners], lens_fit:
     pixels = nominal.event_grid.width * nominal.event_grid.height
     matrix = lattice_matrix(nominal, start.mirror, start.offset)
     state = _State(matrix, 0.0, 0.0, None, np.ones(pixels, bool))  # type: ignore[arg-type]
-    all_steps = _predict(measured, state, _positions(state, nominal, centre))
-    total = sum(len(steps.pixel) for steps in all_steps)
+    first = _choose(measured, state, _positions(state, nominal, centre))
+    total = sum(len(places.pixel) for places in first)
     if total < _LEAST_PIXELS:
         raise DegenerateDataError(f"event map: expected at least {_LEAST_PIXELS} event pixels on the board, got {total}")
+    all_steps = _predict(first, state, np.zeros((pixels, 2)), target)
     sign = _blink_sign(all_steps)
-    state = replace(state, model=_first_model(_signed(all_steps, sign), pixels))
-    state, all_steps, basis, normal = _align(measured, state, nominal, centre, sign)
+    all_steps = [replace(steps, count=sign * steps.count) for steps in all_steps]
+    state = replace(state, model=_first_model(all_steps, pixels))
+    aligned = _align(_signed(measured, sign), state, nominal, centre)
+    state, normal = aligned.state, aligned.normal
     covariance, cross, factor, degrees = map_covariance(normal, _nuisance_covariance(lens_fit, measured.order))
     factor = max(factor, 1.0)
     base = lattice_matrix(nominal, start.mirror, (0.0, 0.0))
@@ -332,7 +366,7 @@ def fit_event_map(views: list[ViewImages], boards: list[BoardCorners], lens_fit:
     verdict = judge_lattice(coefficients, covariance * factor, degrees)
     fitted, site, findings = _result(state, base, verdict, start.mirror, centre, nominal)
     J, kept = coefficient_jacobian(nominal), _kept_parameters(verdict)
-    patch_xy, patch_px = _patches(all_steps, state, basis, nominal)
+    patch_xy, patch_px = _patches(aligned.steps, state, aligned.basis, nominal)
     return EventMapFit(
         colour_from_event=fitted, mirror_x=start.mirror[0], mirror_y=start.mirror[1], clear_site=site,
         parameters=tuple(MAP_PARAMETERS[k] for k in kept), covariance=(J @ verdict.covariance @ J.T)[np.ix_(kept, kept)],

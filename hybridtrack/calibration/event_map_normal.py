@@ -13,14 +13,14 @@ from dataclasses import dataclass
 import numpy as np
 
 from hybridtrack.calibration.count_curve import CountCurve, CountNoise, smoothness
-from hybridtrack.calibration.event_prediction import EventSteps
+from hybridtrack.calibration.event_prediction import PixelSteps
 from hybridtrack.module import HybridModule
 
 Array = np.ndarray
 
 MAP_TERMS = 7
 _SCALE_SIGMA = 0.5
-_BLUR_SIGMA = 0.15
+_BLUR_SIGMA = 0.05
 _ROUGHNESS = 0.5  # of the mean height: how sharply the curve may bend at a knot
 _HUBER = 2.5
 _GROSS = 7.0
@@ -82,16 +82,18 @@ class MapNormal:
 
 @dataclass(frozen=True)
 class _Rows:
-    """One view's residuals (N,) at gain 1, design (N, S), predicted counts (N,) and weights (N,)."""
+    """One view's residuals (N,) at gain 1, design (N, S), predicted counts (N,) at gain 1, weights (N,), and slopes (N,)
+    of the count with gain, by log step and by px."""
 
     residual: Array
     design: Array
     predicted: Array
     weight: Array
+    slope: Array
     slope_px: Array
 
 
-def _rows_of(steps: EventSteps, v: int, views: int, model: MapModel, basis: MapBasis) -> _Rows:
+def _rows_of(steps: PixelSteps, v: int, views: int, model: MapModel, basis: MapBasis) -> _Rows:
     scale, gain = float(np.exp(model.log_scale[v])), model.gain[steps.pixel]
     predicted = scale * model.curve.value(steps.step)
     slope = gain * scale * model.curve.slope(steps.step)
@@ -106,7 +108,7 @@ def _rows_of(steps: EventSteps, v: int, views: int, model: MapModel, basis: MapB
     variance = model.noise.variance(predicted * gain, slope_px)
     left = np.abs(steps.count - gain * predicted) / np.sqrt(variance)
     robust = np.where(left > _GROSS, 0.0, np.minimum(1.0, _HUBER / np.maximum(left, 1e-9)))
-    return _Rows(steps.count - predicted, design, predicted, robust / variance, slope_px)
+    return _Rows(steps.count - predicted, design, predicted, robust / variance, slope, slope_px)
 
 
 def _prior(model: MapModel, views: int) -> tuple[Array, Array]:
@@ -123,8 +125,13 @@ def _prior(model: MapModel, views: int) -> tuple[Array, Array]:
     return matrix, right
 
 
-def accumulate(all_steps: list[EventSteps], model: MapModel, basis: MapBasis, log_blur: float) -> MapNormal:
-    """Normal equations about the present state."""
+def accumulate(all_steps: list[PixelSteps], model: MapModel, basis: MapBasis, log_blur: float,
+               motions: list[Array] | None = None) -> MapNormal:
+    """Normal equations about the present state.
+
+    `motions` [view] (N, 2, 6 + P), where given: d uv of the board's picture by the view's pose twist and the lens, for
+    the cross terms with them.
+    """
     views, pixels = len(all_steps), len(model.gain)
     matrix, right = _prior(model, views)
     matrix[MAP_TERMS, MAP_TERMS] += _BLUR_SIGMA**-2
@@ -138,19 +145,22 @@ def accumulate(all_steps: list[EventSteps], model: MapModel, basis: MapBasis, lo
         power[steps.pixel] += toward * row.predicted
         excess[steps.pixel] += toward * row.residual
     shrunk = 1.0 / (power + 1.0 / model.gain_variance)
-    scores, information, nuisance = np.zeros((views, size)), np.zeros((views, size, size)), []
+    scores, information = np.zeros((views, size)), np.zeros((views, size, size))
+    nuisance = np.zeros((views, size, 0 if motions is None else motions[0].shape[-1]))
     for v, (steps, row) in enumerate(zip(all_steps, rows, strict=True)):
         own = row.design - (row.predicted * shrunk[steps.pixel])[:, None] * pull[steps.pixel]
-        weighted = own * row.weight[:, None]
-        scores[v] = weighted.T @ row.residual
-        information[v] = weighted.T @ row.design
-        slope = model.gain[steps.pixel] * np.exp(model.log_scale[v]) * model.curve.slope(steps.step)
-        nuisance.append(weighted.T @ (np.concatenate([steps.d_pose, steps.d_lens], axis=1) * slope[:, None]))
-    return MapNormal(matrix + information.sum(0), right + scores.sum(0), scores, information, np.array(nuisance),
+        own *= row.weight[:, None]
+        scores[v] = own.T @ row.residual
+        information[v] = own.T @ row.design
+        if motions is not None:
+            slope = row.slope[:, None] * steps.d_uv
+            # The board's picture moving one way is the pixel moving the other.
+            nuisance[v] = -own.T @ np.einsum("nj,njk->nk", slope, motions[v])
+    return MapNormal(matrix + information.sum(0), right + scores.sum(0), scores, information, nuisance,
                      excess * shrunk, shrunk)  # fmt: skip
 
 
-def left_over(steps: EventSteps, v: int, model: MapModel, basis: MapBasis) -> tuple[Array, Array, Array]:
+def left_over(steps: PixelSteps, v: int, model: MapModel, basis: MapBasis) -> tuple[Array, Array, Array]:
     """Residual (N,) with gains, predicted count (N,), and |d count / d px| (N,) of one view."""
     row = _rows_of(steps, v, len(model.log_scale), model, basis)
     gain = model.gain[steps.pixel]
