@@ -19,6 +19,7 @@ from hybridtrack.calibration.corners import find_boards
 from hybridtrack.calibration.defects import find_defects, quiet_counts
 from hybridtrack.calibration.event_light import EventSteps, event_steps
 from hybridtrack.calibration.event_map_fit import fit_event_map
+from hybridtrack.calibration.first_fire import FirstFire, at_mean_first_event, measure_first_fire
 from hybridtrack.calibration.frame_views import FrameSettings, FrameViews, fit_frames
 from hybridtrack.calibration.intervals import shortest_interval_ns
 from hybridtrack.calibration.joint import join_blocks
@@ -67,6 +68,7 @@ class CalibrationResult:
     views: list[CalibratedView]
     blink: Blink
     onset: OnsetFit
+    first_fire: FirstFire | None
     frames: FrameViews
     frame_settings: FrameSettings
     lens_fit: LensFit
@@ -193,7 +195,10 @@ def calibrate(
     tell("views", 0.08)
     views, findings = find_views(recording, rough, shape, options.views)
     tell("flips", 0.16)
-    onset = fit_onsets(recording, rough, views, [fold_view(recording, view, rough, shape) for view in views])
+    folds = [fold_view(recording, view, rough, shape) for view in views]
+    onset = fit_onsets(recording, rough, views, folds)
+    first_fire = measure_first_fire(recording, views, folds, onset)
+    onset = at_mean_first_event(onset, first_fire)
     blink = onset.blink
     folds = [fold_view(recording, view, blink, shape) for view in views]
     findings += blink_findings(blink, target)
@@ -234,8 +239,8 @@ def calibrate(
     placed_folds, placed_steps = [fold for fold, _ in placed], [step for _, step in placed]
     kept_views = [views[image.index] for image in images]
     settling = measure_settling(recording, kept_views, folds, blink)
-    defects, defect_findings = find_defects(quiet_counts(recording, kept_views, folds, blink, shape), placed_folds,
-                                            placed_steps, 1.0)
+    quiet = quiet_counts(recording, kept_views, folds, blink, shape)
+    defects, defect_findings = find_defects(quiet, placed_folds, placed_steps)
     thresholds = fit_thresholds(
         step_counts(placed_folds, placed_steps, settling.share, healthy_mask(defects, shape)), shape
     )
@@ -250,7 +255,7 @@ def calibrate(
         "findings": findings, "provenance": provenance(recording, target, options),
     })
     tell("module", 1.0)
-    return CalibrationResult(module, target, shown, blink, onset, frames, settings, lens_fit, map_fit, timing, thresholds,
+    return CalibrationResult(module, target, shown, blink, onset, first_fire, frames, settings, lens_fit, map_fit, timing, thresholds,
                              settling, findings)
 
 

@@ -79,7 +79,8 @@ class ClockModel:
         start_ns = rows.stamp_ns + clocks.offset_ns + clocks.drift * from_epoch + rows.order[:, None] * clocks.line_time_ns
         length_ns = np.maximum(rows.exposure_ns + clocks.exposure_correction_ns, 1000.0)
         rate = self.blink.hz * 1e-9
-        begin = (start_ns + float(rows.origin_ns - self.blink.epoch_ns)) * rate + self.blink.epoch_phase
+        # The blink's phase counts from where light is half way up, the waveform from where it begins to rise.
+        begin = (start_ns + float(rows.origin_ns - self.blink.epoch_ns)) * rate + self.blink.epoch_phase + 0.5 * self.rise
         return begin, length_ns * rate
 
     def waveform(self, clocks: Clocks) -> Waveform:

@@ -73,14 +73,16 @@ class ThresholdFit:
     findings: list[str]
 
 
-def count_curve(counts: StepCounts, bins: int = 14) -> CountCurve:
-    """Counts averaged over bins of equal numbers of observations along the step."""
-    order = np.argsort(counts.step)
-    groups = [g for g in np.array_split(order, bins) if len(g) >= LEAST_PIXELS]
-    columns = [[float(np.median(counts.step[g])), float(counts.on[g].mean()), float(counts.off[g].mean()), len(g)]
-               for g in groups]
-    table = np.array(columns).reshape(-1, 4)
-    return CountCurve(*table.T)
+def count_curve(counts: StepCounts, bins: int = 16) -> CountCurve:
+    """Counts averaged over bins of equal width along the step, those with few observations left out."""
+    if not len(counts.step):
+        return CountCurve(*np.zeros((4, 0)))
+    low, high = np.quantile(counts.step, [0.001, 0.999])
+    which = np.digitize(counts.step, np.linspace(low, high, bins + 1)[1:-1])
+    groups = [np.flatnonzero(which == k) for k in range(bins)]
+    columns = [[float(counts.step[g].mean()), float(counts.on[g].mean()), float(counts.off[g].mean()), len(g)]
+               for g in groups if len(g) >= LEAST_PIXELS]
+    return CountCurve(*np.array(columns).reshape(-1, 4).T)
 
 
 def thresholds_by_steps(counts: StepCounts) -> tuple[Array, Array]:

@@ -2,8 +2,8 @@
 
 Still light is the last fifth of the bright half of a cycle, when a burst is long over, and, for pixels away from
 everything that blinks, all of the view. A pixel is hot where its count is far more than that of its neighbourhood
-could be by chance (Poisson tail); lamps that flicker over a whole patch are not. A pixel is dead where it never fired
-although blinking squares covered it in several views and other pixels there fired many times.
+could be by chance (Poisson tail); lamps that flicker over a whole patch are not. A pixel is dead where it all but never fired
+although light blinked on it by a step that any healthy pixel answers.
 """
 
 from dataclasses import dataclass
@@ -24,8 +24,8 @@ Array = np.ndarray
 QUIET = (0.78, 0.97)  # part of the bright half in which nothing changes
 HOT_RATIO = 15.0
 HOT_LEAST_HZ = 3.0
-DEAD_VIEWS = 2
 DEAD_FLIPS = 20
+CLEAR_STEP = 0.9  # log step that any healthy pixel answers
 
 
 @dataclass(frozen=True)
@@ -77,21 +77,17 @@ def hot_pixels(quiet: QuietCounts) -> Array:
     return (tail < 1e-3 / rate.size) & (rate > expected_hz)
 
 
-def dead_pixels(folds: list[ViewFold], steps: list[EventSteps], least_step: float) -> tuple[Array, Array]:
-    """Mask of dead pixels, and of those that could be judged (rows, columns).
-
-    Judged: inside blinking squares with a log step of at least `least_step` for two views and twenty flips together.
-    """
+def dead_pixels(folds: list[ViewFold], steps: list[EventSteps]) -> tuple[Array, Array]:
+    """Mask of dead pixels, and of those that could be judged (rows, columns): flips of a clear step met them often."""
     shape = folds[0].planes.shape[1:]
-    views, flips, events = np.zeros(shape, int), np.zeros(shape, int), np.zeros(shape, np.int64)
+    flips, events = np.zeros(shape, int), np.zeros(shape, np.int64)
     for fold, step in zip(folds, steps, strict=True):
         with np.errstate(invalid="ignore"):
-            covered = step.log_step > least_step
-        views += covered
+            covered = (step.log_step > CLEAR_STEP) | (np.abs(step.edge_step) > CLEAR_STEP)
         flips += np.where(covered, 2 * fold.cycles, 0)
         events += np.where(covered, fold.planes.sum(axis=0, dtype=np.int64), 0)
-    judged = (views >= DEAD_VIEWS) & (flips >= DEAD_FLIPS)
-    return judged & (events <= 0.01 * flips), judged
+    judged = flips >= DEAD_FLIPS
+    return judged & (events <= 0.02 * flips), judged
 
 
 def pixel_list(mask: Array) -> list[tuple[int, int]]:
@@ -100,16 +96,14 @@ def pixel_list(mask: Array) -> list[tuple[int, int]]:
     return [(int(a), int(b)) for a, b in zip(x, y, strict=True)]
 
 
-def find_defects(quiet: QuietCounts, folds: list[ViewFold], steps: list[EventSteps],
-                 least_step: float) -> tuple[Defects, list[str]]:
+def find_defects(quiet: QuietCounts, folds: list[ViewFold], steps: list[EventSteps]) -> tuple[Defects, list[str]]:
     """Hot and dead pixels, and findings."""
     hot = hot_pixels(quiet)
-    dead, judged = dead_pixels(folds, steps, least_step)
+    dead, judged = dead_pixels(folds, steps)
     findings = []
     share = float(np.mean(judged))
     if share < 0.9:
         findings.append(
-            f"dead pixels can only be told on the {100 * share:.0f} % of the event grid that blinking squares covered in "
-            f"{DEAD_VIEWS} views or more"
+            f"dead pixels can only be told on the {100 * share:.0f} % of the event grid that blinking squares covered"
         )
     return Defects(hot=pixel_list(hot), dead=pixel_list(dead & ~hot)), findings

@@ -91,7 +91,7 @@ def view_shares(settings: FrameSettings, clocks: Clocks, frames: FrameTable, cho
     order = mode.read_order(np.arange(mode.height))
     start = stamp + clocks.offset_ns + clocks.drift * (stamp - settings.drift_epoch_ns) + order * clocks.line_time_ns
     length = frames.exposure_ns[chosen].astype(float)[:, None] + clocks.exposure_correction_ns
-    cycles = (start - blink.epoch_ns) * (blink.hz * 1e-9) + blink.epoch_phase
+    cycles = (start - blink.epoch_ns) * (blink.hz * 1e-9) + blink.epoch_phase + 0.5 * settings.edges[0]
     return bright_share(cycles, length * (blink.hz * 1e-9) + np.zeros_like(cycles), settings.waveform(clocks))
 
 

@@ -103,3 +103,39 @@ def count_quiet_events(t: Array, x: Array, y: Array, epoch_ns: int, epoch_phase:
             phase -= np.floor(phase)
             if first <= phase < last:
                 out[y[k], x[k]] += 1
+
+
+@kernel
+def first_fire_status(t: Array, x: Array, y: Array, on: Array, flips_ns: Array, before_ns: float, after_ns: float,
+                      bin_ns: float, selected: Array, fired: Array, in_row: Array, seen: Array, status: Array) -> None:
+    """How many pixels of a row have fired since a flip, each time the row is read.
+
+    `t` and `flips_ns` (flips,) from one origin. A *read* is a run of events from one row. `status` (2, bins) gains, in the
+    bin of the read's last stamp after the flip less `before_ns`, the number of the row's `selected` pixels that have
+    fired ON, and of those that will before `after_ns` is over. Work space: `fired` (rows, columns) int64, filled with -1,
+    `in_row` and `seen` (rows,).
+    """
+    start = 0
+    for k in range(len(flips_ns)):
+        begin, end = flips_ns[k] - before_ns, flips_ns[k] + after_ns
+        while start < len(t) and t[start] < begin:
+            start += 1
+        stop = start
+        in_row[:] = 0
+        while stop < len(t) and t[stop] < end:
+            r, c = y[stop], x[stop]
+            if on[stop] == 1 and selected[r, c] and fired[r, c] != 2 * k:
+                fired[r, c] = 2 * k
+                in_row[r] += 1
+            stop += 1
+        seen[:] = 0
+        for n in range(start, stop):
+            r, c = y[n], x[n]
+            if on[n] == 1 and selected[r, c] and fired[r, c] != 2 * k + 1:
+                fired[r, c] = 2 * k + 1
+                seen[r] += 1
+            if (n + 1 == stop or y[n + 1] != r) and in_row[r] > 0:
+                place = int((t[n] - begin) / bin_ns)
+                if place < status.shape[1]:
+                    status[0, place] += seen[r]
+                    status[1, place] += in_row[r]

@@ -32,13 +32,15 @@ LEAST_EVENTS = 200
 class OnsetFit:
     """Blink clock by burst onsets.
 
-    `covariance` (2, 2) of (phase in ns at `centre_ns`, relative frequency); `rise_ns`: time between the quantiles a
-    third and three times that used, which says how sharp the onset is; `view_residual_ns` (V,): mean residual a view.
+    `covariance` (2, 2) of (phase in ns at `centre_ns`, relative frequency), scatter only; `systematic_ns`: deviation that
+    all flips share. `rise_ns`: time between the quantiles a third and three times that used, which says how sharp the
+    onset is; `view_residual_ns` (V,): mean residual a view.
     """
 
     blink: Blink
     centre_ns: float
     covariance: Array
+    systematic_ns: float
     rise_ns: float
     flip_time_ns: Array
     flip_residual_ns: Array
@@ -145,11 +147,13 @@ def fit_onsets(recording: Recording, blink: Blink, views: list[View], folds: lis
     view_residual = np.array([
         residual[view_of == k].mean() if np.any(view_of == k) else np.nan for k in range(len(views))
     ])
+    rise_ns = float(np.median(time[:, 2] - time[:, 0]))
     return OnsetFit(
         blink=refined,
         centre_ns=float(blink.epoch_ns + line[0]),
         covariance=scaling @ covariance @ scaling,
-        rise_ns=float(np.median(time[:, 2] - time[:, 0])),
+        systematic_ns=rise_ns,
+        rise_ns=rise_ns,
         flip_time_ns=blink.epoch_ns + time[:, 1],
         flip_residual_ns=residual,
         view_residual_ns=view_residual,

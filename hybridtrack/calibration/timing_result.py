@@ -11,7 +11,6 @@ from hybridtrack.module import FrameMode, Target, Timing
 Array = np.ndarray
 
 LATENCY_FINDING = "offset includes event latency"
-ONSET_SHARE = 0.3  # of the onset's rise counts as its systematic deviation
 
 
 @dataclass(frozen=True)
@@ -68,7 +67,7 @@ def timing_result(fit: ClockFit, onset: OnsetFit, mode: FrameMode, target: Targe
     apart_ns = fit.drift_epoch_ns + values["offset_ns"] - onset.centre_ns
     phase = np.array([1.0, apart_ns])
     covariance[offset, offset] += phase @ onset.covariance @ phase
-    covariance[offset, offset] += (ONSET_SHARE * onset.rise_ns) ** 2 + sweep_deviation_ns(target) ** 2
+    covariance[offset, offset] += onset.systematic_ns**2 + sweep_deviation_ns(target) ** 2
     if "drift" in free:
         drift = free.index("drift")
         covariance[drift, drift] += onset.covariance[1, 1] * 1e12
