@@ -52,7 +52,7 @@ def print_table(table: Table, title: str = "") -> None:
     """Print a report table on the terminal."""
     shown = TerminalTable(title=title or None, title_justify="left", box=None, pad_edge=False)
     for index, name in enumerate(table.columns):
-        shown.add_column(name, justify="left" if index == 0 else "right", no_wrap=index > 0)
+        shown.add_column(name, justify="left" if index == 0 or index in table.prose else "right")
     for row in table.rows:
         shown.add_row(*row)
     console.print(shown)

@@ -121,7 +121,7 @@ def calibration_table(result: CalibrationResult) -> Table:
     """Every number, its deviation and its meaning."""
     module = result.module
     rows = _lens_rows(module) + _map_rows(module) + _clock_rows(module) + _contrast_rows(module)
-    return Table(("quantity", "value", "deviation", "meaning"), tuple(rows))
+    return Table(("quantity", "value", "deviation", "meaning"), tuple(rows), prose=(3,))
 
 
 def calibration_figures(result: CalibrationResult) -> tuple[Figure, ...]:

@@ -91,7 +91,7 @@ def _loop_table(result: OdometryResult) -> Table:
         )
         for loop in result.summary["loops"]
     )
-    return Table(("keyframes", "features", "verdict", "reason"), rows, "Loops that were proposed")
+    return Table(("keyframes", "features", "verdict", "reason"), rows, "Loops that were proposed", prose=(2, 3))
 
 
 def odometry_page(result: OdometryResult, recording: str) -> Page:

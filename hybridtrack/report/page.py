@@ -31,11 +31,13 @@ class Figure:
 
 @dataclass(frozen=True)
 class Table:
-    """A table of ready text: `columns` are its heads, each of `rows` has as many cells."""
+    """A table of ready text: `columns` are its heads, each of `rows` has as many cells; `prose` columns read from the
+    left, the first always does, others are numbers."""
 
     columns: tuple[str, ...]
     rows: tuple[tuple[str, ...], ...]
     caption: str = ""
+    prose: tuple[int, ...] = ()
 
 
 @dataclass(frozen=True)

@@ -122,7 +122,7 @@ def ending_table(tracks: Tracks, lives: Lives) -> Table:
     pairs, counts = np.unique(np.stack([lives.state, lives.reason], axis=1), axis=0, return_counts=True)
     order = np.argsort(-counts)
     rows = tuple((tracks.states[pairs[i, 0]], tracks.reasons[pairs[i, 1]], str(counts[i])) for i in order)
-    return Table(("last state", "reason", "features"), rows, "How features ended")
+    return Table(("last state", "reason", "features"), rows, "How features ended", prose=(1,))
 
 
 def track_table(tracks: Tracks) -> Table:
