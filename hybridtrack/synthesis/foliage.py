@@ -9,7 +9,7 @@ from hybridtrack.synthesis.textures import Array, Generator, dot, fill, linear_l
 
 @dataclass(frozen=True)
 class Species:
-    """How one kind of plant looks: leaves a plant, width over length, tone (8 bit), how pale its veins are, jaggedness."""
+    """How a kind of plant looks: leaves a plant, width over length, tone (8 bit), paleness of veins, jaggedness."""
 
     leaves: int
     slimness: float
@@ -21,7 +21,11 @@ class Species:
     def drawn(rng: Generator) -> "Species":
         """An invented species."""
         return Species(
-            int(rng.integers(4, 11)), rng.uniform(0.22, 0.6), rng.uniform(85, 185), rng.uniform(20, 60), rng.uniform(0, 0.14)
+            leaves=int(rng.integers(4, 11)),
+            slimness=rng.uniform(0.22, 0.6),
+            tone=rng.uniform(85, 185),
+            vein=rng.uniform(20, 60),
+            teeth=rng.uniform(0, 0.14),
         )
 
 
@@ -39,8 +43,12 @@ def draw_leaf(canvas: Array, base: Array, heading: float, length: float, look: S
     half = leaf_outline(length, length * look.slimness, look.teeth)
     mirrored = half * [1.0, -1.0]
     turn = np.array([[np.cos(heading), np.sin(heading)], [-np.sin(heading), np.cos(heading)]])
-    place = lambda points: points @ turn + base  # noqa: E731  one short local formula
-    fill(canvas, place(np.concatenate([half, mirrored[::-1]])) + [0.06 * length, 0.09 * length], 32)
+
+    def place(points: Array) -> Array:
+        return points @ turn + base
+
+    shadow = np.array([0.06, 0.09]) * length
+    fill(canvas, place(np.concatenate([half, mirrored[::-1]])) + shadow, 32)
     fill(canvas, place(half), np.clip(tone * 1.1, 30, 235))
     fill(canvas, place(mirrored), np.clip(tone * 0.86, 28, 225))
     rib = np.clip(tone + look.vein, 40, 245)
@@ -117,7 +125,7 @@ def pot_top(rng: Generator, size: int, rim: float) -> Array:
 
 
 def leaf_blade(rng: Generator, size: int = 256) -> Array:
-    """Texture of a leaf that is a parallelogram: midrib from corner (0, 0) to the opposite one, veins fanning from it."""
+    """Texture of a leaf that is a parallelogram: midrib from corner (0, 0) to the opposite one, veins fanning out."""
     tone, vein = rng.uniform(95, 180), rng.uniform(20, 60)
     canvas = np.full((size, size), int(tone * 0.74), np.uint8)
     fill(canvas, np.array([[0.0, 0.0], [size, 0.0], [size, size]]), min(tone * 1.1, 240))

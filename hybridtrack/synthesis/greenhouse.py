@@ -98,7 +98,12 @@ def build_world(recipe: GreenhouseRecipe, seed: int) -> World:
 
 
 def write_events(
-    world: World, motion: PictureMotion, pixels: EventPixels, sink: EventSink, end_ns: float, tell: Callable[[float], None]
+    world: World,
+    motion: PictureMotion,
+    pixels: EventPixels,
+    sink: EventSink,
+    end_ns: float,
+    tell: Callable[[float], None],
 ) -> None:
     """Run the event pixels from time 0 to the end."""
     for times, light in world.view.event_light(motion, 0.0, end_ns):
@@ -108,7 +113,12 @@ def write_events(
 
 
 def write_frames(
-    world: World, motion: PictureMotion, clock: FrameClock, sensor: FrameSensor, writer: RecordingWriter, end_ns: float,
+    world: World,
+    motion: PictureMotion,
+    clock: FrameClock,
+    sensor: FrameSensor,
+    writer: RecordingWriter,
+    end_ns: float,
     tell: Callable[[float], None],
 ) -> None:
     """Write every frame that is exposed between time 0 and the end."""
@@ -119,10 +129,8 @@ def write_frames(
     def flush() -> None:
         if images:
             stamps, numbers = zip(*kept, strict=True)
-            exposures = np.full(len(kept), clock.exposure_ns, np.int64)
-            writer.append_frames(
-                np.stack(images), np.array(stamps, np.int64), exposures, np.array(numbers, np.uint64), np.ones(len(kept))
-            )
+            t, exposures = np.array(stamps, np.int64), np.full(len(kept), clock.exposure_ns, np.int64)
+            writer.append_frames(np.stack(images), t, exposures, np.array(numbers, np.uint64), np.ones(len(kept)))
             images.clear()
             kept.clear()
 
@@ -140,7 +148,9 @@ def write_frames(
     flush()
 
 
-def write_truth(writer: RecordingWriter, world: World, motion: PictureMotion, pixels: EventPixels, end_ns: float) -> None:
+def write_truth(
+    writer: RecordingWriter, world: World, motion: PictureMotion, pixels: EventPixels, end_ns: float
+) -> None:
     """Poses every millisecond, the true module, and what an estimate may be compared with."""
     t = np.rint(np.append(np.arange(0.0, end_ns, POSE_STEP_NS), end_ns)).astype(np.int64)
     extras: dict[str, Any] = {

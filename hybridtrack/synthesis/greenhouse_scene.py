@@ -11,10 +11,11 @@ from dataclasses import dataclass
 import numpy as np
 
 from hybridtrack.synthesis import foliage, textures
-from hybridtrack.synthesis.scene import GREY, Box, Scene, SceneBuilder, Surface, shaded
+from hybridtrack.synthesis.scene import GREY, Box, Scene, SceneBuilder, Surface, shaded, vector
 
 Array = np.ndarray
 Tint = tuple[float, float, float, float]
+Vector = tuple[float, float, float]
 
 LEAF_GREEN: Tint = (1.0, 0.75, 1.15, 0.6)
 TERRACOTTA: Tint = (1.0, 1.5, 0.85, 0.6)
@@ -34,7 +35,13 @@ class Bench:
     coarse: float = 1.0
 
 
-BENCHES = (Bench(-0.35, 0.75, 0.62, 1.2), Bench(0.95, 0.95, 0.8), Bench(2.35, 0.85, 1.0, 1.5), Bench(3.75, 0.8, 1.25, 2.2))
+BENCHES = (
+    Bench(-0.35, 0.75, 0.62, 1.2),
+    Bench(0.95, 0.95, 0.8),
+    Bench(2.35, 0.85, 1.0, 1.5),
+    Bench(3.75, 0.8, 1.25, 2.2),
+)
+WORDS = ("BED", "FERN", "MINT", "SAGE", "TRAY", "MIST", "WARM", "SEED", "SOIL", "LEAF")
 
 
 class Greenhouse:
@@ -46,7 +53,9 @@ class Greenhouse:
         self.coarse = 1.0
         self.builder = SceneBuilder()
 
-    def material(self, draw: Callable[..., Array], width_m: float, height_m: float, *look: object, coarse: float = 1.0) -> int:
+    def material(
+        self, draw: Callable[..., Array], width_m: float, height_m: float, *look: object, coarse: float = 1.0
+    ) -> int:
         """Draw a texture for a surface of this size, `coarse` times coarser than the finest; return its index."""
         shape = tuple(max(round(side / (coarse * self.coarse * self.texel_m)), 8) for side in (height_m, width_m))
         return self.builder.texture(draw(self.random, shape, *look))
@@ -55,18 +64,18 @@ class Greenhouse:
         """Floor and walls."""
         length, depth = 2 * HALF_LENGTH_M, FAR_WALL_M - NEAR_WALL_M
         floor = self.material(textures.concrete, length, depth, coarse=2.5)
-        self.builder.add(Surface((-HALF_LENGTH_M, FAR_WALL_M, 0.0), (length, 0, 0), (0, -depth, 0), floor, one_sided=True))
-        corners = [
+        corner = (-HALF_LENGTH_M, FAR_WALL_M, 0.0)
+        self.builder.add(Surface(corner, (length, 0, 0), (0, -depth, 0), floor, one_sided=True))
+        walls: list[tuple[tuple[float, float], tuple[float, float], Callable[..., Array]]] = [
             ((-HALF_LENGTH_M, FAR_WALL_M), (length, 0.0), textures.wall),
             ((HALF_LENGTH_M, NEAR_WALL_M), (-length, 0.0), textures.slats),
             ((-HALF_LENGTH_M, NEAR_WALL_M), (0.0, depth), textures.slats),
             ((HALF_LENGTH_M, FAR_WALL_M), (0.0, -depth), textures.wall),
         ]
-        for (x, y), (dx, dy), draw in corners:
+        for (x, y), (dx, dy), draw in walls:
             texture = self.material(draw, float(np.hypot(dx, dy)), HEIGHT_M, coarse=2.5)
-            self.builder.add(
-                Surface((x, y, HEIGHT_M), (dx, dy, 0.0), (0, 0, -HEIGHT_M), texture, tint=shaded(GREY, 0.8), one_sided=True)
-            )
+            edges: tuple[Vector, Vector] = (dx, dy, 0.0), (0.0, 0.0, -HEIGHT_M)
+            self.builder.add(Surface((x, y, HEIGHT_M), *edges, texture, tint=shaded(GREY, 0.8), one_sided=True))
 
     def bench(self, bench: Bench) -> None:
         """A bench: mesh top, slatted front and ends, legs implied by a skirt that stops above the floor."""
@@ -116,10 +125,10 @@ class Greenhouse:
             across = np.array([-np.sin(heading), np.cos(heading), 0.0])
             half = 0.5 * random.uniform(0.35, 0.6) * length * across
             base = np.asarray(foot) + [0, 0, random.uniform(0.04, 0.22)] + 0.015 * out
-            edges = [tuple(map(float, 0.5 * length * out + side)) for side in (half, -half)]
+            edges = [vector(0.5 * length * out + side) for side in (half, -half)]
             tint = shaded(LEAF_GREEN, random.uniform(0.55, 1.1))
             texture = int(random.choice(blades))
-            self.builder.add(Surface(tuple(map(float, base)), edges[0], edges[1], texture, tint=tint))
+            self.builder.add(Surface(vector(base), edges[0], edges[1], texture, tint=tint))
 
     def stock(self, bench: Bench, blades: Array) -> None:
         """Fill a bench: places 60 cm apart, each with trays, a pot, a crate or a tall plant."""
@@ -144,7 +153,7 @@ class Greenhouse:
     def signs(self) -> None:
         """Boards on the benches' fronts and on the far wall, and bed numbers on short posts."""
         random = self.random
-        words = iter(random.permutation(["BED", "FERN", "MINT", "SAGE", "TRAY", "MIST", "WARM", "SEED", "SOIL", "LEAF"]).tolist() * 9)
+        words = iter(random.permutation(WORDS).tolist() * 9)
         for bench in BENCHES:
             for x in np.arange(-3.1, 3.2, 1.24) + random.uniform(-0.3, 0.3, 6):
                 text = f"{next(words)} {random.integers(1, 90)}"

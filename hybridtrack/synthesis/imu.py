@@ -29,7 +29,7 @@ class ImuRecipe(Strict):
 def _disturbed(
     truth: np.ndarray, rate_hz: float, spread: tuple[float, float, float], random: np.random.Generator
 ) -> np.ndarray:
-    """`truth` (N, 3) with a bias of deviation spread[0], its walk of density spread[1] and noise of density spread[2]."""
+    """`truth` (N, 3) with bias, walk and noise; `spread`: deviation of the bias, densities of walk and noise."""
     bias, walk, noise = spread
     steps = random.standard_normal(truth.shape) * walk / np.sqrt(rate_hz)
     steps[0] = bias * random.standard_normal(3)

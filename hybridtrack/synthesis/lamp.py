@@ -59,10 +59,11 @@ class LampRecipe(Strict):
 
     def integral_ns(self, t_ns: Array) -> Array:
         """Integral of `level` from time 0 to times (T,), in ns."""
-        t, cycles = np.asarray(t_ns, float), self._cycles(t_ns)
+        t = np.asarray(t_ns, float)
         if self.kind == "steady":
             return t
-        return self.daylight * t + (1.0 - self.daylight) * (self._lamp_cycles(cycles) - self._lamp_cycles(self._cycles(0.0))) * 1e9 / self.rate_hz
+        cycles = self._lamp_cycles(self._cycles(t)) - self._lamp_cycles(self._cycles(np.zeros(1)))
+        return np.asarray(self.daylight * t + (1.0 - self.daylight) * cycles * 1e9 / self.rate_hz)
 
     def _lamp_cycles(self, cycles: Array) -> Array:
         """Integral of the lamps' part over cycles, from cycle 0."""
@@ -71,6 +72,7 @@ class LampRecipe(Strict):
         whole, place, edge = np.floor(cycles), cycles % 1.0, self._edge
         ramp_up, ramp_down = np.clip(place, 0, edge), np.clip(place - self.duty, 0, edge)
         on = np.clip(place - edge, 0, None) - np.clip(place - self.duty, 0, None)
+        # Half of a ramp's square over its length is what the ramp lets through.
         return whole + (0.5 * ramp_up**2 / edge + on + ramp_down - 0.5 * ramp_down**2 / edge) / self.duty
 
     def turning_points_ns(self, t0_ns: float, t1_ns: float) -> Array:

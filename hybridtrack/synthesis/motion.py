@@ -31,7 +31,7 @@ class Curve(Protocol):
 
 @dataclass(frozen=True)
 class Sinusoids:
-    """`offset + sum_k amplitude_k sin(2 pi hz_k t + phase_k)`: offset (3,), amplitude (K, 3), hz (K,), phase (K, 3) rad."""
+    """`offset + sum_k amplitude_k sin(2 pi hz_k t + phase_k)`: (3,), (K, 3), (K,) and (K, 3) rad."""
 
     offset: FloatArray
     amplitude: FloatArray
@@ -57,9 +57,8 @@ class CubicSpline:
         """Refuse times that do not rise or do not match."""
         times = np.asarray(self.t_s, float)
         if len(times) < 4 or np.any(np.diff(times) <= 0) or np.shape(self.values) != (len(times), 3):
-            raise ShapeError(
-                f"Expected at least 4 rising times and as many values of 3, got {np.shape(times)} and {np.shape(self.values)}."
-            )
+            shapes = f"{np.shape(times)} and {np.shape(self.values)}"
+            raise ShapeError(f"Expected at least 4 rising times and as many values of 3, got {shapes}.")
 
     @cached_property
     def _spline(self) -> BSpline:
@@ -108,7 +107,7 @@ class Trajectory:
 
 
 def looking(forward: FloatArray) -> FloatArray:
-    """Attitude (3, 3) of a level camera that looks along `forward` (3,); z is up in the world. ShapeError straight up or down."""
+    """Attitude (3, 3) of a level camera that looks along `forward` (3,), world z up; ShapeError on the vertical."""
     forward = with_trailing_shape(forward, "forward", (3,))
     right = np.cross(forward, [0.0, 0.0, 1.0])
     if np.linalg.norm(right) < 1e-6 * np.linalg.norm(forward):
@@ -143,7 +142,8 @@ class LapMotion(Strict):
         length, width = self.half_length_m, self.half_width_m
         amplitude = np.array([[length, width, 0], [0.08 * length, 0, 0], [0, 0, self.bob_m]])
         quarter = 0.5 * np.pi
-        phase = np.array([[start + quarter, start, 0], [3 * start + quarter, 0, 0], [0, 0, random.uniform(0, 2 * np.pi)]])
+        bob = random.uniform(0, 2 * np.pi)
+        phase = np.array([[start + quarter, start, 0], [3 * start + quarter, 0, 0], [0, 0, bob]])
         swings = np.maximum(np.rint(self.sway_hz * self.lap_s * np.array([0.7, 1.0, 1.5])), 1.0)
         share = np.array([[0.6, 0.5, 0.4], [0.3, 0.4, 0.8], [0.25, 0.2, 0.25]])
         rotation = Sinusoids(

@@ -49,7 +49,7 @@ def points_seen(
     times, pose_of_ray = np.unique(t[order], return_inverse=True)
     poses = trajectory.poses(times)
     directions = lens.unproject(uv[order], allow_outside=True)
-    reached = np.isfinite(directions).all(axis=-1)
+    reached = np.asarray(np.isfinite(directions).all(axis=-1))
     hits = cast(scene, poses, np.where(reached[:, None], directions, [0.0, 0.0, 1.0]), pose_of_ray)
     points, surface = np.empty((len(uv), 3)), np.empty(len(uv), np.int64)
     met = reached & (hits.surface >= 0)
@@ -71,10 +71,10 @@ def visible_points(
     p_camera = se3.transform(se3.inverse(poses), np.broadcast_to(points, (len(poses), *points.shape)))
     uv = lens.project(p_camera)
     with np.errstate(invalid="ignore"):
-        on_array = np.all((uv >= -0.5) & (uv <= np.array([array.width, array.height]) - 0.5), axis=-1)
-    time_index, _ = rows = np.nonzero(on_array)
+        on_array = np.asarray(np.all((uv >= -0.5) & (uv <= np.array([array.width, array.height]) - 0.5), axis=-1))
+    rows = np.nonzero(on_array)
     distance = np.linalg.norm(p_camera[rows], axis=-1)
-    hits = cast(scene, poses, p_camera[rows] / distance[:, None], time_index)
+    hits = cast(scene, poses, p_camera[rows] / distance[:, None], rows[0])
     visible = np.zeros(on_array.shape, bool)
     visible[rows] = hits.distance >= distance * (1.0 - _HIDDEN_BY)
     return uv, visible

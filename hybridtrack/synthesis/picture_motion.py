@@ -51,7 +51,8 @@ class PictureMotion:
 
 def probe_pixels(width: int, height: int) -> FloatArray:
     """Positions (N, 2) of probes over the colour array."""
-    u, v = np.meshgrid(*((np.arange(n) + 0.5) / n * size - 0.5 for n, size in zip(_PROBES, (width, height), strict=True)))
+    across, down = ((np.arange(n) + 0.5) / n for n in _PROBES)
+    u, v = np.meshgrid(across * width - 0.5, down * height - 0.5)
     return np.stack([u, v], axis=-1).reshape(-1, 2)
 
 

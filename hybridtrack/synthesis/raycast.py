@@ -8,6 +8,7 @@ and one for its frames.
 
 import math
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 
@@ -58,9 +59,9 @@ class Aperture:
 class PixelRays:
     """Rays of P pixels, sorted into tiles. Made by `pixel_rays`.
 
-    `positions` (P, 2) and `directions` (P, 3), NaN beyond the lens's reach, in the caller's order. `rays` (R, RAY_SIZE),
-    see the kernels, tile after tile; ray n is pixel `order[n]`'s, tile i starts at `start[i]`. Pixels `unreached` by the
-    lens have no ray. `tiles`, `groups`: cone axes and sines.
+    `positions` (P, 2) and `directions` (P, 3), NaN beyond the lens's reach, in the caller's order. `rays`
+    (R, RAY_SIZE), see the kernels, tile after tile; ray n is pixel `order[n]`'s, tile i starts at `start[i]`. Pixels
+    `unreached` by the lens have no ray. `tiles`, `groups`: cone axes and sines.
     """
 
     positions: FloatArray
@@ -82,7 +83,7 @@ class PixelRays:
 def _cones(rays: FloatArray, start: Array, margin_rad: float) -> tuple[FloatArray, FloatArray]:
     """Axes (tiles, 3) and sines of half angles (tiles,) of cones around each tile's rays."""
     axes, sines = np.empty((len(start) - 1, 3)), np.empty(len(start) - 1)
-    for i, (begin, end) in enumerate(zip(start[:-1], start[1:], strict=True)):
+    for i, (begin, end) in enumerate(pairwise(start)):
         members = rays[begin:end, RAY : RAY + 3]
         axis = members.mean(axis=0)
         axes[i] = axis / np.linalg.norm(axis)
@@ -229,5 +230,6 @@ def cast(
     for first in range(0, len(poses), block):
         rows = slice(*np.searchsorted(index, [first, first + block]))
         maps = maps_of(scene, poses[first : first + block])
-        cast_rays(maps, index[rows] - first, directions[rows], hits.surface[rows], hits.place[rows], hits.distance[rows])
+        found = hits.surface[rows], hits.place[rows], hits.distance[rows]
+        cast_rays(maps, index[rows] - first, directions[rows], *found)
     return hits

@@ -1,3 +1,4 @@
+# mypy: allow-untyped-defs
 """Compiled ray casting of textured parallelograms.
 
 A surface is the parallelogram `origin + s * edge_u + t * edge_v`, s and t in 0..1. For a camera at `c` with rotation
@@ -19,7 +20,7 @@ from hybridtrack.compiled import kernel
 
 # A row of `maps`: H by rows, lengths of the four outline functionals, texels^2 per m^2 over the plane's distance.
 MAP_SIZE = 14
-# A row of `windows`: first texel (x, y) and span in texels (x, y) of the surface's part of its texture, texels^2 per m^2.
+# A row of `windows`: first texel (x, y) and span in texels (x, y) of a surface's part of its texture, texels^2 per m^2.
 WINDOW_SIZE = 5
 # A row of `looks`: the first four of a row of `windows`, the tints of the four channels, the texture's index.
 LOOK_TEXTURE, LOOK_SIZE = 8, 9
@@ -78,11 +79,12 @@ def _may_meet(row, axis, sine):
     b = row[3] * axis[0] + row[4] * axis[1] + row[5] * axis[2]
     w = row[6] * axis[0] + row[7] * axis[1] + row[8] * axis[2]
     depth = math.sqrt(row[6] ** 2 + row[7] ** 2 + row[8] ** 2)
-    if a < -row[9] * sine or w - a < -row[10] * sine or b < -row[11] * sine or w - b < -row[12] * sine or w < -depth * sine:
+    # Sines of the angles by which the axis lies inside each of the five planes.
+    inside = min(min(a / row[9], (w - a) / row[10]), min(b / row[11], (w - b) / row[12]))
+    inside = min(inside, w / depth)
+    if inside < -sine:
         return 0
-    if a > row[9] * sine and w - a > row[10] * sine and b > row[11] * sine and w - b > row[12] * sine and w > depth * sine:
-        return 2
-    return 1
+    return 2 if inside > sine else 1
 
 
 @kernel
@@ -99,8 +101,10 @@ def _inverse_distances(row, axis, sine):
 
 @kernel
 def _list_tile(maps, parents, axis, sine, candidates):
-    """Write the surfaces that may meet a cone at one of the poses, near ones first, so that most rays reject the rest by
-    distance alone; return how many. -1: the list is full."""
+    """Write the surfaces that may meet a cone at one of the poses; return how many. -1: the list is full.
+
+    Near ones come first, so that most rays reject the rest by distance alone.
+    """
     count = 0
     floor = 0.0  # inverse distance beyond which a surface that fills the cone at every pose hides the others
     for q in parents:
@@ -141,9 +145,9 @@ def _list_tile(maps, parents, axis, sine, candidates):
 def list_candidates(maps, groups, group_axes, group_sines, axes, sines, candidates, counts):
     """List for every tile the surfaces that may meet it at some pose of a short, smooth motion.
 
-    `maps` (K, Q, MAP_SIZE) holds poses along the motion, close enough that the cones' margin covers what lies between. Tiles lie in larger groups, which are tried first:
-    `groups` (tiles,) names each tile's, tiles of a group adjoin. Fills `candidates` (tiles, room) and `counts`; returns
-    whether the room sufficed.
+    `maps` (K, Q, MAP_SIZE) holds poses along the motion, close enough that the cones' margin covers what lies between.
+    Tiles lie in larger groups, which are tried first: `groups` (tiles,) names each tile's, tiles of a group adjoin.
+    Fills `candidates` (tiles, room) and `counts`; returns whether the room sufficed.
     """
     everything = np.arange(maps.shape[1])
     parents = np.empty(maps.shape[1], np.int64)
@@ -295,8 +299,8 @@ def render_instants(maps, scene, tiles, candidates, counts, rays, light):
 
 @kernel
 def _between(maps, i, knot, share, ids, local):
-    """Fill `local` (C, MAP_SIZE) with the maps (samples, knots, Q, MAP_SIZE) of listed surfaces at sample `i`, `share` of
-    the way from a knot to the next."""
+    """Fill `local` (C, MAP_SIZE) with the maps (samples, knots, Q, MAP_SIZE) of listed surfaces at sample `i`, `share`
+    of the way from a knot to the next."""
     for c in range(local.shape[0]):
         for m in range(MAP_SIZE):
             below = maps[i, knot, ids[c], m]
@@ -308,8 +312,9 @@ def render_exposures(maps, weights, knots, scene, tiles, candidates, counts, ray
     """Add to `light` (P,) what pixels see, each exposed over samples at its own row's time.
 
     `maps` (samples, knots, Q, MAP_SIZE) holds every sample's surface maps at a few instants of the readout, `knots`
-    (P,) each pixel's place between them (a real number); `weights` (samples, knots) each sample's share of the exposure,
-    lamp included. Between knots, maps and weights are taken as straight lines. The rest as in `render_instants`.
+    (P,) each pixel's place between them (a real number); `weights` (samples, knots) each sample's share of the
+    exposure, lamp included. Between knots, maps and weights are taken as straight lines. The rest as in
+    `render_instants`.
     """
     order, start = tiles
     texels, levels, background = scene[0], scene[1], scene[5]

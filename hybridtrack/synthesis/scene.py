@@ -15,7 +15,9 @@ Array = np.ndarray
 
 TEXEL_FULL = 65535.0
 CHANNELS = "WRGB"
-GREY = (1.0, 1.0, 1.0, 1.0)
+Vector = tuple[float, float, float]
+Tint = tuple[float, float, float, float]
+GREY: Tint = (1.0, 1.0, 1.0, 1.0)
 _MOST_LEVELS = 16
 
 
@@ -54,12 +56,12 @@ class Surface:
     is not mirrored: `edge_u x edge_v` points away from the eye.
     """
 
-    origin: tuple[float, float, float]
-    edge_u: tuple[float, float, float]
-    edge_v: tuple[float, float, float]
+    origin: Vector
+    edge_u: Vector
+    edge_v: Vector
     texture: int
     window: tuple[float, float, float, float] | None = None
-    tint: tuple[float, float, float, float] = GREY
+    tint: Tint = GREY
     one_sided: bool = False
 
 
@@ -92,7 +94,7 @@ class Scene:
         o, u, v = self.origins, self.edges_u, self.edges_v
         corners = np.stack([o, o + u, o + u + v, o + v], axis=1).reshape(-1, 3)
         first = 4 * np.arange(self.size)[:, None]
-        return corners, np.concatenate([first + [0, 1, 2], first + [0, 2, 3]], axis=1).reshape(-1, 3)
+        return corners, (first + np.array([0, 1, 2, 0, 2, 3])).reshape(-1, 3)
 
     def points(self, surface: Array, place: FloatArray) -> FloatArray:
         """World points (..., 3) at (s, t) `place` (..., 2) of surfaces by index (...)."""
@@ -113,7 +115,7 @@ class SceneBuilder:
         picture = np.asarray(picture)
         if picture.ndim != 2 or min(picture.shape) < 1:
             raise ShapeError(f"Expected a texture of shape (H, W), got {picture.shape}.")
-        if not (0.0 <= float(picture.min()) and float(picture.max()) <= 1.0):
+        if float(picture.min()) < 0.0 or not float(picture.max()) <= 1.0:
             raise ShapeError(f"Expected texture values in 0..1, got {picture.min():g} to {picture.max():g}.")
         self._pyramids.append(pyramid(picture))
         return len(self._pyramids) - 1
@@ -154,9 +156,10 @@ class SceneBuilder:
         if not self.surfaces:
             raise ShapeError("Expected at least one surface in a scene, got none.")
         texels, levels = self._levels()
-        vectors = [np.array([getattr(s, name) for s in self.surfaces], float) for name in ("origin", "edge_u", "edge_v")]
         return Scene(
-            *vectors,
+            origins=np.array([s.origin for s in self.surfaces], float),
+            edges_u=np.array([s.edge_u for s in self.surfaces], float),
+            edges_v=np.array([s.edge_v for s in self.surfaces], float),
             one_sided=np.array([s.one_sided for s in self.surfaces]),
             textures=np.array([s.texture for s in self.surfaces], np.int64),
             windows=np.array([self._window(s) for s in self.surfaces]),
@@ -167,9 +170,16 @@ class SceneBuilder:
         )
 
 
-def shaded(tint: tuple[float, ...], factor: float) -> tuple[float, float, float, float]:
+def shaded(tint: Tint, factor: float) -> Tint:
     """A tint darkened or lightened by one factor."""
-    return tuple(factor * value for value in tint)  # type: ignore[return-value]
+    clear, red, green, blue = tint
+    return factor * clear, factor * red, factor * green, factor * blue
+
+
+def vector(values: Array) -> Vector:
+    """Three numbers as a tuple."""
+    x, y, z = (float(value) for value in values)
+    return x, y, z
 
 
 # Corner, edge along texture columns and edge along texture rows of each face of the unit box, seen from outside, and
@@ -185,26 +195,25 @@ _FACES: dict[str, tuple[tuple[int, int, int], tuple[int, int, int], tuple[int, i
 
 @dataclass(frozen=True)
 class Box:
-    """A box standing on its `foot` (the middle of its base), `size` along its own axes, turned by `turn_rad` about z."""
+    """A box standing on its `foot` (the middle of its base), `size` along its axes, turned by `turn_rad` about z."""
 
     foot: tuple[float, float, float]
     size: tuple[float, float, float]
     turn_rad: float = 0.0
 
-    def surface(self, face: str, texture: int, **look: object) -> Surface:
+    def surface(self, face: str, texture: int, tint: Tint = GREY) -> Surface:
         """One face, `top`, `front`, `back`, `left` or `right`, one-sided, darkened by how it faces the lamps."""
         corner, along_u, along_v, light = _FACES[face]
         cosine, sine = np.cos(self.turn_rad), np.sin(self.turn_rad)
         turn = np.array([[cosine, -sine, 0.0], [sine, cosine, 0.0], [0.0, 0.0, 1.0]])
         size = np.asarray(self.size)
         origin = np.asarray(self.foot) + turn @ ((np.asarray(corner) - [0.5, 0.5, 0.0]) * size)
-        tint = shaded(look.pop("tint", GREY), light)  # type: ignore[arg-type]
-        edges = [tuple(map(float, turn @ (np.asarray(axis) * size))) for axis in (along_u, along_v)]
-        return Surface(tuple(map(float, origin)), edges[0], edges[1], texture, tint=tint, one_sided=True, **look)  # type: ignore[arg-type]
+        edges = [vector(turn @ (np.asarray(axis) * size)) for axis in (along_u, along_v)]
+        return Surface(vector(origin), edges[0], edges[1], texture, tint=shaded(tint, light), one_sided=True)
 
-    def surfaces(self, top: int, sides: int, **look: object) -> list[Surface]:
+    def surfaces(self, top: int, sides: int, tint: Tint = GREY) -> list[Surface]:
         """All faces but the bottom, the sides sharing one texture."""
-        return [self.surface(face, top if face == "top" else sides, **look) for face in _FACES]
+        return [self.surface(face, top if face == "top" else sides, tint) for face in _FACES]
 
 
 def flat_panel(picture: Array, width_m: float, height_m: float) -> Scene:

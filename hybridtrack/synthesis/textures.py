@@ -16,7 +16,7 @@ _SUBPIXEL_BITS = 4
 
 
 def noise(rng: Generator, shape: tuple[int, int], coarsest: float, octaves: int = 5, fall: float = 0.6) -> Array:
-    """Smooth noise (H, W) float32 of about unit deviation: octaves from `coarsest` texels down, weaker by `fall` each."""
+    """Smooth noise (H, W) float32 of about unit deviation: octaves from `coarsest` texels, each weaker by `fall`."""
     total, power = np.zeros(shape, np.float32), 0.0
     for octave in range(octaves):
         cell = max(coarsest / 2**octave, 1.0)
@@ -31,11 +31,12 @@ def noise(rng: Generator, shape: tuple[int, int], coarsest: float, octaves: int 
 def linear_light(tones: Array, rng: Generator, roughness: float = 0.08, grain: float = 0.03) -> Array:
     """Turn 8-bit tones (H, W) into linear light float32, with mottling (`roughness`) and fine `grain`."""
     light = (np.arange(256, dtype=np.float32) / 255.0) ** 2.2
-    mottle = 1.0 + roughness * noise(rng, tones.shape, 60.0) + grain * rng.standard_normal(tones.shape, dtype=np.float32)
+    shape = tones.shape[0], tones.shape[1]
+    mottle = 1.0 + roughness * noise(rng, shape, 60.0) + grain * rng.standard_normal(shape, dtype=np.float32)
     return np.clip(light[tones] * np.maximum(mottle, 0.2), DARKEST, BRIGHTEST)
 
 
-def fixed_point(points: Array) -> Array:
+def fixed_point(points: Array | list[float]) -> Array:
     """Points (N, 2) in texels as OpenCV's fixed-point integers, drawn with `shift=_SUBPIXEL_BITS`."""
     return np.rint(np.asarray(points) * (1 << _SUBPIXEL_BITS)).astype(np.int32)
 
@@ -50,9 +51,10 @@ def stroke(canvas: Array, points: Array, tone: float, width: int = 1) -> None:
     cv2.polylines(canvas, [fixed_point(points)], False, float(tone), width, cv2.LINE_AA, _SUBPIXEL_BITS)
 
 
-def dot(canvas: Array, centre: Array, radius: float, tone: float) -> None:
+def dot(canvas: Array, centre: Array | list[float], radius: float, tone: float) -> None:
     """Fill a disc with smooth edges."""
-    cv2.circle(canvas, fixed_point(centre).tolist(), int(radius * (1 << _SUBPIXEL_BITS)), float(tone), -1, cv2.LINE_AA, _SUBPIXEL_BITS)
+    size = int(radius * (1 << _SUBPIXEL_BITS))
+    cv2.circle(canvas, fixed_point(centre).tolist(), size, float(tone), -1, cv2.LINE_AA, _SUBPIXEL_BITS)
 
 
 def rectangle(canvas: Array, left: float, top: float, width: float, height: float, tone: float) -> None:
@@ -98,7 +100,9 @@ def concrete(rng: Generator, shape: tuple[int, int], slab: float = 220.0) -> Arr
     return linear_light(canvas, rng, 0.12, 0.04)
 
 
-def slats(rng: Generator, shape: tuple[int, int], board: float = 36.0, gap: float = 6.0, bright: float = 150.0) -> Array:
+def slats(
+    rng: Generator, shape: tuple[int, int], board: float = 36.0, gap: float = 6.0, bright: float = 150.0
+) -> Array:
     """Upright wooden boards with dark gaps, grain, knots and screws."""
     height, width = shape
     canvas = np.full(shape, 30, np.uint8)
@@ -106,7 +110,8 @@ def slats(rng: Generator, shape: tuple[int, int], board: float = 36.0, gap: floa
         tone = np.clip(bright + rng.uniform(-35, 30), 50, 230)
         rectangle(canvas, left, 0, board, height, tone)
         for _ in range(5):
-            line = wander(rng, np.array([left + rng.uniform(3, board - 3), 0.0]), np.pi / 2, height // 24 + 1, 24.0, 0.01)
+            start = np.array([left + rng.uniform(3, board - 3), 0.0])
+            line = wander(rng, start, np.pi / 2, height // 24 + 1, 24.0, 0.01)
             line[:, 0] = np.clip(line[:, 0], left + 1, left + board - 1)
             stroke(canvas, line, tone - rng.uniform(12, 35), 1)
         for _ in range(rng.poisson(height / 300)):
@@ -127,7 +132,7 @@ def mesh(rng: Generator, shape: tuple[int, int], pitch: float = 24.0) -> Array:
     for _ in range(max(height * width // 45000, 2)):
         size = rng.uniform([60, 50], [240, 170])
         corner = rng.uniform([0, 0], np.maximum([width, height] - size, 1))
-        rectangle(canvas, *corner, *size, rng.uniform(50, 215))
+        rectangle(canvas, corner[0], corner[1], size[0], size[1], rng.uniform(50, 215))
     for centre in rng.uniform([0, 0], [width, height], (height * width // 12000, 2)):
         tone = rng.uniform(30, 90)
         for crumb in centre + rng.normal(0.0, rng.uniform(4, 14), (24, 2)):
@@ -145,7 +150,7 @@ def plastic(rng: Generator, shape: tuple[int, int], tone: float, ribs: float = 1
     rectangle(canvas, 0, 0, width, 0.16 * height, min(tone + 38, 240))
     for _ in range(max(height * width // 700, 2)):
         start = rng.uniform([0, 0], [width, height])
-        stroke(canvas, [start, start + rng.normal(0, 7, 2)], tone + rng.uniform(-45, 45), 1)
+        stroke(canvas, np.array([start, start + rng.normal(0, 7, 2)]), tone + rng.uniform(-45, 45), 1)
     for centre in rng.uniform([0, 0.6 * height], [width, height], (max(height * width // 350, 2), 2)):
         dot(canvas, centre, rng.uniform(0.6, 2.2), rng.uniform(28, 60))
     return linear_light(canvas, rng, 0.06)

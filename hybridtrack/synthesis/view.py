@@ -120,7 +120,9 @@ class View:
             light_between(seen, index[part], place[part] - index[part], level[part], gain, light)
             yield fine[part], light
 
-    def frame_light(self, motion: PictureMotion, row_starts_ns: FloatArray, exposure_ns: float, full_ns: float) -> Array:
+    def frame_light(
+        self, motion: PictureMotion, row_starts_ns: FloatArray, exposure_ns: float, full_ns: float
+    ) -> Array:
         """Mean light (rows, columns) float32 of a frame whose rows start their exposure at `row_starts_ns` (rows,).
 
         `exposure_ns` is how long they really expose, `full_ns` the exposure for which a white surface shows the lamps'
