@@ -26,38 +26,41 @@ class Detection:
 
 
 def difference_picture(view: ViewImages) -> Array:
-    """Bright minus dark (H, W), finite: saturated pixels are as bright as the brightest, unknown ones still."""
+    """Bright minus dark (H, W): saturated pixels as bright as the brightest, NaN where the picture is not known."""
     picture = view.bright_dn - view.dark_dn
     known = np.isfinite(picture)
     if not known.any():
-        return np.zeros_like(picture)
+        return picture
     saturated = ~np.isfinite(view.bright_dn) & np.isfinite(view.dark_dn)
-    top = float(np.percentile(picture[known], 99.5))
-    return np.where(known, picture, np.where(saturated, top, 0.0))
+    return np.where(saturated, float(np.percentile(picture[known], 99.5)), picture)
 
 
 def _balanced(picture: Array, counterphase: bool) -> Array:
-    """The picture with its strongest values clipped, so that a glare does not set the scale."""
-    high = np.percentile(picture, 99.0)
-    low = np.percentile(picture, 1.0) if counterphase else 0.0
-    return np.clip(picture, 1.5 * min(low, 0.0), 1.5 * max(high, 0.0))
+    """The picture with its strongest values clipped, so that a glare does not set the scale; zero where not known."""
+    high = np.nanpercentile(picture, 99.0)
+    low = np.nanpercentile(picture, 1.0) if counterphase else 0.0
+    return np.nan_to_num(np.clip(picture, 1.5 * min(low, 0.0), 1.5 * max(high, 0.0)))
 
 
 def detect_board(picture: Array, target: Target) -> Detection | str:
-    """Find and name the board's corners in `picture` (H, W), positive where set A is brighter than when dark.
+    """Find and name the board's corners in `picture` (H, W), positive where set A is brighter than when dark; NaN where
+    not known.
 
     Returns the detection, or a phrase that says what was missing.
     """
+    known = np.isfinite(picture)
+    if not known.any():
+        return "its frames could not be told into bright and dark"
     balanced = _balanced(picture, target.is_counterphase)
     most, best = 0, None
     total = (target.columns - 1) * (target.rows - 1)
     for scale in _SCALES_PX:
-        saddles = find_saddles(balanced, scale)
+        saddles = find_saddles(balanced, known, scale)
         grid = largest_grid(saddles)
         most = max(most, len(grid.index))
         if not grid.index:
             continue
-        labelling = label_grid(grid, read_cells(grid, saddles, balanced, target.is_counterphase), target)
+        labelling = label_grid(grid, read_cells(grid, saddles, balanced, known, target.is_counterphase), target)
         if labelling is None:
             continue
         on_board = labelling.ij[:, 0] > 0

@@ -8,7 +8,7 @@ what the picture shows there decides. The answer must be clear, or there is none
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.ndimage import gaussian_filter, map_coordinates
+from scipy.ndimage import gaussian_filter, map_coordinates, minimum_filter
 
 from hybridtrack.calibration.grid_growth import Grid
 from hybridtrack.calibration.saddle_points import Saddles
@@ -61,8 +61,10 @@ def _step_vectors(grid: Grid, xy: Array) -> dict[tuple[int, int], Array]:
     return steps
 
 
-def read_cells(grid: Grid, saddles: Saddles, picture: Array, counterphase: bool) -> Cells:
-    """Read what squares around the crossings do, one ring of squares beyond them included, from `picture` (H, W)."""
+def read_cells(grid: Grid, saddles: Saddles, picture: Array, known: Array, counterphase: bool) -> Cells:
+    """Read what squares around the crossings do, one ring of squares beyond them included, from `picture` (H, W)
+    where it is `known` (H, W)."""
+    solid = minimum_filter(known, 7)
     steps = _step_vectors(grid, saddles.xy)
     smooth = gaussian_filter(picture, 1.5, mode="nearest")
     gathered: dict[tuple[int, int], list[tuple[float, float, float, float]]] = {}
@@ -80,6 +82,8 @@ def read_cells(grid: Grid, saddles: Saddles, picture: Array, counterphase: bool)
     for place, votes in gathered.items():
         near = [v for v in votes if v[0] <= min(vote[0] for vote in votes) + 1e-6]
         x, y, amplitude = np.mean([v[1:] for v in near], axis=0)
+        if not solid[round(y), round(x)]:
+            continue
         value = float(map_coordinates(smooth, [[y], [x]], order=1)[0]) / amplitude
         if 0.35 < abs(value) < 0.6:
             continue

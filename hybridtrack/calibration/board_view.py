@@ -12,7 +12,7 @@ import numpy as np
 from hybridtrack.calibration.apertures import Aperture
 from hybridtrack.calibration.light_kernels import square_fractions
 from hybridtrack.calibration.view_data import Lens
-from hybridtrack.module import Target
+from hybridtrack.module import FrameMode, Target
 
 Array = np.ndarray
 
@@ -63,6 +63,28 @@ def project_board(lens: Lens, camera_from_board: Array, xy_m: Array) -> Array:
     """Colour positions (..., 2) of points `xy_m` (..., 2) of the board's plane."""
     R, t = camera_from_board[:3, :3], camera_from_board[:3, 3]
     return lens.project(xy_m @ R[:, :2].T + t)
+
+
+def _outline_m(target: Target) -> Array:
+    """Points (N, 2) along the board's outer edge."""
+    along = np.linspace(0.0, 1.0, 25)
+    sides = [np.stack([along, np.full(25, end)], axis=1) for end in (0.0, 1.0)]
+    unit = np.concatenate([*sides, *(side[:, ::-1] for side in sides)])
+    return unit * (np.array([target.columns, target.rows]) * target.square_xy_m)
+
+
+def place_frame_pixels(lens: Lens, camera_from_board: Array, target: Target, mode: FrameMode) -> BoardPlace:
+    """Places of all frame pixels' full bins (Hf * Wf); NaN outside the box around the board's picture."""
+    columns, rows = np.meshgrid(np.arange(mode.width), np.arange(mode.height))
+    centres = mode.colour_from_frame(np.stack([columns, rows], axis=-1)).reshape(-1, 2)
+    outline = project_board(lens, camera_from_board, _outline_m(target))
+    known = np.isfinite(outline).all()
+    low, high = (outline.min(0), outline.max(0)) if known else (np.full(2, -np.inf), np.full(2, np.inf))
+    inside = np.flatnonzero(np.all((centres >= low) & (centres <= high), axis=1))
+    here = place_on_board(lens, camera_from_board, centres[inside])
+    place = BoardPlace(np.full((len(centres), 2), np.nan), np.full((len(centres), 2, 2), np.nan))
+    place.xy_m[inside], place.gradient[inside] = here.xy_m, here.gradient
+    return place
 
 
 def class_squares(target: Target) -> Array:

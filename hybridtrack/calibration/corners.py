@@ -14,7 +14,7 @@ import numpy as np
 
 from hybridtrack.calibration.apertures import Aperture, frame_aperture
 from hybridtrack.calibration.board_detection import Detection, detect_board, difference_picture
-from hybridtrack.calibration.board_view import BoardPlace, place_on_board, project_board
+from hybridtrack.calibration.board_view import BoardPlace, place_frame_pixels, project_board
 from hybridtrack.calibration.lens_fit import fit_lens
 from hybridtrack.calibration.light_kernels import crossing_memberships
 from hybridtrack.calibration.view_data import BoardCorners, BoardSearch, LensFit, ViewImages
@@ -31,12 +31,12 @@ _REACH_PX = 14.0  # frame px: half width of the largest cell
 _NEAR_EDGE = 4.0  # blurs: pixels further from both edges only fix the levels, and are thinned
 _STEPS = 4
 _MOST_MOVED_PX = 3.0  # colour px
-_LEAST_EDGE = 0.15  # of set A's step
+_LEAST_EDGE = 0.15  # of the contrast
 
 
 @dataclass(frozen=True)
 class _FramePicture:
-    """One view's difference picture over set A's step, in reading order: `value`, `sigma` (M,), `place` of pixels."""
+    """One view's difference picture over its contrast, in reading order: `value`, `sigma` (M,), `place` of pixels."""
 
     value: Array
     sigma: Array
@@ -104,7 +104,7 @@ def _fit_cell(picture: _FramePicture, index: Array, corner_m: Array) -> _CellFit
         full = np.concatenate([slopes, design], axis=1) * weight[:, None]
         normal = full.T @ full
         left = (value - design @ levels) * weight
-        if np.linalg.cond(normal[:2, :2]) > 1e4:
+        if normal[0, 0] * normal[1, 1] - normal[0, 1] ** 2 < 1e-4 * np.trace(normal[:2, :2]) ** 2:
             return None
         try:
             inverse = np.linalg.inv(normal)
@@ -125,14 +125,14 @@ def _fit_cell(picture: _FramePicture, index: Array, corner_m: Array) -> _CellFit
 
 def _frame_picture(view: ViewImages, place: BoardPlace, aperture: Aperture, light: ViewLight,
                    target: Target) -> _FramePicture:
-    """The difference picture over the smooth step of set A."""
+    """The difference picture over its smooth contrast across the edges of set A."""
     bright, dark = light.levels(place, target)
-    step = bright[:, 0] - dark[:, 0]
+    step = (bright[:, 0] - dark[:, 0]) - (bright[:, 1] - dark[:, 1])
     usual = np.nanmedian(np.abs(step[np.isfinite(step)]))
     step = np.where(np.abs(step) > 0.2 * usual, step, np.nan)
     value = (view.bright_dn - view.dark_dn).ravel() / step
     noise = np.hypot(view.bright_sigma_dn, view.dark_sigma_dn).ravel() / np.abs(step)
-    # One per cent of the step: what levels, blur and linearity leave even in a picture without noise.
+    # One per cent of the contrast: what levels, blur and linearity leave even in a picture without noise.
     sigma = np.hypot(np.where(np.isfinite(noise), noise, 1.0), 0.01)
     return _FramePicture(value, sigma, place, aperture, view.bright_dn.shape, light.blur_px)
 
@@ -142,9 +142,7 @@ def _refine_view(view: ViewImages, board: BoardCorners, lens_fit: LensFit, targe
     """All inner corners of one view that its pictures fix."""
     pose = lens_fit.camera_from_board[int(np.flatnonzero(lens_fit.views == board.view)[0])]
     mode, aperture = nominal.frame_mode, frame_aperture(nominal.frame_mode, nominal.cluster)
-    columns, rows = np.meshgrid(np.arange(mode.width), np.arange(mode.height))
-    centres = mode.colour_from_frame(np.stack([columns, rows], axis=-1)).reshape(-1, 2)
-    place = place_on_board(lens_fit.lens, pose, centres)
+    place = place_frame_pixels(lens_fit.lens, pose, target, mode)
     light = fit_view_light(view, place, aperture, target)
     if light is None:
         return board

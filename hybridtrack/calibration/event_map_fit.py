@@ -14,7 +14,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from hybridtrack.calibration.apertures import frame_aperture
-from hybridtrack.calibration.board_view import place_on_board
+from hybridtrack.calibration.board_view import place_frame_pixels
 from hybridtrack.calibration.count_curve import CountNoise, fit_noise, straight_curve
 from hybridtrack.calibration.event_map_normal import (
     MAP_TERMS,
@@ -75,12 +75,10 @@ class _State:
 def _measured_views(views: list[ViewImages], lens_fit: LensFit, target: Target, nominal: HybridModule) -> _Views:
     """Fit the light of every view that has a pose."""
     mode, aperture = nominal.frame_mode, frame_aperture(nominal.frame_mode, nominal.cluster)
-    columns, rows = np.meshgrid(np.arange(mode.width), np.arange(mode.height))
-    centres = mode.colour_from_frame(np.stack([columns, rows], axis=-1)).reshape(-1, 2)
     by_number = {view.index: view for view in views}
     images, lights, order = [], [], []
     for n, number in enumerate(lens_fit.views.tolist()):
-        place = place_on_board(lens_fit.lens, lens_fit.camera_from_board[n], centres)
+        place = place_frame_pixels(lens_fit.lens, lens_fit.camera_from_board[n], target, mode)
         light = fit_view_light(by_number[number], place, aperture, target) if number in by_number else None
         if light is not None:
             images.append(by_number[number])

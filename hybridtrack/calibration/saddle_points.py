@@ -82,8 +82,11 @@ def _alternating(ring: Array) -> Array:
     return (spectrum[:, 2] + spectrum[:, 6]) / np.maximum(total, 1e-30)
 
 
-def find_saddles(picture: Array, sigma_px: float) -> Saddles:
-    """Find crossings in `picture` (H, W), finite, at smoothing `sigma_px`; squares must be wider than 6 sigma_px."""
+def find_saddles(picture: Array, known: Array, sigma_px: float) -> Saddles:
+    """Find crossings in `picture` (H, W) at smoothing `sigma_px`, away from pixels that are not `known` (H, W).
+
+    Squares must be wider than 6 sigma_px.
+    """
     d = _derivatives(picture, sigma_px)
     window = 2 * int(np.ceil(2.5 * sigma_px)) + 1
     contrast = maximum_filter(d[""], window) - minimum_filter(d[""], window)
@@ -92,6 +95,7 @@ def find_saddles(picture: Array, sigma_px: float) -> Saddles:
     response = np.where(contrast > max(least, 1e-12), strength / np.maximum(contrast, 1e-12), 0.0)
     peak = (response == maximum_filter(response, window)) & (response > _RESPONSE)
     margin = int(np.ceil(2.0 * sigma_px))
+    peak &= minimum_filter(known, window)
     peak[:margin] = peak[-margin:] = peak[:, :margin] = peak[:, -margin:] = False
     rows, columns = np.nonzero(peak)
     xy, near = _refined(d, rows, columns)
