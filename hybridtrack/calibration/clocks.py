@@ -198,27 +198,40 @@ def refine(model: ClockModel, clocks: Clocks, free: tuple[str, ...], iterations:
     return clocks
 
 
+def shrunk_scatter(per_view: Array, plain: Array) -> Array:
+    """Scatter (P, P) of the views' scores (V, P), drawn towards what independent noise of the same size would give.
+
+    Few views span few directions: their own scatter is singular, or too small by chance. Its mean size over all
+    directions is told well, and scales `plain` (P, P); the two are mixed as P + 1 prior views against V real ones.
+    """
+    count, size = per_view.shape
+    scatter = per_view.T @ per_view * count / max(count - 1, 1)
+    larger = max(1.0, float(np.trace(np.linalg.solve(plain, scatter))) / size)
+    return ((size + 1) * larger * plain + count * scatter) / (size + 1 + count)
+
+
 def clustered_covariance(model: ClockModel, clocks: Clocks, free: tuple[str, ...]) -> tuple[Array, Array]:
     """Sandwich covariance (P, P) with views as clusters, and the weighted residuals (R, N)."""
     residual, jacobian = projected_problem(model, clocks, free)
-    weight = huber(residual, model.rows.weight > 0)
+    used = model.rows.weight > 0
+    weight = huber(residual, used)
     flat = jacobian.reshape(len(free), -1)
-    normal = (flat * weight.ravel()) @ flat.T
-    if np.linalg.cond(normal / np.sqrt(np.outer(np.diag(normal), np.diag(normal)) + 1e-300)) > 1e10:
+    inside = (weight >= 1.0).ravel()
+    bread = flat[:, inside] @ flat[:, inside].T
+    size = np.sqrt(np.maximum(np.diag(bread), 1e-300))
+    if np.linalg.cond(bread / np.outer(size, size)) > 1e10:
         raise DegenerateDataError(
             f"the rows of the frames cannot determine {', '.join(free)} together: their bright share hardly changes"
         )
-    inverse = np.linalg.inv(normal)
-    scores = np.einsum("prn,rn->rp", jacobian, weight * residual)
-    views = np.unique(model.rows.view)
-    per_view = np.array([scores[model.rows.view == view].sum(axis=0) for view in views])
-    factor = len(views) / max(len(views) - 1, 1)
-    used = weight > 0
-    plain = inverse * max(float(np.mean(residual[used] ** 2)), 1e-12)
-    # With few views the sandwich may come out too small by chance: never below the plain one.
-    sandwich = inverse @ (per_view.T @ per_view) @ inverse * factor
-    deviation = np.sqrt(np.maximum(np.diag(sandwich), np.diag(plain)) / np.diag(sandwich))
-    return sandwich * np.outer(deviation, deviation), residual
+    inverse = np.linalg.inv(bread)
+    # Two numbers a row and the free parameters were fitted to the same samples.
+    count = int(np.count_nonzero(used))
+    freedom = count / max(count - 2 * len(used) - len(free), 1)
+    psi = weight * residual
+    scores = np.einsum("prn,rn->rp", jacobian, psi) * np.sqrt(freedom)
+    per_view = np.array([scores[model.rows.view == view].sum(axis=0) for view in np.unique(model.rows.view)])
+    plain = flat @ flat.T * max(freedom * float(np.mean(psi[used] ** 2)), 1e-12)
+    return inverse @ shrunk_scatter(per_view, plain) @ inverse, residual
 
 
 def nearest_offset(offset_ns: float, period_ns: float, nominal_ns: float) -> float:
