@@ -32,17 +32,20 @@ def _calibrate_recording(recording: Path, target: Path, module: Path | None, out
     report_written(out / "report.html")
 
 
-def _calibrate_photos(folder: Path, corners: str, square_mm: float, out: Path) -> None:
+def _calibrate_photos(
+    folder: Path, corners: str, square_mm: float, out: Path, module: Path | None, lens_model: str | None
+) -> None:
     from hybridtrack.calibration.photos import calibrate_photos
     from hybridtrack.cli.photo_output import write_photo_calibration
+    from hybridtrack.module import load_module
 
     try:
         columns, rows = (int(number) for number in corners.lower().split("x"))
     except ValueError:
         raise OptionError(f"--corners: inner corners as COLUMNSxROWS are required, got '{corners}'") from None
     with shown_progress() as progress:
-        result = calibrate_photos(folder, columns, rows, square_mm * 1e-3, progress=progress)
-    write_photo_calibration(result, out)
+        result = calibrate_photos(folder, columns, rows, square_mm * 1e-3, lens_model, progress)
+    write_photo_calibration(result, out, load_module(module) if module is not None else None)
 
 
 def calibrate_command(
@@ -74,7 +77,7 @@ def calibrate_command(
     if photos is not None:
         if recording is not None:
             raise OptionError("calibrate: a recording or --photos is required, got both")
-        _calibrate_photos(photos, corners, square_mm, out)
+        _calibrate_photos(photos, corners, square_mm, out, module, lens_model)
         return
     if recording is None or target is None:
         raise OptionError("calibrate: a recording and --target are required (or --photos), got too little")
