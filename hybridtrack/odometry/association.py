@@ -4,7 +4,6 @@ import numpy as np
 from scipy.spatial import cKDTree
 
 from hybridtrack.geometry import se3
-from hybridtrack.odometry.motion import camera_from_frame
 from hybridtrack.odometry.observations import View
 from hybridtrack.odometry.sparse_map import SparseMap
 
@@ -19,16 +18,14 @@ def known_points(world: SparseMap, keyframe_ids: list[int]) -> Array:
     return points[points >= 0]
 
 
-def associate(world: SparseMap, view: View, pose: Array, twist: Array, points: Array) -> tuple[Array, Array]:
-    """Rows (M,) of a view and the points (M,) they look at from `pose` (4, 4): nearest to each other, within 10
-    standard deviations of a ray."""
+def associate(world: SparseMap, view: View, pose: Array, points: Array) -> tuple[Array, Array]:
+    """Rows (M,) of a view, its rays at one time, and the points (M,) they look at from `pose` (4, 4): nearest to each
+    other, within 10 standard deviations of a ray."""
     if not len(points) or not len(view):
         return np.empty(0, np.int64), np.empty(0, np.int64)
     seen = se3.transform(se3.inverse(pose), world.positions[points])
     directions = seen / np.maximum(np.linalg.norm(seen, axis=1, keepdims=True), 1e-12)
-    middle = camera_from_frame(twist, -view.dt_s)[:, :3, :3]
-    rays = (middle @ view.rays[..., None])[..., 0]  # turned to the frame's time
-    distance, nearest = cKDTree(directions).query(rays, distance_upper_bound=REACH_SIGMA * view.ray_sigma_rad)
+    distance, nearest = cKDTree(directions).query(view.rays, distance_upper_bound=REACH_SIGMA * view.ray_sigma_rad)
     rows = np.flatnonzero(np.isfinite(distance))
     order = rows[np.argsort(distance[rows])]
     _, first = np.unique(nearest[order], return_index=True)

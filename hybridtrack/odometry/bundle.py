@@ -1,7 +1,8 @@
 """Bundle adjustment over chosen poses and points (Triggs et al. 2000), Levenberg-Marquardt on the Schur complement.
 
 Residuals and Jacobians are those of `observations` and `motion`: linear in the ray, at the ray's own time with the
-frame's twist held. The cost is Huber's in standard deviations. Where nothing holds the scale, the damping does.
+frame's twist held. The cost is Huber's in standard deviations. Where only one pose is held, the pose farthest from it keeps
+its distance: the scale is not observed, and twists that are held must keep theirs.
 
 Covariance: the inverse of the reduced system under seven constraints that fix the gauge. They ask that a similarity
 aligning the positions of the poses with the truth (Umeyama 1991) would be the identity to first order, so that the
@@ -20,6 +21,7 @@ Array = np.ndarray
 
 HUBER_WIDTH = 2.5
 LARGEST_DAMPING = 1e8
+ANCHOR_SHARE = 1e-4
 
 
 @dataclass(frozen=True, eq=False)
@@ -165,15 +167,52 @@ class _Reduced:
         return step, moves
 
 
+@dataclass(frozen=True, eq=False)
+class _Anchor:
+    """A pose that keeps its distance from the only held one, within a share `ANCHOR_SHARE` of it."""
+
+    pose: int
+    centre: Array
+    distance: float
+
+    def excess(self, poses: Array) -> float:
+        """Deviation from the distance, in its standard deviation."""
+        length = float(np.linalg.norm(poses[self.pose, :3, 3] - self.centre))
+        return (length - self.distance) / (ANCHOR_SHARE * self.distance)
+
+    def add_to(self, system: System, poses: Array) -> None:
+        """Add its normal equations."""
+        arm = poses[self.pose, :3, 3] - self.centre
+        slope = poses[self.pose, :3, :3].T @ arm / np.linalg.norm(arm) / (ANCHOR_SHARE * self.distance)
+        system.H_pose[self.pose, :3, :3] += np.outer(slope, slope)
+        system.g_pose[self.pose, :3] += slope * self.excess(poses)
+
+
+def _anchor_of(bundle: Bundle) -> _Anchor | None:
+    held = np.flatnonzero(bundle.held)
+    if len(held) != 1 or len(bundle.poses) < 2:
+        return None
+    centre = bundle.poses[held[0], :3, 3]
+    distances = np.linalg.norm(bundle.poses[:, :3, 3] - centre, axis=1)
+    farthest = int(np.argmax(distances))
+    return _Anchor(farthest, centre.copy(), float(distances[farthest])) if distances[farthest] > 0 else None
+
+
 def adjust(bundle: Bundle, iterations: int = 20, relative_decrease: float = 1e-4) -> Adjusted:
     """Minimise the robust cost from the bundle's own poses and points; stop at a small relative decrease."""
     poses, points = bundle.poses.copy(), np.ascontiguousarray(bundle.points, dtype=float)
-    reduced = _Reduced(bundle)
+    reduced, anchor = _Reduced(bundle), _anchor_of(bundle)
+
+    def cost_of(trial_sigmas: Array, trial_poses: Array) -> float:
+        return _cost(trial_sigmas) + (0.0 if anchor is None else anchor.excess(trial_poses) ** 2)
+
     sigmas = residual_sigmas(bundle, poses, points)
-    cost, damping, done = _cost(sigmas), 1e-4, 0
+    cost, damping, done = cost_of(sigmas, poses), 1e-4, 0
     while done < iterations and damping < LARGEST_DAMPING:
         done += 1
         system = linearised(bundle, poses, points, huber_weights(sigmas))
+        if anchor is not None:
+            anchor.add_to(system, poses)
         improved = False
         while damping < LARGEST_DAMPING and not improved:
             step = reduced.step(system, damping)
@@ -182,15 +221,16 @@ def adjust(bundle: Bundle, iterations: int = 20, relative_decrease: float = 1e-4
                 trial[reduced.free] = poses[reduced.free] @ se3.exp(step[0])
                 trial_points = points + step[1]
                 trial_sigmas = residual_sigmas(bundle, trial, trial_points)
-                improved = _cost(trial_sigmas) <= cost
+                trial_cost = cost_of(trial_sigmas, trial)
+                improved = trial_cost <= cost
             damping = max(0.1 * damping, 1e-9) if improved else 8.0 * damping
         if not improved:
             break
-        before, cost = cost, _cost(trial_sigmas)
+        before, cost = cost, trial_cost
         poses, points, sigmas = trial, trial_points, trial_sigmas
         if before - cost <= relative_decrease * before + 1e-14:
             break
-    poses[:, :3, :3] = so3.project_to_rotation(poses[:, :3, :3])
+    poses[reduced.free, :3, :3] = so3.project_to_rotation(poses[reduced.free, :3, :3])
     return Adjusted(poses, points, sigmas, cost, done)
 
 

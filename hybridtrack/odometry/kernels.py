@@ -80,10 +80,11 @@ def normal_equations(turns: Array, centres: Array, points: Array, pose_of: Array
 
 @kernel
 def pose_equations(turn: Array, centre: Array, points: Array, own_turns: Array, own_shifts: Array, rays: Array,
-                   whitening: Array, cauchy_width: float, H: Array, g: Array, norms: Array) -> None:
+                   whitening: Array, growth: Array, cauchy_width: float, H: Array, g: Array, norms: Array) -> None:
     """Fill H (6, 6), g (6,) of one pose over known points (N, 3) under Cauchy's cost, and |r| (N,) as `residual_norms`.
 
-    A `cauchy_width` of zero counts rays alike, but not those whose `norms` are infinite on entry.
+    `growth` (N,): how much further than the frame's pose the pose at the ray's time moves. A `cauchy_width` of zero
+    counts rays alike, but not those whose `norms` are infinite on entry.
     """
     q, n, r = np.empty(3), np.empty(3), np.empty(2)
     A, J = np.empty((2, 3)), np.empty((2, 6))
@@ -106,6 +107,8 @@ def pose_equations(turn: Array, centre: Array, points: Array, own_turns: Array, 
             J[a, 3] = J[a, 2] * q[1] - J[a, 1] * q[2]
             J[a, 4] = J[a, 0] * q[2] - J[a, 2] * q[0]
             J[a, 5] = J[a, 1] * q[0] - J[a, 0] * q[1]
+            for i in range(6):
+                J[a, i] *= growth[m]
         for i in range(6):
             g[i] += w * (J[0, i] * r[0] + J[1, i] * r[1])
             for j in range(6):

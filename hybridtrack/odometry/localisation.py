@@ -21,7 +21,6 @@ Array = np.ndarray
 
 CAUCHY_WIDTH = 2.0
 ITERATIONS = 15
-TWIST_ROUNDS = 3  # the rays' times are a fifth of a frame apart, so that each round leaves a fifth of the error
 SMALLEST_STEP = 1e-6  # in chi-square: a thousandth of a standard deviation
 SMALLEST_EIGENVALUE = 1e-9  # of the normal equations with a unit diagonal
 SMALLEST_AXIAL = 0.17  # rays more than 80 degrees off the axis have no useful pinhole coordinates
@@ -60,22 +59,32 @@ class Approach:
 
 
 class _Equations:
-    """Normal equations of one pose over its rays, each at its own time under one twist."""
+    """Normal equations of one pose over its rays, each at its own time.
 
-    def __init__(self, view: View, points: Array) -> None:
+    The twist is fixed, or follows from the pose: then it changes by xi / dt when the pose moves by xi, and the pose at a
+    ray's time moves by (1 + dt_ray / dt) xi to first order in the motion between frames.
+    """
+
+    def __init__(self, view: View, points: Array, motion: Approach | Array) -> None:
         self.view, self.points = view, np.ascontiguousarray(points, dtype=float)
         self.H, self.g, self.norms = np.empty((6, 6)), np.empty(6), np.zeros(len(view))
-        self.set_twist(np.zeros(6))
+        self._motion = motion
+        self._growth = np.ones(len(view))
+        if isinstance(motion, Approach):
+            self._growth += view.dt_s / motion.dt_s
+        else:
+            self._set_twist(motion)
 
-    def set_twist(self, twist: Array) -> None:
-        """Put every ray at its own time under a body twist (6,)."""
+    def _set_twist(self, twist: Array) -> None:
+        self.twist = twist
         motion = camera_from_frame(twist, self.view.dt_s)
         self._turns = np.ascontiguousarray(motion[:, :3, :3])
         self._shifts = np.ascontiguousarray(motion[:, :3, 3])
 
     def fill(self, pose: Array, width: float) -> None:
-        """Fill H, g and norms at a pose (4, 4) under Cauchy's cost; width zero: without, and only norms below
-        infinity."""
+        """Fill H, g and norms at a pose (4, 4) under Cauchy's cost; width zero: without, and only finite norms."""
+        if isinstance(self._motion, Approach):
+            self._set_twist(self._motion.twist_to(pose))
         kernels.pose_equations(
             np.ascontiguousarray(pose[:3, :3]),
             np.ascontiguousarray(pose[:3, 3]),
@@ -84,6 +93,7 @@ class _Equations:
             self._shifts,
             self.view.rays,
             self.view.whitening,
+            self._growth,
             width,
             self.H,
             self.g,
@@ -127,22 +137,15 @@ def refine_pose(
 
     `motion`: the pose before, from which the twist follows, or a fixed twist (6,).
     """
-    equations = _Equations(view, points)
-    pose: Array | None = start
-    twist = np.zeros(6)
-    for _ in range(TWIST_ROUNDS if isinstance(motion, Approach) else 1):
-        assert pose is not None
-        twist = motion.twist_to(pose) if isinstance(motion, Approach) else motion
-        equations.set_twist(twist)
-        pose = equations.converge(pose)
-        if pose is None:
-            return None
-    assert pose is not None
+    equations = _Equations(view, points, motion)
+    pose = equations.converge(start)
+    if pose is None:
+        return None
     equations.fill(pose, CAUCHY_WIDTH)
     sigmas = equations.norms.copy()
     inliers = sigmas < inlier_sigma
     covariance = equations.covariance(pose, inliers)
-    return None if covariance is None else PoseEstimate(pose, np.asarray(twist), inliers, sigmas, covariance)
+    return None if covariance is None else PoseEstimate(pose, equations.twist, inliers, sigmas, covariance)
 
 
 def search_pose(view: View, points: Array, options: OdometryOptions) -> Array | None:
@@ -181,11 +184,14 @@ def localise(
 ) -> PoseEstimate | None:
     """Pose of a view whose rays (N) look at `points` (N, 3); None where no pose has enough inliers.
 
-    `guess` (4, 4) and `approach` come from the frame before, and may be missing.
+    `guess` (4, 4) and `approach` come from the frame before, and may be missing; without an approach the tracks' own
+    motion stands for the twist, which is returned as zero.
     """
     if len(view) < options.min_inliers:
         return None
     motion: Approach | Array = np.zeros(6) if approach is None else approach
+    if approach is None:
+        view = view.at_frame_time()
     if guess is not None:
         estimate = refine_pose(view, points, guess, motion, options.inlier_sigma)
         if enough(estimate, options):

@@ -14,7 +14,7 @@ import numpy as np
 
 from hybridtrack.geometry import se3, sim3
 from hybridtrack.odometry.localisation import PoseEstimate, refine_pose, search_pose
-from hybridtrack.odometry.observations import NS
+from hybridtrack.odometry.observations import NS, View
 from hybridtrack.odometry.options import OdometryOptions
 from hybridtrack.odometry.places import Place, PlaceBook, matches
 from hybridtrack.odometry.sparse_map import Keyframe, SparseMap
@@ -77,10 +77,23 @@ def candidates(
     return sorted((entry for entry in found if len(entry[1]) >= at_least), key=lambda entry: -len(entry[1]))
 
 
+def _localised(view: View, landmarks: Array, twist: Array | None, options: OdometryOptions) -> PoseEstimate | None:
+    """Pose of a view without a guess: at first by rays at one time, then, where the twist (6,) is known, at their
+    own."""
+    found = search_pose(view, landmarks, options)
+    if found is None:
+        return None
+    estimate = refine_pose(view.at_frame_time(), landmarks, found, np.zeros(6), options.inlier_sigma)
+    if estimate is None or twist is None:
+        return estimate
+    return refine_pose(view, landmarks, estimate.world_from_camera, twist, options.inlier_sigma)
+
+
 def locate(
-    book: PlaceBook, place: Place, twist: Array, among: list[Keyframe], options: OdometryOptions
+    book: PlaceBook, place: Place, twist: Array | None, among: list[Keyframe], options: OdometryOptions
 ) -> Sighting | None:
-    """Localise a place against keyframes; None where none agrees well enough with it."""
+    """Localise a place, whose twist (6,) may be known, against keyframes; None where none agrees well enough with
+    it."""
     wanted = options.loop_min_inliers
     for keyframe, rows, rows_here in candidates(book, place, among, wanted):
         landmarks = book.landmarks(keyframe)[rows]
@@ -89,8 +102,7 @@ def locate(
         if len(rows) < wanted:
             continue
         view = place.view.select(rows_here)
-        found = search_pose(view, landmarks, options)
-        estimate = None if found is None else refine_pose(view, landmarks, found, twist, options.inlier_sigma)
+        estimate = _localised(view, landmarks, twist, options)
         if estimate is None or estimate.inlier_count < max(wanted, SMALLEST_SHARE * len(rows)):
             continue
         good = estimate.inliers

@@ -23,6 +23,7 @@ Array = np.ndarray
 
 NS = 1e-9
 FRAME_SOURCES = ("frame", "both")
+GONE = ("lost", "out_of_view")
 
 
 class TrackTable(Protocol):
@@ -68,6 +69,13 @@ class View:
         """All per-ray columns, in the order of the constructor."""
         return self.ids, self.uv, self.dt_s, self.rays, self.whitening, self.rays_at_frame
 
+    def at_frame_time(self) -> "View":
+        """The view as it would be with one time for all rays: those of the tracks themselves, interpolated."""
+        rays = self.rays_at_frame
+        across = np.eye(3) - rays[:, :, None] * rays[:, None, :]
+        whitening = np.ascontiguousarray(self.whitening @ across)
+        return View(self.index, self.t_ns, self.ids, self.uv, np.zeros(len(self)), rays, whitening, rays)
+
     @property
     def ray_sigma_rad(self) -> float:
         """Median standard deviation of a ray's direction, in one axis."""
@@ -78,31 +86,32 @@ class View:
 
 @dataclass(frozen=True)
 class FrameTimes:
-    """`t_ns` int64 (K,) mid-exposure of each frame's middle row, event clock; `readout_s` from first row to last."""
+    """`t_ns` int64 (K,) mid-exposure of each frame's middle row, event clock, which lies at `middle_v` colour px; rows
+    further down are exposed later by `s_per_px` a colour px (negative bottom up, zero under a global shutter)."""
 
     t_ns: Array
-    readout_s: float
+    middle_v: float = 0.0
+    s_per_px: float = 0.0
 
     @property
     def interval_s(self) -> float:
         """Median time between frames."""
         return float(np.median(np.diff(self.t_ns))) * NS if len(self.t_ns) > 1 else float("inf")
 
-
-def row_times_ns(frames: FrameTable, module: HybridModule, rows: Array) -> Array:
-    """Mid-exposure on the event clock, float64 ns (K, R), of frame rows (R,) in every frame."""
-    timing, mode = module.known_timing(), module.frame_mode
-    order = mode.read_order(rows) if mode.shutter == "rolling" else np.zeros(len(rows))
-    start = timing.exposure_start_ns(frames.t_start_ns[:, None], order[None, :])
-    return start + 0.5 * timing.true_exposure_ns(frames.exposure_ns)[:, None]
+    def row_dt_s(self, v: Array) -> Array:
+        """Mid-exposure of positions v (...) in colour px, less that of the middle row."""
+        return (np.asarray(v) - self.middle_v) * self.s_per_px
 
 
 def frame_times(frames: FrameTable, module: HybridModule) -> FrameTimes:
     """Times of all frames. Raises NotCalibratedError where the module's clocks are not known."""
-    height = module.frame_mode.height
-    times = row_times_ns(frames, module, np.array([0.0, 0.5 * (height - 1), height - 1.0]))
-    readout = float(np.abs(times[0, 2] - times[0, 0])) * NS if len(times) else 0.0
-    return FrameTimes(np.round(times[:, 1]).astype(np.int64), readout)
+    timing, mode = module.known_timing(), module.frame_mode
+    rolling = mode.shutter == "rolling"
+    middle_row = 0.5 * (mode.height - 1)
+    start = timing.exposure_start_ns(frames.t_start_ns, np.array(middle_row if rolling else 0.0))
+    t_ns = np.round(start + 0.5 * timing.true_exposure_ns(frames.exposure_ns)).astype(np.int64)
+    s_per_px = mode.row_order * (timing.line_time_ns or 0.0) * NS / mode.binning if rolling else 0.0
+    return FrameTimes(t_ns, float(mode.colour_from_frame(np.array([0.0, middle_row]))[1]), s_per_px)
 
 
 def whitening_of(lens: Lens, rays: Array, covariance_px: Array, floor_px: float) -> Array:
@@ -140,37 +149,34 @@ def view_of(index: int, t_ns: int, samples: dict[str, Array], lens: Lens, floor_
 
 
 def _usable(tracks: TrackTable) -> Array:
-    """Indices of samples that are not lost, sorted by track, then time."""
-    lost = [i for i, name in enumerate(tracks.states) if name == "lost"]
-    usable = ~np.isin(tracks.state, lost) & np.isfinite(tracks.uv).all(axis=1)
+    """Indices of samples that are in the picture and not lost, sorted by track, then time."""
+    gone = [i for i, name in enumerate(tracks.states) if name in GONE]
+    usable = ~np.isin(tracks.state, gone) & np.isfinite(tracks.uv).all(axis=1)
     chosen = np.flatnonzero(usable)
     return chosen[np.lexsort((tracks.t_ns[chosen], tracks.id[chosen]))]
 
 
-def _nearest(t_s: Array, at_s: Array) -> Array:
-    """Index (M,) of the sample in t_s (S,) nearest to each time (M,)."""
-    right = np.clip(np.searchsorted(t_s, at_s), 1, max(len(t_s) - 1, 1))
-    right = np.minimum(right, len(t_s) - 1)
+def _nearest(sorted_values: Array, at: Array) -> Array:
+    """Index (M,) of the value in a sorted array (S,) nearest to each of `at` (M,)."""
+    right = np.minimum(np.searchsorted(sorted_values, at), len(sorted_values) - 1)
     left = np.maximum(right - 1, 0)
-    return np.where(at_s - t_s[left] <= t_s[right] - at_s, left, right)
+    return np.where(at - sorted_values[left] <= sorted_values[right] - at, left, right)
 
 
-def _samples_of_frames(t_s: Array, from_frame: Array, times: FrameTimes, frame_s: Array) -> tuple[Array, Array]:
-    """Frames (M,) that one track with samples at t_s (S,) was seen in, and the sample (M,) taken for each.
+def _samples_of_frames(ids: Array, t_s: Array, v: Array, from_frame: Array, times: FrameTimes, frame_s: Array) -> Array:
+    """Pairs (M, 2) of frame and sample: for every track and frame the sample taken for it, sorted by frame, then track.
 
-    Within the readout around a frame, a sample that comes from a frame goes before one from events alone.
+    A sample belongs to the frame that reads its row nearest to its own time, if within 2 ms and a quarter of the frame
+    interval; one that comes from a frame goes before one from events alone.
     """
-    reach = 0.5 * times.readout_s + min(2e-3, 0.25 * times.interval_s)
-    first = np.searchsorted(frame_s, t_s[0] - reach)
-    last = np.searchsorted(frame_s, t_s[-1] + reach, side="right")
-    at_s = frame_s[first:last]
-    chosen = _nearest(t_s, at_s)
-    own = np.flatnonzero(from_frame)
-    if len(own):
-        best = own[_nearest(t_s[own], at_s)]
-        chosen = np.where(np.abs(t_s[best] - at_s) <= reach, best, chosen)
-    seen = np.abs(t_s[chosen] - at_s) <= reach
-    return np.arange(first, last)[seen], chosen[seen]
+    read_s = t_s - times.row_dt_s(v)
+    frame = _nearest(frame_s, read_s)
+    gap = np.abs(read_s - frame_s[frame])
+    near = np.flatnonzero(gap <= min(2e-3, 0.25 * times.interval_s))
+    order = near[np.lexsort((gap[near], ~from_frame[near], ids[near], frame[near]))]
+    same = (np.diff(frame[order], prepend=-1) == 0) & (np.diff(ids[order], prepend=-1) == 0)
+    chosen = order[~same]
+    return np.stack([frame[chosen], chosen], axis=1)
 
 
 def _interpolated(t_s: Array, uv: Array, at_s: Array) -> Array:
@@ -181,6 +187,20 @@ def _interpolated(t_s: Array, uv: Array, at_s: Array) -> Array:
     span = np.maximum(t_s[left + 1] - t_s[left], 1e-9)
     share = np.clip((at_s - t_s[left]) / span, -1.0, 2.0)[:, None]
     return uv[left] * (1.0 - share) + uv[left + 1] * share
+
+
+def _at_frames(ids: Array, t_s: Array, uv: Array, samples: Array, at_s: Array) -> Array:
+    """Where the tracks of the given samples (M,) were at times (M,): the tracks themselves, interpolated (M, 2)."""
+    moved = np.empty((len(samples), 2))
+    starts = np.flatnonzero(np.r_[True, np.diff(ids) != 0])
+    track = np.searchsorted(starts, samples, side="right") - 1
+    order = np.argsort(track, kind="stable")
+    bounds = np.searchsorted(track[order], np.arange(len(starts) + 1))
+    stops = np.r_[starts[1:], len(ids)]
+    for number, (start, stop) in enumerate(zip(starts, stops, strict=True)):
+        rows = order[bounds[number] : bounds[number + 1]]
+        moved[rows] = _interpolated(t_s[start:stop], uv[start:stop], at_s[rows])
+    return moved
 
 
 def gather_views(tracks: TrackTable, times: FrameTimes, lens: Lens, floor_px: float) -> list[View]:
@@ -194,19 +214,17 @@ def gather_views(tracks: TrackTable, times: FrameTimes, lens: Lens, floor_px: fl
     frame_s = (times.t_ns - epoch) * NS
     wanted = [i for i, name in enumerate(tracks.sources) if name in FRAME_SOURCES]
     from_frame = np.isin(tracks.source[order], wanted)
-    starts = np.flatnonzero(np.r_[True, np.diff(ids) != 0]) if len(ids) else np.empty(0, np.int64)
-    frames, samples, moved = [], [], []
-    for start, stop in zip(starts, np.r_[starts[1:], len(ids)], strict=True):
-        seen, chosen = _samples_of_frames(t_s[start:stop], from_frame[start:stop], times, frame_s)
-        frames.append(seen)
-        samples.append(start + chosen)
-        moved.append(_interpolated(t_s[start:stop], uv[start:stop], frame_s[seen]))
-    if not frames or not sum(len(f) for f in frames):
+    pairs = np.empty((0, 2), np.int64)
+    if len(order) and len(frame_s):
+        pairs = _samples_of_frames(ids, t_s, uv[:, 1], from_frame, times, frame_s)
+    if not len(pairs):
         raise DegenerateDataError("tracks: expected samples within the readout of some frame, got none")
-    frame, sample, at_frame = np.concatenate(frames), np.concatenate(samples), np.concatenate(moved)
+    frame, sample = pairs.T
+    at_frame = _at_frames(ids, t_s, uv, sample, frame_s[frame])
+    bounds = np.searchsorted(frame, np.arange(len(frame_s) + 1))
     views = []
     for index, t_ns in enumerate(times.t_ns):
-        here = np.flatnonzero(frame == index)
+        here = slice(bounds[index], bounds[index + 1])
         rows = sample[here]
         table = {
             "ids": ids[rows],

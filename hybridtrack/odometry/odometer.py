@@ -226,7 +226,7 @@ class Odometer:
             return False
         place = self.book.look(frame.view.index)
         among = [k for k in self.world.keyframes if k.segment == segment]
-        seen = None if place is None else locate(self.book, place, np.zeros(6), among, self.options)
+        seen = None if place is None else locate(self.book, place, None, among, self.options)
         return seen is not None and self._resume_at(frame, seen, segment)
 
     def _resume_at(self, frame: FrameState, seen: Sighting, segment: int) -> bool:
@@ -234,7 +234,7 @@ class Odometer:
         around = [seen.keyframe.id, *self.world.neighbours(seen.keyframe, 4)]
         points = known_points(self.world, around)
         pose = seen.estimate.world_from_camera
-        rows, looked_at = associate(self.world, frame.view, pose, np.zeros(6), points)
+        rows, looked_at = associate(self.world, frame.view.at_frame_time(), pose, points)
         positions = self.world.positions[looked_at]
         estimate = localise(frame.view.select(rows), positions, pose, None, self.options)
         if estimate is None or estimate.inlier_count < self.options.weak_inliers:
@@ -244,9 +244,8 @@ class Odometer:
         return self._resume(frame, estimate, segment)
 
     def _resume(self, frame: FrameState, estimate: PoseEstimate, segment: int) -> bool:
-        """Go on in a segment from a frame that was found again, as a keyframe of it."""
+        """Go on in a segment from a frame that was found again; the next, whose twist is known, may be a keyframe."""
         frame.take(estimate, segment)
         self._waiting.clear()
         self.state = RUNNING
-        self._insert(frame)
         return True

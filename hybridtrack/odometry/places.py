@@ -10,7 +10,7 @@ import numpy as np
 
 from hybridtrack.geometry import Lens
 from hybridtrack.module import HybridModule
-from hybridtrack.odometry.observations import NS, View, view_of
+from hybridtrack.odometry.observations import FrameTimes, View, view_of
 from hybridtrack.odometry.pictures import grey_picture
 from hybridtrack.odometry.sparse_map import Keyframe, SparseMap
 from hybridtrack.odometry.triangulation import Sightings, triangulate
@@ -20,6 +20,8 @@ Array = np.ndarray
 RATIO = 0.85
 SIGMA_PER_SIZE = 0.15  # localisation error of a blob in its own diameter; common practice, no source
 LANDMARK_PARALLAX_DEG = 1.5
+FLOW_FROM_S = 5e-4  # shorter times tell noise from motion badly
+FLOW_TRACKS = 5
 NEIGHBOURS = (1, -1, 2, -2)
 
 
@@ -42,9 +44,18 @@ def unit_roots(descriptors: Array) -> Array:
     return np.sqrt(np.maximum(descriptors, 0.0) / total).astype(np.float32)
 
 
-def describe(image: Array, view: View, module: HybridModule, lens: Lens, count: int) -> Place | None:
+def picture_flow(view: View, lens: Lens) -> Array:
+    """Median motion (2,) of a view's tracks in px/s, from where they were at their own times and at the frame's."""
+    moving = np.abs(view.dt_s) > FLOW_FROM_S
+    if np.count_nonzero(moving) < FLOW_TRACKS:
+        return np.zeros(2)
+    flow = (view.uv[moving] - lens.project(view.rays_at_frame[moving])) / view.dt_s[moving, None]
+    return np.asarray(np.nanmedian(flow, axis=0))
+
+
+def describe(image: Array, view: View, times: FrameTimes, module: HybridModule, count: int) -> Place | None:
     """Features of a frame's picture at the time of its `view`; None where the picture shows none."""
-    mode, timing = module.frame_mode, module.known_timing()
+    mode, lens = module.frame_mode, module.lens_model()
     detector = cv2.SIFT.create(nfeatures=count, contrastThreshold=0.02)
     points, descriptors = detector.detectAndCompute(grey_picture(image, mode), None)
     if descriptors is None or not len(points):
@@ -56,13 +67,12 @@ def describe(image: Array, view: View, module: HybridModule, lens: Lens, count: 
     grid = np.stack(np.meshgrid(np.arange(mode.width), np.arange(mode.height)), axis=-1)
     shift = (module.frame_pixel_centres() - mode.colour_from_frame(grid)).mean(axis=(0, 1))
     uv = mode.colour_from_frame(position) + shift
-    order = mode.read_order(position[:, 1]) - 0.5 * (mode.height - 1)
-    dt_s = order * (timing.line_time_ns or 0.0) * NS if mode.shutter == "rolling" else np.zeros(len(uv))
+    dt_s = times.row_dt_s(uv[:, 1])
     sigma = np.maximum(SIGMA_PER_SIZE * np.array([point.size for point in points]), 0.4) * mode.binning
     samples = {
         "ids": np.arange(len(uv)),
         "uv": uv,
-        "uv_at_frame": uv,
+        "uv_at_frame": uv - dt_s[:, None] * picture_flow(view, lens),
         "dt_s": dt_s,
         "covariance": np.stack([sigma**2, np.zeros(len(uv)), sigma**2], axis=1),
     }

@@ -40,7 +40,7 @@ def odometry_of_tracks(
     views = gather_views(tracks, times, lens, options.model_sigma_px)
 
     def look(frame: int) -> Place | None:
-        return describe(recording.frame_image(frame), views[frame], module, lens, options.places)
+        return describe(recording.frame_image(frame), views[frame], times, module, options.places)
 
     odometer = Odometer(module.colour_array.width, options, look)
     for number, view in enumerate(views):

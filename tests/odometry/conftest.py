@@ -36,7 +36,7 @@ class WorldOptions:
     drifting_share: float = 0.0
     drift_px_s: float = 60.0
     deaths_per_s: float = 0.3
-    row_time_s: float = 36e-6
+    row_time_s: float = 9e-6
     blackout: tuple[int, int] = (0, 0)
     twins: bool = False  # every place looks like the place half a lap on
     lens: PerspectiveLens | FisheyeLens = field(default_factory=lambda: LENS)
@@ -69,9 +69,8 @@ class SyntheticLap:
         self.options, self.lens = options, options.lens
         self.rng = np.random.default_rng(options.seed)
         self.points = self._scattered()
-        self.row_time_s = options.row_time_s
         t_ns = (1_000_000_000 + np.arange(options.frames) * 1e9 / options.rate_hz).astype(np.int64)
-        self.times = FrameTimes(t_ns, options.row_time_s * (HEIGHT - 1))
+        self.times = FrameTimes(t_ns, 0.5 * (HEIGHT - 1), options.row_time_s)
         self.t_s = (t_ns - t_ns[0]) * 1e-9
         self.world_from_camera = pose_at(self.t_s, options)
         self.uv, self.seen = self._projected()
@@ -87,7 +86,7 @@ class SyntheticLap:
         return points
 
     def _row_dt(self, v: Array) -> Array:
-        return (v - 0.5 * (HEIGHT - 1)) * self.row_time_s
+        return (v - 0.5 * (HEIGHT - 1)) * self.options.row_time_s
 
     def _projected(self) -> tuple[Array, Array]:
         """True positions (K, P, 2) at each point's own row time, NaN where out of view."""
