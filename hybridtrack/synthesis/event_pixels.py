@@ -2,8 +2,8 @@
 
 Logarithmic photoreceptor with a light-dependent first-order low pass, ON and OFF comparators with pixel-to-pixel
 mismatch, refractory time, noise, background activity, hot and dead pixels (Lichtsteiner, Posch and Delbruck 2008).
-The comparator's noise is one sample a decision: it is drawn anew after every event and whenever log light turns
-round, so that a single step of size S fires a settled pixel of threshold theta with probability
+The comparators' noise is one sample a decision: drawn anew after every event, and for ON or OFF when log light turns
+up or down, so that a single step of size S fires a settled pixel of threshold theta with probability
 Phi((S - theta) / noise_width), exactly.
 
 Two models of what a fired pixel remembers: `steps` moves the reference by one threshold an event and forgets

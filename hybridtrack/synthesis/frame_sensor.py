@@ -129,7 +129,7 @@ class FrameSensor:
         letters = mosaic_letters(mode, mode.shape)
         if letters is None:
             return np.ones(mode.shape)
-        missing = sorted(set(letters.ravel()) - set(gains))
+        missing = sorted(set(mode.mosaic) - set(gains))
         if missing:
             raise OptionError(f"channel_gain must name every filter of the mosaic, and lacks {missing[0]!r}")
         gain = np.vectorize(gains.__getitem__, otypes=[float])(letters)

@@ -6,7 +6,7 @@ dp/dt = (q - p) / tau, tau inversely proportional to light. While q runs linearl
     p(t) = q0 + s t - s tau + (p0 - q0 + s tau) exp(-t / tau)                                            (1)
 
 so that a step needs no integration, and with s = 0 a threshold crossing has a closed form. The comparator compares
-p - reference, plus one noise sample held for the decision, with the pixel's thresholds.
+p - reference, plus a noise sample held for the decision, with the pixel's thresholds.
 
 Random numbers: one splitmix64 stream a pixel (Steele, Lea and Flood 2014), so that results do not depend on threads.
 """
@@ -19,15 +19,18 @@ import numpy as np
 from hybridtrack.compiled import kernel
 
 # Columns of the float state of a pixel.
-TIME, LIGHT, LEVEL, REFERENCE, READY, NOISE, NEXT_BACKGROUND, DIRECTION, EXTREME, STATE_SIZE = range(10)
+(TIME, LIGHT, LEVEL, REFERENCE, READY, ON_NOISE, OFF_NOISE, NEXT_BACKGROUND, DIRECTION, EXTREME,
+ STATE_SIZE) = range(11)
 # Entries of the constants that all pixels share.
 (TAU_REFERENCE, LIGHT_REFERENCE, TAU_MIN, TAU_MAX, REFRACTORY, NOISE_WIDTH, DELAY, DARK_LIGHT, RESETS,
  CONSTANTS_SIZE) = range(10)
 
 LIGHT_FLOOR = 1e-4  # keeps the logarithm finite where a caller passes no light at all
-LOG_STEP = 0.2  # light that changes by more than this (natural log) inside a step is followed in sub-steps
+LOG_STEP = 0.1  # light that changes by more than this (natural log) inside a step is followed in sub-steps
+QUICK = 20.0  # but in no more of them than this number a time constant: a pixel is blind to the rest
 SUB_STEPS_MAX = 32
 SETTLED = 1e-9
+LEAST_THRESHOLD = 0.2  # part of the threshold that noise always leaves
 REVERSAL = 0.1  # a retreat by this part of a threshold ends a decision
 
 GOLDEN = np.uint64(0x9E3779B97F4A7C15)
@@ -53,10 +56,17 @@ def uniform(random, n):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def normal(random, n):  # type: ignore[no-untyped-def]
-    """Next standard normal number of stream `n` (Box and Muller 1958)."""
-    radius = math.sqrt(-2.0 * math.log(1.0 - uniform(random, n)))
-    return radius * math.cos(2.0 * math.pi * uniform(random, n))
+def draw_noise(n, width, state, random, up, down):  # type: ignore[no-untyped-def]
+    """Draw the comparator's noise anew for the next ON decision (`up`) and the next OFF decision (`down`).
+
+    Box and Muller 1958.
+    """
+    radius = width * math.sqrt(-2.0 * math.log(1.0 - uniform(random, n)))
+    angle = 2.0 * math.pi * uniform(random, n)
+    if up:
+        state[n, ON_NOISE] = radius * math.cos(angle)
+    if down:
+        state[n, OFF_NOISE] = radius * math.sin(angle)
 
 
 @kernel
@@ -75,24 +85,23 @@ def respond(level, q, slope, tau, dt):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def crossing(level, q, slope, tau, target, dt):  # type: ignore[no-untyped-def]
-    """Time in [0, dt] at which the level passes `target`, known to lie between its ends."""
-    if slope == 0.0:
+def crossing(level, q, slope, tau, leak, target, dt):  # type: ignore[no-untyped-def]
+    """Time in [0, dt] at which the level, plus what has leaked off the reference, passes `target`, as it does by dt."""
+    if slope == 0.0 and leak == 0.0:
         return min(dt, -tau * math.log((target - q) / (level - q)))
     low, high = 0.0, dt
-    f_low, f_high = level - target, respond(level, q, slope, tau, dt) - target
+    f_low, f_high = level - target, respond(level, q, slope, tau, dt) + leak * dt - target
     x = dt
     for _ in range(20):  # regula falsi with the Illinois halving
         x = high - f_high * (high - low) / (f_high - f_low)
-        f = respond(level, q, slope, tau, x) - target
+        f = respond(level, q, slope, tau, x) + leak * x - target
         if abs(f) < 1e-10 or abs(high - low) < 1e-3:
             break
         if (f > 0.0) == (f_high > 0.0):
-            high, f_high = x, f
             f_low *= 0.5
         else:
             low, f_low = high, f_high
-            high, f_high = x, f
+        high, f_high = x, f
     return min(max(x, 0.0), dt)
 
 
@@ -113,7 +122,7 @@ def follow(n, t0, t1, q, slope, tau, state, random, pixel, constants, keys, coun
     """
     on, off, rate, leak = pixel[n, 0], pixel[n, 1], pixel[n, 2], pixel[n, 3]
     level, reference, ready = state[n, LEVEL], state[n, REFERENCE], state[n, READY]
-    noise, background = state[n, NOISE], state[n, NEXT_BACKGROUND]
+    background = state[n, NEXT_BACKGROUND]
     resets = constants[RESETS] > 0.0
     ta = t0
     while True:
@@ -131,29 +140,32 @@ def follow(n, t0, t1, q, slope, tau, state, random, pixel, constants, keys, coun
         if ready <= ta:
             reference_end = reference - leak * (end - ta)
             level_end = respond(level, q, slope, tau, end - ta)
-            rise = max(on - noise, 0.2 * on)
-            fall = max(off + noise, 0.2 * off)
-            fired, target = 0, 0.0
-            if level_end - reference_end >= rise or level - reference >= rise:
-                fired, target = 1, reference_end + rise
-            elif reference_end - level_end >= fall or reference - level >= fall:
-                fired, target = -1, reference_end - fall
+            rise = max(on - state[n, ON_NOISE], LEAST_THRESHOLD * on)
+            fall = max(off - state[n, OFF_NOISE], LEAST_THRESHOLD * off)
+            fired, dt = 0, 0.0
+            if level - reference >= rise:
+                fired = 1
+            elif reference - level >= fall:
+                fired = -1
+            elif level_end - reference_end >= rise:
+                fired = 1
+                dt = crossing(level, q, slope, tau, leak, reference + rise, end - ta)
+                level = reference - leak * dt + rise
+            elif reference_end - level_end >= fall:
+                fired = -1
+                dt = crossing(level, q, slope, tau, leak, reference - fall, end - ta)
+                level = reference - leak * dt - fall
             if fired != 0:
-                if (level >= target) == (fired > 0):
-                    tc = ta
-                else:
-                    tc = ta + crossing(level, q, slope, tau, target, end - ta)
-                level = respond(level, q, slope, tau, tc - ta)
-                q += slope * (tc - ta)
-                reference -= leak * (tc - ta)
-                ta = tc
-                count = emit(keys, count, tc + constants[DELAY], base, n, fired > 0, shift)
+                q += slope * dt
+                reference -= leak * dt
+                ta += dt
+                count = emit(keys, count, ta + constants[DELAY], base, n, fired > 0, shift)
                 if resets:
                     reference = level
                 else:
                     reference += on if fired > 0 else -off
-                ready = tc + constants[REFRACTORY] if constants[REFRACTORY] > 0.0 else -np.inf
-                noise = constants[NOISE_WIDTH] * normal(random, n)
+                ready = ta + constants[REFRACTORY] if constants[REFRACTORY] > 0.0 else -np.inf
+                draw_noise(n, constants[NOISE_WIDTH], state, random, True, True)
                 continue
             level, reference = level_end, reference_end
             q += slope * (end - ta)
@@ -164,61 +176,64 @@ def follow(n, t0, t1, q, slope, tau, state, random, pixel, constants, keys, coun
             count = emit(keys, count, ta + constants[DELAY], base, n, uniform(random, n) < 0.5, shift)
             reference = level
             ready = ta + constants[REFRACTORY] if constants[REFRACTORY] > 0.0 else -np.inf
-            noise = constants[NOISE_WIDTH] * normal(random, n)
+            draw_noise(n, constants[NOISE_WIDTH], state, random, True, True)
         background = ta + exponential(random, n, rate)
         if ta >= t1:
             break
     state[n, LEVEL], state[n, REFERENCE], state[n, READY] = level, reference, ready
-    state[n, NOISE], state[n, NEXT_BACKGROUND] = noise, background
+    state[n, NEXT_BACKGROUND] = background
     return count
 
 
 @kernel
 def turn(n, q, state, random, pixel, noise_width):  # type: ignore[no-untyped-def]
-    """Draw the comparator's noise anew where log light has turned round by a part of the threshold."""
+    """Where log light has turned round by a part of the threshold, draw noise for the decisions now ahead."""
     extreme, direction = state[n, EXTREME], state[n, DIRECTION]
     if direction >= 0.0:
         if q > extreme:
             extreme = q
         elif q < extreme - REVERSAL * pixel[n, 1]:
             direction, extreme = -1.0, q
-            state[n, NOISE] = noise_width * normal(random, n)
+            draw_noise(n, noise_width, state, random, False, True)
     elif q < extreme:
         extreme = q
     elif q > extreme + REVERSAL * pixel[n, 0]:
         direction, extreme = 1.0, q
-        state[n, NOISE] = noise_width * normal(random, n)
+        draw_noise(n, noise_width, state, random, True, False)
     state[n, EXTREME], state[n, DIRECTION] = extreme, direction
+
+
+@kernel
+def time_constant(light, constants):  # type: ignore[no-untyped-def]
+    """Time constant of the photoreceptor under `light`."""
+    tau = constants[TAU_REFERENCE] * constants[LIGHT_REFERENCE] / light
+    return min(max(tau, constants[TAU_MIN]), constants[TAU_MAX])
 
 
 @kernel
 def step(n, t1, light, state, random, pixel, constants, keys, count, base, shift):  # type: ignore[no-untyped-def]
     """Carry pixel `n` to its next sample, light running linearly; returns the event count."""
     t0, before = state[n, TIME], state[n, LIGHT]
+    state[n, LIGHT] = light
     if t1 <= t0:
-        state[n, LIGHT] = light
         return count
-    q = math.log(before)
-    if light == before:
-        tau = min(max(constants[TAU_REFERENCE] * constants[LIGHT_REFERENCE] / light, constants[TAU_MIN]),
-                  constants[TAU_MAX])
-        count = follow(n, t0, t1, q, 0.0, tau, state, random, pixel, constants, keys, count, base, shift)
-    else:
+    q, parts = math.log(before), 1
+    q_end = q
+    if light != before:
         q_end = math.log(light)
         turn(n, q_end, state, random, pixel, constants[NOISE_WIDTH])
-        parts = min(1 + int(abs(q_end - q) / LOG_STEP), SUB_STEPS_MAX)
-        for part in range(1, parts + 1):
-            ta = t0 + (t1 - t0) * (part - 1) / parts
-            tb = t1 if part == parts else t0 + (t1 - t0) * part / parts
-            now = before + (light - before) * part / parts
-            q_next = q_end if part == parts else math.log(now)
-            middle = now - 0.5 * (light - before) / parts
-            tau = min(max(constants[TAU_REFERENCE] * constants[LIGHT_REFERENCE] / middle, constants[TAU_MIN]),
-                      constants[TAU_MAX])
-            count = follow(n, ta, tb, q, (q_next - q) / (tb - ta), tau, state, random, pixel, constants, keys, count,
-                           base, shift)
-            q = q_next
-    state[n, TIME], state[n, LIGHT] = t1, light
+        quick = 1 + int(QUICK * (t1 - t0) / time_constant(0.5 * (light + before), constants))
+        parts = min(1 + int(abs(q_end - q) / LOG_STEP), quick, SUB_STEPS_MAX)
+    for part in range(1, parts + 1):
+        ta = t0 + (t1 - t0) * (part - 1) / parts
+        tb = t1 if part == parts else t0 + (t1 - t0) * part / parts
+        now = before + (light - before) * part / parts
+        q_next = q_end if part == parts else math.log(now)
+        tau = time_constant(now - 0.5 * (light - before) / parts, constants)
+        count = follow(n, ta, tb, q, (q_next - q) / (tb - ta), tau, state, random, pixel, constants, keys, count, base,
+                       shift)
+        q = q_next
+    state[n, TIME] = t1
     return count
 
 
@@ -229,7 +244,7 @@ def settle(n, t, light, state, random, pixel, constants):  # type: ignore[no-unt
     state[n, TIME], state[n, LIGHT] = t, light
     state[n, LEVEL], state[n, REFERENCE], state[n, EXTREME] = q, q, q
     state[n, READY], state[n, DIRECTION] = -np.inf, 0.0
-    state[n, NOISE] = constants[NOISE_WIDTH] * normal(random, n)
+    draw_noise(n, constants[NOISE_WIDTH], state, random, True, True)
     state[n, NEXT_BACKGROUND] = t + exponential(random, n, pixel[n, 2])
 
 
@@ -248,25 +263,44 @@ def expose_pixel(n, t, light, start, state, random, pixel, constants, keys, coun
     return count
 
 
+@kernel
+def copy_state(state, random, first, state_to, random_to, first_to, size):  # type: ignore[no-untyped-def]
+    """Copy the state of `size` pixels. (Assigned slices would double the time it takes to compile.)"""
+    for n in range(size):
+        for column in range(STATE_SIZE):
+            state_to[first_to + n, column] = state[first + n, column]
+        random_to[first_to + n] = random[first + n]
+
+
+@kernel
+def expose_chunk(first, last, t, light, start, state, random, pixel, alive, constants, keys, base, shift):  # type: ignore[no-untyped-def]
+    """Run pixels first..last - 1 through the samples; returns the event count.
+
+    Where the events do not fit into `keys`, the pixels are put back where they were.
+    """
+    state_before, random_before = np.empty((last - first, STATE_SIZE)), np.empty(last - first, np.uint64)
+    copy_state(state, random, first, state_before, random_before, 0, last - first)
+    count = 0
+    for n in range(first, last):
+        if alive[n]:
+            count = expose_pixel(n, t, light, start, state, random, pixel, constants, keys, count, base, shift)
+    if count > keys.shape[0]:
+        copy_state(state_before, random_before, 0, state, random, first, last - first)
+    return count
+
+
 @kernel(parallel=True)
 def expose_pixels(t, light, start, state, random, pixel, alive, constants, size, todo, keys, counts, base, shift):  # type: ignore[no-untyped-def]
-    """Run the chunks `todo` (C,) of `size` pixels each through the samples; chunk c writes its keys to `keys[c]`.
+    """Run the chunks `todo` (C,) of `size` pixels each through samples `t` (T,) of `light` (T, N).
 
-    A chunk whose buffer is too small is put back where it was; its entry of `counts` says what it needs.
+    Chunk c writes its keys to `keys[c]` and their number to `counts[c]`; a chunk that does not fit has not been run.
     `start`: settle at the first sample.
     """
     for chunk in numba.prange(keys.shape[0]):
         if todo[chunk]:
-            first, last = chunk * size, min((chunk + 1) * size, state.shape[0])
-            state_before, random_before = state[first:last].copy(), random[first:last].copy()
-            count = 0
-            for n in range(first, last):
-                if alive[n]:
-                    count = expose_pixel(n, t, light, start, state, random, pixel, constants, keys[chunk], count, base,
-                                         shift)
-            counts[chunk] = count
-            if count > keys.shape[1]:
-                state[first:last], random[first:last] = state_before, random_before
+            last = min((chunk + 1) * size, state.shape[0])
+            counts[chunk] = expose_chunk(chunk * size, last, t, light, start, state, random, pixel, alive, constants,
+                                         keys[chunk], base, shift)
 
 
 @kernel

@@ -48,7 +48,7 @@ class ModuleDraw(Strict):
     line_time_us: float = Field(default=18.0, ge=0)
     line_time_spread: float = Field(default=0.03, ge=0, lt=1)
     exposure_correction_us: float = Field(default=40.0, ge=0)
-    threshold: tuple[float, float] = (0.25, 0.35)
+    threshold: tuple[float, float] = (0.28, 0.42)
     threshold_spread: float = Field(default=0.04, ge=0, lt=0.3)
     noise_width: float = Field(default=0.05, ge=0, lt=0.5)
     refractory_us: float = Field(default=150.0, ge=0)
@@ -75,7 +75,7 @@ def draw_lens(draw: ModuleDraw, width: int, height: int, random: np.random.Gener
             lens = PerspectiveLens(fx, fy, cx, cy, (k1, k2, 0.0), (p1, p2))
         if lens.is_monotonic_over(width, height):
             return lens
-    raise OptionError(f"focal_per_width {per_width} with this distortion draws no lens that is one to one over the array")
+    raise OptionError(f"focal_per_width {per_width} with this distortion is never one to one over the array")
 
 
 def draw_map(draw: ModuleDraw, module: HybridModule, random: np.random.Generator) -> ColourFromEvent:
