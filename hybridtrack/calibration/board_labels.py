@@ -32,9 +32,9 @@ class Cells:
 
 @dataclass(frozen=True)
 class Labelling:
-    """`ij` (N, 2) of each crossing, in the order of the grid's places; (0, 0) where off the board. `wrong`: squares that
-    contradict it; `lead`: by how many more the next best labelling is contradicted; `half_turn_lead`: same, for the
-    board turned by half."""
+    """`ij` (N, 2) of each crossing, in the order of the grid's places; (0, 0) where off the board. `wrong`: squares
+    that contradict it; `lead`: by how many more the next best labelling is contradicted; `half_turn_lead`: same, for
+    the board turned by half."""
 
     ij: Array
     wrong: int
@@ -116,7 +116,8 @@ def label_grid(grid: Grid, cells: Cells, target: Target) -> Labelling | None:
                 if on_board.mean() < 0.9:
                     continue
                 at = np.clip(middles + offset + pad, 0, np.array(expected.shape)[::-1] - 1)
-                wrong = int(np.sum(expected[at[:, 1], at[:, 0]] != cells.blink)) + _OUTSIDE_COST * int((~on_board).sum())
+                wrong = int(np.sum(expected[at[:, 1], at[:, 0]] != cells.blink))
+                wrong += _OUTSIDE_COST * int(np.sum(~on_board))
                 scored.append((wrong, turn, np.where(on_board[:, None], ij, 0)))
     if not scored:
         return None

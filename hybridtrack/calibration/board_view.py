@@ -1,9 +1,8 @@
 """The board as one view shows it: positions on the board, and the light that pixels gather from each set of squares.
 
-The light of a pixel is sum_c level_c(p) f_c(p) over classes of squares c: set A, set B and steady dark. f_c is the share
-of the pixel's blurred aperture that looks at squares of class c (see light_kernels); the level of a class in each state
-of the blink is a smooth surface over the board.
-"""
+The light of a pixel is sum_c level_c(p) f_c(p) over classes of squares c: set A, set B and steady dark. f_c is the
+share of the pixel's blurred aperture that looks at squares of class c (see light_kernels); the level of a class in
+each state of the blink is a smooth surface over the board. """
 
 from dataclasses import dataclass
 

@@ -256,7 +256,8 @@ def _summary(scene: Scene, corners: _Corners, used: Array, freedom: Freedom) -> 
     known = 2 * int(used.sum()) + int(freedom.shape.sum())
     slices, error = corners.slices(len(scene.poses)), _residuals(scene, corners)
     return Solution(scene, freedom, [error[s] for s in slices], [used[s] for s in slices],
-                    _chi_square(scene, corners, used, freedom), max(known - free, 1), covariance, condition, scores)  # fmt: skip
+                    _chi_square(scene, corners, used, freedom), max(known - free, 1), covariance, condition,
+                    scores)  # fmt: skip
 
 
 def adjust(scene: Scene, views: list[ViewPoints], freedom: Freedom, tolerance: float = 1e-10) -> Solution:

@@ -88,22 +88,24 @@ def coverage_findings(coverage: Coverage) -> list[str]:
     findings = []
     if np.ptp(coverage.tilt_deg) < 15.0 or coverage.tilt_deg.max() < 15.0:
         findings.append(
-            f"lens: tilts of the board span only {coverage.tilt_deg.min():.0f} to {coverage.tilt_deg.max():.0f} degrees, "
-            "so focal length and distance are hard to tell apart; add views tilted by 20 to 35 degrees, each way"
+            f"lens: tilts of the board span only {coverage.tilt_deg.min():.0f} to {coverage.tilt_deg.max():.0f} "
+            "degrees, so focal length and distance are hard to tell apart; add views tilted by 20 to 35 "
+            "degrees, each way"
         )
     if coverage.missing:
         findings.append(
-            f"lens: no corner of the board was seen in the {', '.join(coverage.missing)} of the picture, so distortion is "
-            "extrapolated there and its true error may exceed the stated one; add a view with the board in that corner"
+            f"lens: no corner of the board was seen in the {', '.join(coverage.missing)} of the picture, so distortion "
+            "is extrapolated there and its true error may exceed the stated one; add a view with the board "
+            "in that corner"
         )
     if coverage.focal_share > 0.002:
         findings.append(
-            f"lens: the focal length is uncertain by {100 * coverage.focal_share:.2g} %; add views of the board that are "
-            "tilted, and that fill the picture"
+            f"lens: the focal length is uncertain by {100 * coverage.focal_share:.2g} %; add views of the board that "
+            "are tilted, and that fill the picture"
         )
     if coverage.edge_sigma_px > 0.5:
         findings.append(
-            f"lens: the deviation at the picture's edge is {coverage.edge_sigma_px:.2g} px; add views with the board close "
-            "to the edges and corners of the picture"
+            f"lens: the deviation at the picture's edge is {coverage.edge_sigma_px:.2g} px; add views with the board "
+            "close to the edges and corners of the picture"
         )
     return findings

@@ -1,9 +1,10 @@
 """The event-to-colour map by direct alignment of every event pixel that sees the board.
 
-Board poses, lens, levels and blur come from the frames; they predict each event pixel's log step of light through its own
-one-pixel aperture, wherever the map puts it. Gauss-Newton moves the map, together with the curve of counts against steps
-(see `event_map_normal`), until predicted and measured counts agree. In log light an edge's half-amplitude point lies on
-its dark side; since the light model knows that, no bias comes of it. The aliased event picture is never interpolated.
+Board poses, lens, levels and blur come from the frames; they predict each event pixel's log step of light through its
+own one-pixel aperture, wherever the map puts it. Gauss-Newton moves the map, together with the curve of counts
+against steps (see `event_map_normal`), until predicted and measured counts agree. In log light an edge's
+half-amplitude point lies on its dark side; since the light model knows that, no bias comes of it. The aliased event
+picture is never interpolated.
 
 Covariance: from the normal equations, plus what the deviations of poses and lens do to the map, all scaled by how much
 more the views disagree than these explain. The die's lattice is then tested, and kept where it holds.
@@ -85,7 +86,9 @@ def _measured_views(views: list[ViewImages], lens_fit: LensFit, target: Target, 
             lights.append(light)
             order.append(n)
     if len(images) < 2:
-        raise BoardNotFoundError(f"event map: expected at least 2 views with the board well in the frame, got {len(images)}")
+        raise BoardNotFoundError(
+            f"event map: expected at least 2 views with the board well in the frame, got {len(images)}"
+        )
     return _Views(images, lights, lens_fit.camera_from_board[order], lens_fit, np.array(order), target)
 
 
@@ -239,8 +242,8 @@ def _nuisance_columns(normal: MapNormal) -> Array:
 
 
 def map_covariance(normal: MapNormal, nuisance: Array) -> tuple[Array, Array, float, int]:
-    """Covariance (7, 7) of the coefficients, cross covariance (7, P) with the lens, its factor over what noise and poses
-    explain, and the factor's degrees of freedom."""
+    """Covariance (7, 7) of the coefficients, cross covariance (7, P) with the lens, its factor over what noise and
+    poses explain, and the factor's degrees of freedom."""
     views = len(normal.scores)
     inverse = np.linalg.inv(normal.matrix)
     columns = _nuisance_columns(normal)
@@ -288,7 +291,8 @@ def _clear_site(at_centre: Array, nominal: HybridModule) -> tuple[tuple[int, int
     if np.any(np.abs(centroid) > 0.4):
         findings.append(
             f"event map: the optical centroid lies ({centroid[0]:+.2f}, {centroid[1]:+.2f}) px from the clear site "
-            f"{site[0]}, {site[1]}, so that a neighbouring site is nearly as likely; the map itself does not depend on it"
+            f"{site[0]}, {site[1]}, so that a neighbouring site is nearly as likely; the map itself "
+            "does not depend on it"
         )
     return (int(site[0]), int(site[1])), centroid, findings
 
@@ -296,15 +300,22 @@ def _clear_site(at_centre: Array, nominal: HybridModule) -> tuple[tuple[int, int
 def _lattice_findings(verdict: LatticeVerdict, factor: float) -> list[str]:
     findings = []
     if verdict.linear:
-        findings.append(f"event map: not the die's lattice (p {verdict.linear_p:.1g}); the affine map is reported as measured")
+        findings.append(
+            f"event map: not the die's lattice (p {verdict.linear_p:.1g}); the affine map is reported as measured"
+        )
     if verdict.radial:
         findings.append(f"event map: a radial term is needed (p {verdict.radial_p:.1g})")
     if factor > 4.0:
         findings.append(
-            f"event map: views disagree {np.sqrt(factor):.1f} times more than their noise explains; deviations are enlarged "
-            "by that; check that the board is flat and held still"
+            f"event map: views disagree {np.sqrt(factor):.1f} times more than their noise explains; deviations are "
+            "enlarged by that; check that the board is flat and held still"
         )
     return findings
+
+
+def _rows(matrix: Array) -> tuple[tuple[float, float, float], tuple[float, float, float]]:
+    (a, b, c), (d, e, f) = matrix.tolist()
+    return (a, b, c), (d, e, f)
 
 
 def _result(state: _State, base: Array, verdict: LatticeVerdict, mirror: tuple[bool, bool], centre: Array,
@@ -317,7 +328,7 @@ def _result(state: _State, base: Array, verdict: LatticeVerdict, mirror: tuple[b
     at_centre = (matrix - lattice_matrix(nominal, mirror, (0.0, 0.0))) @ middle
     site, centroid, findings = _clear_site(at_centre, nominal)
     fitted = ColourFromEvent(
-        matrix=tuple(tuple(float(x) for x in row) for row in matrix), centroid=(float(centroid[0]), float(centroid[1])),
+        matrix=_rows(matrix), centroid=(float(centroid[0]), float(centroid[1])),
         radial=float(verdict.coefficients[6]), centre=(float(centre[0]), float(centre[1])),
         lattice=LatticeTest(consistent=not verdict.linear, p_value=verdict.linear_p),
     )  # fmt: skip
@@ -346,7 +357,9 @@ def fit_event_map(views: list[ViewImages], boards: list[BoardCorners], lens_fit:
     first = _choose(measured, state, _positions(state, nominal, centre))
     total = sum(len(places.pixel) for places in first)
     if total < _LEAST_PIXELS:
-        raise DegenerateDataError(f"event map: expected at least {_LEAST_PIXELS} event pixels on the board, got {total}")
+        raise DegenerateDataError(
+            f"event map: expected at least {_LEAST_PIXELS} event pixels on the board, got {total}"
+        )
     all_steps = _predict(first, state, np.zeros((pixels, 2)), target)
     sign = _blink_sign(all_steps)
     all_steps = [replace(steps, count=sign * steps.count) for steps in all_steps]
@@ -367,7 +380,8 @@ def fit_event_map(views: list[ViewImages], boards: list[BoardCorners], lens_fit:
     patch_xy, patch_px = _patches(aligned.steps, state, aligned.basis, nominal)
     return EventMapFit(
         colour_from_event=fitted, mirror_x=start.mirror[0], mirror_y=start.mirror[1], clear_site=site,
-        parameters=tuple(MAP_PARAMETERS[k] for k in kept), covariance=(J @ verdict.covariance @ J.T)[np.ix_(kept, kept)],
+        parameters=tuple(MAP_PARAMETERS[k] for k in kept),
+        covariance=(J @ verdict.covariance @ J.T)[np.ix_(kept, kept)],
         cross_covariance=(J @ cross)[kept], residual_xy=patch_xy, residuals_px=patch_px,
         findings=findings + _lattice_findings(verdict, factor),
     )  # fmt: skip

@@ -82,8 +82,8 @@ class MapNormal:
 
 @dataclass(frozen=True)
 class _Rows:
-    """One view's residuals (N,) at gain 1, design (N, S), predicted counts (N,) at gain 1, weights (N,), and slopes (N,)
-    of the count with gain, by log step and by px."""
+    """One view's residuals (N,) at gain 1, design (N, S), predicted counts (N,) at gain 1, weights (N,), and slopes
+    (N,) of the count with gain, by log step and by px."""
 
     residual: Array
     design: Array

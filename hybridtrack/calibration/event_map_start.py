@@ -6,7 +6,6 @@ one serves to tell mirrorings apart.
 """
 
 from dataclasses import dataclass
-from itertools import product
 
 import numpy as np
 from scipy.ndimage import map_coordinates
@@ -88,7 +87,7 @@ def find_map_start(views: list[ViewImages], module: HybridModule) -> MapStart:
     amplitudes = [clipped_amplitude(view) for view in views]
     pitch = (module.cluster.width, module.cluster.height)
     middle = ((pitch[0] - 1) / 2.0, (pitch[1] - 1) / 2.0)
-    flips = list(product((False, True), repeat=2))
+    flips = [(x, y) for x in (False, True) for y in (False, True)]
     scores = [_correlation(steps, amplitudes, module, lattice_matrix(module, flip, middle)) for flip in flips]
     order = np.argsort(scores)[::-1]
     best, second = float(scores[order[0]]), float(scores[order[1]])

@@ -48,7 +48,8 @@ class PixelPlaces:
 
 @dataclass(frozen=True)
 class PixelSteps:
-    """Predicted log steps (N,) of the pixels of one view, and their derivatives by position (N, 2) and ln(blur) (N,)."""
+    """Predicted log steps (N,) of the pixels of one view, and their derivatives by position (N, 2) and ln(blur)
+    (N,)."""
 
     pixel: Array
     count: Array

@@ -50,7 +50,8 @@ def without_terms(coefficients: Array, covariance: Array, terms: Array) -> tuple
 
 
 def judge_lattice(coefficients: Array, covariance: Array, degrees_of_freedom: float) -> LatticeVerdict:
-    """Test all terms off the lattice together; where they are not zero, keep those that a test of their own asks for."""
+    """Test all terms off the lattice together; where they are not zero, keep those that a test of their own asks
+    for."""
     every = np.concatenate([_LINEAR, _RADIAL])
     joint = wald_p_value(coefficients, covariance, every, degrees_of_freedom)
     linear_p = wald_p_value(*without_terms(coefficients, covariance, _RADIAL), _LINEAR, degrees_of_freedom)

@@ -1,9 +1,8 @@
 """Which distortion terms a set of views supports: chosen by error on views held out of the fit.
 
-Each candidate is fitted to all views but a few; on those only the poses are fitted, and what remains is the candidate's
-held-out error. Root mean square over the views that went in says nothing: it falls with every term added, while the error
-in the picture's corners may explode.
-"""
+Each candidate is fitted to all views but a few; on those only the poses are fitted, and what remains is the
+candidate's held-out error. Root mean square over the views that went in says nothing: it falls with every term added,
+while the error in the picture's corners may explode. """
 
 from dataclasses import dataclass
 

@@ -66,18 +66,20 @@ def _cluster_factor(solution: Solution, count: int) -> float:
 def _refuse_degenerate(coverage: Coverage) -> None:
     if coverage.tilt_deg.max() < _LEAST_TILT_DEG or np.ptp(coverage.tilt_deg) < 1.0:
         raise DegenerateDataError(
-            f"lens: expected views of the board tilted by different angles, got tilts of {coverage.tilt_deg.min():.1f} to "
-            f"{coverage.tilt_deg.max():.1f} degrees, from which no focal length follows; add views tilted by 20 to 35 degrees"
+            f"lens: expected views of the board tilted by different angles, got tilts of {coverage.tilt_deg.min():.1f} "
+            f"to {coverage.tilt_deg.max():.1f} degrees, from which no focal length follows; add views tilted by "
+            "20 to 35 degrees"
         )
     if coverage.focal_share > _WORST_FOCAL_SHARE or coverage.condition > _WORST_CONDITION:
         raise DegenerateDataError(
-            f"lens: expected views that determine the focal length, got one uncertain by {100 * coverage.focal_share:.2g} % "
-            f"(condition {coverage.condition:.1e}); add views tilted by 20 to 35 degrees, and some that fill the picture"
+            f"lens: expected views that determine the focal length, got one uncertain by "
+            f"{100 * coverage.focal_share:.2g} % (condition {coverage.condition:.1e}); add views tilted by 20 to 35 degrees, and some that fill the "
+            "picture"
         )
     if coverage.edge_sigma_px > _WORST_EDGE_PX:
         raise DegenerateDataError(
-            f"lens: expected views that reach the edges of the picture, got a deviation of {coverage.edge_sigma_px:.0f} px "
-            "there; add views with the board in each corner of the picture"
+            f"lens: expected views that reach the edges of the picture, got a deviation of "
+            f"{coverage.edge_sigma_px:.0f} px there; add views with the board in each corner of the picture"
         )
 
 
@@ -97,9 +99,10 @@ def _shape_sigma(target: Target) -> Array:
 
 
 def _model_finding(chosen: Candidate, candidates: list[Candidate]) -> str:
+    roots = [float(np.sqrt(np.mean(c.held_out) / 2.0)) for c in candidates]
     errors = ", ".join(
-        f"{c.name} {np.sqrt(np.mean(c.held_out) / 2.0):.3g}" if np.all(np.isfinite(c.held_out)) else f"{c.name} rejected"
-        for c in candidates
+        f"{c.name} {root:.3g}" if np.isfinite(root) else f"{c.name} rejected"
+        for c, root in zip(candidates, roots, strict=True)
     )
     return f"lens: model {chosen.name} chosen by error on views held out, in corner deviations per axis: {errors}"
 
@@ -108,9 +111,8 @@ def fit_view_points(views: list[ViewPoints], view_numbers: Array, size: tuple[in
                     shape_sigma: Array | None = None) -> LensFit:
     """Fit lens and poses to corners of a flat board on an array of `size` (width, height).
 
-    `model` is one of `lens_choice.MODELS`, or None to choose. Raises DegenerateDataError where the views do not determine
-    a lens.
-    """
+    `model` is one of `lens_choice.MODELS`, or None to choose. Raises DegenerateDataError where the views do not
+    determine a lens. """
     sigma = np.zeros(3) if shape_sigma is None else shape_sigma
     findings = []
     if model is None:

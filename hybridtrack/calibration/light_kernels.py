@@ -14,8 +14,6 @@ edges up to 25 degrees off square leave an error under 1e-3. The aperture is ave
 
 import math
 
-import numpy as np
-
 from hybridtrack.compiled import kernel
 
 _ROOT_HALF = math.sqrt(0.5)
@@ -67,7 +65,7 @@ def square_fractions(board, gradient, nodes, weights, kind, size, sigma, squares
             continue
         rho = (gx0 * gy0 + gx1 * gy1) / (gx * gy)
         sx, sy = gx * sigma, gy * sigma
-        i, j = int(math.floor(board[n, 0] / size[0] + 0.5)), int(math.floor(board[n, 1] / size[1] + 0.5))
+        i, j = math.floor(board[n, 0] / size[0] + 0.5), math.floor(board[n, 1] / size[1] + 0.5)
         x, y = board[n, 0] - i * size[0], board[n, 1] - j * size[1]
         q00, q10 = _padded(squares, j - 1, i - 1), _padded(squares, j - 1, i)
         q01, q11 = _padded(squares, j, i - 1), _padded(squares, j, i)
@@ -99,7 +97,9 @@ def square_fractions(board, gradient, nodes, weights, kind, size, sigma, squares
 
 
 @kernel
-def crossing_memberships(board, gradient, nodes, weights, kind, centre, shift, sigma, out):  # type: ignore[no-untyped-def]
+def crossing_memberships(  # type: ignore[no-untyped-def]
+    board, gradient, nodes, weights, kind, centre, shift, sigma, out
+):
     """Fill `out` (N, 12) for pixels around one crossing: A, B, AB + R, and each one's d/du, d/dv, d/d ln(sigma).
 
     Order: A, B, AB, then A_u, A_v, A_s, B_u, B_v, B_s, AB_u, AB_v, AB_s, all averaged over the aperture. `centre` (2,)

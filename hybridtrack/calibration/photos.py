@@ -69,7 +69,8 @@ def photo_files(source: Path | str | Sequence[Path | str]) -> list[Path]:
 
 
 def _board_target(columns: int, rows: int, square_m: float | tuple[float, float]) -> Target:
-    """The printed board as a target. Its squares do not blink, so that a target's rule of even and odd does not bind."""
+    """The printed board as a target. Its squares do not blink, so that a target's rule of even and odd does not
+    bind."""
     return Target.model_construct(
         kind="shuttered_checker", columns=columns + 1, rows=rows + 1, square_m=square_m, blink_hz=1.0, duty=0.5,
         steady_dark=[], square_sigma_m=None, flatness_sigma_m=None,
@@ -137,7 +138,8 @@ def _find_all(pictures: list[tuple[Path, Array]], columns: int, rows: int, skipp
         if uv is None:
             skipped.append((path, f"shows no board of {columns}x{rows} inner corners"))
         else:
-            boards.append(_equal_weights(BoardCorners(k, ij, uv, np.zeros((len(uv), 2, 2)), np.full((len(uv), 2), np.nan), True)))
+            unknown = np.full((len(uv), 2), np.nan)
+            boards.append(_equal_weights(BoardCorners(k, ij, uv, np.zeros((len(uv), 2, 2)), unknown, True)))
     return boards
 
 
@@ -155,9 +157,8 @@ def calibrate_photos(source: Path | str | Sequence[Path | str], columns: int, ro
                      progress: Progress | None = None) -> PhotoCalibration:
     """Calibrate a lens from photographs of a board with `columns` x `rows` inner corners and squares of `square_m`.
 
-    `source` is a folder or a list of files. `model` is one of `lens_choice.MODELS`, or None to choose by held-out error.
-    Raises OptionError, MissingFileError, BoardNotFoundError, DegenerateDataError.
-    """
+    `source` is a folder or a list of files. `model` is one of `lens_choice.MODELS`, or None to choose by held-out
+    error. Raises OptionError, MissingFileError, BoardNotFoundError, DegenerateDataError. """
     if min(columns, rows) < 3 or np.min(square_m) <= 0:
         raise OptionError(
             f"photographs: a board of at least 3x3 inner corners and squares of positive size are required, got "

@@ -1,9 +1,8 @@
 """How bright the board's squares are in one view, and how blurred: fitted to the frame pictures in linear light.
 
-Each class of squares (set A, set B, steady dark; on a shuttered board the last two are one) has a level in each state of
-the blink, a quadratic in board coordinates: lamps and lenses shade smoothly. With the levels linear and one blur for the
-view, a few Gauss-Newton steps on the logarithm of the blur suffice.
-"""
+Each class of squares (set A, set B, steady dark; on a shuttered board the last two are one) has a level in each state
+of the blink, a quadratic in board coordinates: lamps and lenses shade smoothly. With the levels linear and one blur
+for the view, a few Gauss-Newton steps on the logarithm of the blur suffice. """
 
 from dataclasses import dataclass, replace
 
@@ -28,9 +27,8 @@ class ViewLight:
     """Levels and blur of one view.
 
     `squares` (K, R, C): membership of squares in the K classes; `bright`, `dark` (K, 6): coefficients of the level in
-    the state "A bright" and "A dark"; `blur_px`: deviation of the point spread in colour px; `residual`: root mean square
-    of what the difference of the two pictures leaves, over the step of set A.
-    """
+    the state "A bright" and "A dark"; `blur_px`: deviation of the point spread in colour px; `residual`: root mean
+    square of what the difference of the two pictures leaves, over the step of set A. """
 
     squares: Array
     bright: Array
@@ -52,7 +50,8 @@ def _basis(xy_m: Array, target: Target) -> Array:
 
 
 def light_classes(target: Target) -> Array:
-    """Membership (K, R, C) of squares in the classes that differ: A, and B with the steady dark, or each of the three."""
+    """Membership (K, R, C) of squares in the classes that differ: A, and B with the steady dark, or each of the
+    three."""
     squares = class_squares(target)
     if not target.is_counterphase:
         return np.stack([squares[0], squares[1] + squares[2]])
