@@ -73,8 +73,8 @@ def _refuse_degenerate(coverage: Coverage) -> None:
     if coverage.focal_share > _WORST_FOCAL_SHARE or coverage.condition > _WORST_CONDITION:
         raise DegenerateDataError(
             f"lens: expected views that determine the focal length, got one uncertain by "
-            f"{100 * coverage.focal_share:.2g} % (condition {coverage.condition:.1e}); add views tilted by 20 to 35 degrees, and some that fill the "
-            "picture"
+            f"{100 * coverage.focal_share:.2g} % (condition {coverage.condition:.1e}); add views tilted by 20 to 35 "
+            "degrees, and some that fill the picture"
         )
     if coverage.edge_sigma_px > _WORST_EDGE_PX:
         raise DegenerateDataError(
