@@ -121,12 +121,11 @@ def pixel_rays(lens: Lens, positions: FloatArray, aperture: Aperture, channels: 
         ahead, behind = (lens.unproject(positions + side * half, allow_outside=True) for side in (1.0, -1.0))
         steps.append(ahead - behind)
     px_area = np.linalg.norm(np.cross(steps[0], steps[1]), axis=-1)
-    footprint_px = 2.0 * aperture.deviation_px  # a texel box of width b, read bilinearly, has the variance b^2 / 4
     box_px = math.sqrt(12.0) * aperture.deviation_px
     rays = np.zeros((len(positions), RAY_SIZE))
     rays[:, RAY : RAY + 3] = directions
     rays[:, ALONG_U : ALONG_U + 3], rays[:, ALONG_V : ALONG_V + 3] = box_px * steps[0], box_px * steps[1]
-    rays[:, SOLID_ANGLE] = footprint_px**2 * px_area
+    rays[:, SOLID_ANGLE] = 3.0 * aperture.deviation_px**2 * px_area
     rays[:, MARGIN] = 0.5 * box_px * np.maximum(*(np.linalg.norm(step, axis=-1) for step in steps))
     rays[:, CHANNEL] = 0 if channels is None else channels
     inside = np.flatnonzero(np.isfinite(rays).all(axis=-1))
@@ -184,23 +183,37 @@ class RayCaster:
         render_instants(maps, self._packed, tiles, candidates, counts, self.rays.rays, light)
         return light
 
-    def exposures(
-        self, world_from_camera: FloatArray, weights: FloatArray, knots: FloatArray, way_stations: FloatArray
-    ) -> Array:
+    def exposures(self, exposure: "Exposure", way_stations: FloatArray) -> Array:
         """Light (P,) float32 of every pixel over an exposure of its own.
 
-        `world_from_camera` (samples, knots, 4, 4): poses of each sample of the exposure at a few instants of the
-        readout, `weights` (samples, knots) its share, `knots` (P,) where between the knots each pixel is read.
         `way_stations` (K, 4, 4): poses along all of the motion, no more than `LIST_MARGIN_PX` apart.
         """
-        samples, count = world_from_camera.shape[:2]
-        maps = maps_of(self.scene, world_from_camera.reshape(-1, 4, 4)).reshape(samples, count, -1, MAP_SIZE)
+        samples, count = exposure.world_from_camera.shape[:2]
+        maps = maps_of(self.scene, exposure.world_from_camera.reshape(-1, 4, 4)).reshape(samples, count, -1, MAP_SIZE)
         candidates, counts = self._lists(maps_of(self.scene, way_stations))
         light = np.zeros(self.rays.size, np.float32)
-        light[self.rays.unreached] = weights.sum(axis=0).mean() * self.scene.background
+        rows, weights = exposure.rows, exposure.weights
+        light[self.rays.unreached] = weights.sum(axis=0)[rows[self.rays.unreached]] * self.scene.background
         tiles = (self.rays.order, self.rays.start)
-        render_exposures(maps, weights, knots, self._packed, tiles, candidates, counts, self.rays.rays, light)
+        render_exposures(
+            maps, weights, exposure.places, rows, self._packed, tiles, candidates, counts, self.rays.rays, light
+        )
         return light
+
+
+@dataclass(frozen=True)
+class Exposure:
+    """When the rows of a frame look, and how much each look counts.
+
+    `world_from_camera` (samples, knots, 4, 4): poses of each sample of the exposure at a few instants of the readout;
+    `places` (rows,) where between those knots each row is; `weights` (samples, rows) what each sample counts in each
+    row; `rows` (P,) int64 each pixel's row.
+    """
+
+    world_from_camera: FloatArray
+    places: FloatArray
+    weights: FloatArray
+    rows: Array
 
 
 @dataclass(frozen=True)

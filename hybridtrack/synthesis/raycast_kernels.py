@@ -194,8 +194,10 @@ def _meet(maps, rays, first, last, margin_scale, found):
 def _read(maps, looks, texels, levels, background, rays, first, last, found):
     """Fill the column of light of `found` for rays first..last-1 that `_meet` has met.
 
-    Level L of a texture averages boxes of 4^L texels^2, so its variance grows as 4^L, and mixing two levels mixes their
-    variances: a footprint of F texels^2 takes the share (F / 4^L - 1) / 3 of the level after L.
+    Texels are read with a quadratic B-spline (3 x 3 weights), whose variance, 1/4 texel^2, does not depend on where
+    between texels the ray falls, as that of bilinear reading does. With the box that a texel of level L averages, the
+    variance is 4^L / 3; mixing two levels mixes variances: one of S texels^2 takes the share (3 S / 4^L - 1) / 3 of the
+    level after L. The column SOLID_ANGLE of `rays` holds that of the square 3 S.
     """
     for n in range(first, last):
         best = int(found[n, BEST])
@@ -214,15 +216,20 @@ def _read(maps, looks, texels, levels, background, rays, first, last, found):
         total, weight = 0.0, 1.0 - share
         while weight > 0.0:
             start, width, height = levels[texture, level, 0], levels[texture, level, 1], levels[texture, level, 2]
-            px = min(max(x * scale - 0.5, 0.0), width - 1.0)
-            py = min(max(y * scale - 0.5, 0.0), height - 1.0)
-            i, j = int(px), int(py)
-            share_x, share_y = px - i, py - j
+            px = min(max(x * scale, 0.5), width - 0.5)
+            py = min(max(y * scale, 0.5), height - 0.5)
+            i, j = min(int(px), width - 1), min(int(py), height - 1)
+            fx, fy = px - i - 0.5, py - j - 0.5
+            before_x, after_x = 0.5 * (0.5 - fx) ** 2, 0.5 * (0.5 + fx) ** 2
+            before_y, after_y = 0.5 * (0.5 - fy) ** 2, 0.5 * (0.5 + fy) ** 2
             here = start + j * width + i
-            right, below = 1 if i < width - 1 else 0, width if j < height - 1 else 0
-            top = (1.0 - share_x) * texels[here] + share_x * texels[here + right]
-            bottom = (1.0 - share_x) * texels[here + below] + share_x * texels[here + below + right]
-            total += weight * ((1.0 - share_y) * top + share_y * bottom)
+            left, right = (1 if i > 0 else 0), (1 if i < width - 1 else 0)
+            above, below = here - (width if j > 0 else 0), here + (width if j < height - 1 else 0)
+            middle_x = 0.75 - fx * fx
+            top = before_x * texels[above - left] + middle_x * texels[above] + after_x * texels[above + right]
+            middle = before_x * texels[here - left] + middle_x * texels[here] + after_x * texels[here + right]
+            bottom = before_x * texels[below - left] + middle_x * texels[below] + after_x * texels[below + right]
+            total += weight * (before_y * top + (0.75 - fy * fy) * middle + after_y * bottom)
             weight, share = share, 0.0
             level, scale = level + 1, 0.5 * scale
         found[n, SEEN] = total * looks[best, 4 + int(rays[n, CHANNEL])]
@@ -241,7 +248,7 @@ def _spread(maps, looks, texels, levels, background, rays, first, last, found, s
                 for j in range(3):
                     along = SPREAD_U[k] * rays[n, ALONG_U + j] + SPREAD_V[k] * rays[n, ALONG_V + j]
                     spread[count, RAY + j] = rays[n, RAY + j] + along
-                spread[count, SOLID_ANGLE], spread[count, CHANNEL] = rays[n, SOLID_ANGLE], rays[n, CHANNEL]
+                spread[count, SOLID_ANGLE], spread[count, CHANNEL] = rays[n, SOLID_ANGLE] / size, rays[n, CHANNEL]
                 count += 1
     if count == 0:
         return
@@ -308,13 +315,13 @@ def _between(maps, i, knot, share, ids, local):
 
 
 @kernel(parallel=True)
-def render_exposures(maps, weights, knots, scene, tiles, candidates, counts, rays, light):
+def render_exposures(maps, weights, places, rows, scene, tiles, candidates, counts, rays, light):
     """Add to `light` (P,) what pixels see, each exposed over samples at its own row's time.
 
-    `maps` (samples, knots, Q, MAP_SIZE) holds every sample's surface maps at a few instants of the readout, `knots`
-    (P,) each pixel's place between them (a real number); `weights` (samples, knots) each sample's share of the
-    exposure, lamp included. Between knots, maps and weights are taken as straight lines. The rest as in
-    `render_instants`.
+    `maps` (samples, knots, Q, MAP_SIZE) holds every sample's surface maps at a few instants of the readout, between
+    which they are taken as straight lines; `places` (rows,) says where between the knots each row is, a real number.
+    `weights` (samples, rows): each sample's share of the exposure, lamp included. `rows` (P,): each pixel's row. The
+    rest as in `render_instants`.
     """
     order, start = tiles
     texels, levels, background = scene[0], scene[1], scene[5]
@@ -328,19 +335,18 @@ def render_exposures(maps, weights, knots, scene, tiles, candidates, counts, ray
         local = np.empty((count, MAP_SIZE))
         first = 0
         while first < end - begin:
-            place, last = knots[order[begin + first]], first
-            while last < end - begin and knots[order[begin + last]] == place:
+            row, last = rows[order[begin + first]], first
+            while last < end - begin and rows[order[begin + last]] == row:
                 last += 1
-            knot = min(int(place), last_knot)
-            share = place - knot
+            knot = min(int(places[row]), last_knot)
+            share = places[row] - knot
             for i in range(maps.shape[0]):
                 _between(maps, i, knot, share, ids, local)
-                weight = weights[i, knot] + share * (weights[i, knot + 1] - weights[i, knot])
                 _meet(local, own, first, last, 1.0, found)
                 _read(local, looks, texels, levels, background, own, first, last, found)
                 _spread(local, looks, texels, levels, background, own, first, last, found, spread, met)
                 for n in range(first, last):
-                    light[order[begin + n]] += weight * found[n, SEEN]
+                    light[order[begin + n]] += weights[i, row] * found[n, SEEN]
             first = last
 
 

@@ -15,7 +15,7 @@ from hybridtrack.synthesis.frame_sensor import mosaic_letters
 from hybridtrack.synthesis.lamp import LampRecipe
 from hybridtrack.synthesis.motion import Trajectory
 from hybridtrack.synthesis.picture_motion import PictureMotion, picture_motion
-from hybridtrack.synthesis.raycast import LIST_MARGIN_PX, Aperture, PixelRays, RayCaster, pixel_rays
+from hybridtrack.synthesis.raycast import LIST_MARGIN_PX, Aperture, Exposure, PixelRays, RayCaster, pixel_rays
 from hybridtrack.synthesis.raycast_kernels import light_between
 from hybridtrack.synthesis.scene import CHANNELS, Scene
 
@@ -133,13 +133,17 @@ class View:
         ways = [motion.way_between(t, t + exposure_ns) for t in np.linspace(first, last, 5)]
         samples = int(np.clip(np.ceil(max(ways) / STEP_PX), _FEWEST_SAMPLES, _MOST_SAMPLES))
         knots = max(-(-mode.height // _ROWS_A_KNOT), 1) + 1
-        starts = np.linspace(first, last, knots)
-        edges = starts + np.arange(samples + 1)[:, None] * (exposure_ns / samples)
-        weights = np.diff(self.lamp.integral_ns(edges), axis=0) / full_ns
-        poses = self.trajectory.poses((0.5 * (edges[1:] + edges[:-1])).ravel()).reshape(samples, knots, 4, 4)
-        place = (row_starts_ns - first) / (last - first) * (knots - 1) if last > first else np.zeros(mode.height)
+        edges = np.arange(samples + 1)[:, None] * (exposure_ns / samples)
+        middles = np.linspace(first, last, knots) + 0.5 * (edges[1:] + edges[:-1])
+        span = last - first
+        exposure = Exposure(
+            self.trajectory.poses(middles.ravel()).reshape(samples, knots, 4, 4),
+            (row_starts_ns - first) / span * (knots - 1) if span > 0 else np.zeros(mode.height),
+            np.diff(self.lamp.integral_ns(row_starts_ns + edges), axis=0) / full_ns,
+            np.repeat(np.arange(mode.height), mode.width),
+        )
         stations = self.trajectory.poses(motion.instants_ns(first, last + exposure_ns, LIST_MARGIN_PX, np.inf))
-        light = self._frames.exposures(poses, weights, np.repeat(place, mode.width), stations)
+        light = self._frames.exposures(exposure, stations)
         return (light * self._gain(self._frames)).reshape(mode.shape)
 
     def sharp_light(self, t_ns: float) -> Array:
