@@ -97,7 +97,7 @@ def onsets_of_view(recording: Recording, view: View, fold: ViewFold, blink: Blin
 def regress(number: Array, onset_ns: Array, view: Array, centre: float) -> tuple[Array, Array, Array]:
     """Robust line of onset over flip number: (intercept at `centre`, period), covariance (2, 2), residuals (K,).
 
-    Huber weights; the covariance is a sandwich clustered by view, since a view's flips share its light and load.
+    Huber weights; the covariance adds the scatter of flips and that of whole views, whose flips share light and load.
     """
     design = np.column_stack([np.ones(len(number)), number - centre])
     weight = np.ones(len(number))
@@ -107,12 +107,14 @@ def regress(number: Array, onset_ns: Array, view: Array, centre: float) -> tuple
         residual = onset_ns - design @ line
         scale = max(1.4826 * float(np.median(np.abs(residual))), 100.0)
         weight = np.minimum(1.0, 1.5 * scale / np.maximum(np.abs(residual), 1e-9))
-    inverse = np.linalg.inv(normal)
     groups = np.unique(view)
-    scores = np.array([design[view == g].T @ (weight * residual)[view == g] for g in groups])
-    covariance = inverse @ (scores.T @ scores) @ inverse * len(groups) / max(len(groups) - 2, 1)
-    floor = inverse * scale**2
-    return line, covariance + floor, residual
+    means = np.array([design[view == g].mean(axis=0) for g in groups])
+    shifts = np.array([np.average(residual[view == g], weights=weight[view == g]) for g in groups])
+    covariance = np.linalg.inv(normal) * scale**2
+    if len(groups) > 2:
+        # Views that shift as a whole: the line is then one through the views' means.
+        covariance = covariance + np.linalg.inv(means.T @ means) * np.sum(shifts**2) / (len(groups) - 2)
+    return line, covariance, residual
 
 
 def fit_onsets(recording: Recording, blink: Blink, views: list[View], folds: list[ViewFold]) -> OnsetFit:

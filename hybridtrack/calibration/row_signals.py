@@ -56,7 +56,7 @@ def singular_row_signals(light: Array, signed: bool) -> tuple[Array, Array]:
         weights *= np.where(weights.sum(axis=1) < 0, -1.0, 1.0)[:, None]
     signal = np.einsum("hnw,hw->hn", rows, weights)
     # Noise of a unit-weight sum: what the trailing singular values leave, and a floor for exact data.
-    noise = np.sqrt(values[:, :-1].sum(axis=1) / max(rows.shape[1] - 2, 1) / rows.shape[2])
+    noise = np.sqrt(np.maximum(values[:, :-1].sum(axis=1), 0.0) / max(rows.shape[1] - 2, 1) / rows.shape[2])
     shows = (leading > 8.0 * second) & (leading > 0)
     return signal, np.where(shows, np.maximum(noise, 1e-4 * np.sqrt(leading / rows.shape[1])), np.inf)
 
