@@ -1,6 +1,7 @@
 """Invented plants, seen from above: leaves, seedlings in trays, rosettes in pots."""
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 
@@ -29,35 +30,34 @@ class Species:
         )
 
 
-def leaf_outline(length: float, width: float, teeth: float, points: int = 14) -> Array:
-    """Right half of a leaf from base to tip (points, 2): along, across."""
+@lru_cache(maxsize=512)
+def leaf_shape(slimness: float, teeth: float, points: int = 14) -> Array:
+    """A leaf of length one along x: right half (points, 2) from base to tip, left half, then ribs (2 points each)."""
     s = np.linspace(0.0, 1.0, points)
-    across = 0.5 * width * np.sin(np.pi * s**0.85) ** 0.9
+    across = 0.5 * slimness * np.sin(np.pi * s**0.85) ** 0.9
     across[1:-1:2] *= 1.0 + teeth
     across[2:-1:2] *= 1.0 - teeth
-    return np.stack([length * s, across], axis=1)
+    right = np.stack([s, across], axis=1)
+    ribs = [[0.0, 0.0], [0.96, 0.0]]
+    for start in (0.2, 0.38, 0.57, 0.75):
+        for side in (0.34 * slimness, -0.34 * slimness):
+            ribs += [[start, 0.0], [start + 0.14, side]]
+    return np.concatenate([right, right * [1.0, -1.0], np.array(ribs)])
 
 
 def draw_leaf(canvas: Array, base: Array, heading: float, length: float, look: Species, tone: float) -> None:
     """Draw one leaf with its shadow, a light and a dark half, midrib and side veins, in place."""
-    half = leaf_outline(length, length * look.slimness, look.teeth)
-    mirrored = half * [1.0, -1.0]
-    turn = np.array([[np.cos(heading), np.sin(heading)], [-np.sin(heading), np.cos(heading)]])
-
-    def place(points: Array) -> Array:
-        return points @ turn + base
-
-    shadow = np.array([0.06, 0.09]) * length
-    fill(canvas, place(np.concatenate([half, mirrored[::-1]])) + shadow, 32)
-    fill(canvas, place(half), np.clip(tone * 1.1, 30, 235))
-    fill(canvas, place(mirrored), np.clip(tone * 0.86, 28, 225))
-    rib = np.clip(tone + look.vein, 40, 245)
-    stroke(canvas, place(np.array([[0.0, 0.0], [0.96 * length, 0.0]])), rib, 1 if length < 60 else 2)
+    cosine, sine = np.cos(heading), np.sin(heading)
+    points = leaf_shape(look.slimness, look.teeth) @ (length * np.array([[cosine, sine], [-sine, cosine]])) + base
+    right, left, ribs = points[:14], points[14:28], points[28:]
+    fill(canvas, np.concatenate([right, left[::-1]]) + length * np.array([0.06, 0.09]), 32)
+    fill(canvas, right, min(max(tone * 1.1, 30.0), 235.0))
+    fill(canvas, left, min(max(tone * 0.86, 28.0), 225.0))
+    pale = min(max(tone + look.vein, 40.0), 245.0)
+    stroke(canvas, ribs[:2], pale, 1 if length < 60 else 2)
     if length > 16:
-        for s in np.linspace(0.2, 0.75, 4):
-            reach = 0.34 * length * look.slimness
-            for side in (reach, -reach):
-                stroke(canvas, place(np.array([[s * length, 0.0], [(s + 0.14) * length, side]])), 0.5 * (rib + tone), 1)
+        for k in range(2, len(ribs), 2):
+            stroke(canvas, ribs[k : k + 2], 0.5 * (pale + tone), 1)
 
 
 def draw_plant(canvas: Array, rng: Generator, centre: Array, radius: float, look: Species) -> None:

@@ -17,15 +17,17 @@ _SUBPIXEL_BITS = 4
 
 def noise(rng: Generator, shape: tuple[int, int], coarsest: float, octaves: int = 5, fall: float = 0.6) -> Array:
     """Smooth noise (H, W) float32 of about unit deviation: octaves from `coarsest` texels, each weaker by `fall`."""
-    total, power = np.zeros(shape, np.float32), 0.0
+    total: Array = np.zeros((2, 2), np.float32)
+    power = 0.0
     for octave in range(octaves):
         cell = max(coarsest / 2**octave, 1.0)
-        grid = rng.standard_normal([max(int(np.ceil(side / cell)) + 1, 2) for side in shape], dtype=np.float32)
-        total += fall**octave * cv2.resize(grid, shape[::-1], interpolation=cv2.INTER_CUBIC)
+        size = [max(int(np.ceil(side / cell)) + 1, 2) for side in shape]
+        total = cv2.resize(total, size[::-1], interpolation=cv2.INTER_CUBIC)
+        total += np.float32(fall**octave) * rng.standard_normal(size, dtype=np.float32)
         power += fall ** (2 * octave)
         if cell == 1.0:
             break
-    return total / np.float32(np.sqrt(power))
+    return cv2.resize(total, shape[::-1], interpolation=cv2.INTER_CUBIC) / np.float32(np.sqrt(power))
 
 
 def linear_light(tones: Array, rng: Generator, roughness: float = 0.08, grain: float = 0.03) -> Array:

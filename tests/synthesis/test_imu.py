@@ -11,7 +11,7 @@ PERFECT = ImuRecipe(rate_hz=1000.0, gyro_noise=0, accel_noise=0, gyro_bias=0, ac
 
 
 def test_perfect_samples_integrate_to_the_truth() -> None:
-    """Two seconds of noiseless samples, integrated by the trapezoid rule, end at the true pose to 0.2 mm and 20 urad."""
+    """Two seconds of noiseless samples, integrated by the trapezoid rule, end at the true pose: 0.2 mm, 20 urad."""
     trajectory = LapMotion(sway_deg=4.0).trajectory(np.random.default_rng(0))
     imu = simulate_imu(trajectory, 0, 2_000_000_001, PERFECT, 0)
     pose, velocity = trajectory.poses([0.0])[0], trajectory.velocity([0.0])[0]

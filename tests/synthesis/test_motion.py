@@ -14,7 +14,8 @@ def random_trajectory(seed: int, spline: bool) -> Trajectory:
     random = np.random.default_rng(seed)
     if spline:
         t = np.linspace(0.0, 2.0, 9)
-        return Trajectory(np.eye(3), CubicSpline(t, random.normal(size=(9, 3))), CubicSpline(t, 0.5 * random.normal(size=(9, 3))))
+        values = random.normal(size=(2, 9, 3))
+        return Trajectory(np.eye(3), CubicSpline(t, values[0]), CubicSpline(t, 0.5 * values[1]))
     phases = random.uniform(0, 2 * np.pi, (2, 3, 3))
     position = Sinusoids(random.normal(size=3), random.normal(size=(3, 3)), np.array([0.3, 0.7, 1.9]), phases[0])
     rotation = Sinusoids(np.zeros(3), 0.3 * random.normal(size=(3, 3)), np.array([0.4, 1.1, 2.3]), phases[1])

@@ -38,7 +38,7 @@ def test_points_behind_something_are_not_seen() -> None:
     """A wall point passing behind a post is hidden exactly while it is behind, though it still has a place."""
     scene, module, trajectory = wall_and_post().build(), seeing_module(), sliding(400.0)
     times = np.arange(0.0, 9e7, 2e6)
-    tracks, visible = truth_tracks(scene, module, trajectory, np.array([[79.5, 40.0]]), 0.0, times)
+    tracks, _ = truth_tracks(scene, module, trajectory, np.array([[79.5, 40.0]]), 0.0, times)
     # The post is half as far: it moves twice as fast and gets 10 to 30 px ahead of where the point started.
     place, post = tracks[:, 0, 0], 79.5 + 2 * 400.0 * times * 1e-9
     hidden = (place > post + 10.0) & (place < post + 30.0)
@@ -66,7 +66,8 @@ def test_seeds_that_meet_nothing_have_no_track() -> None:
     builder = SceneBuilder()
     builder.add(Surface((0.0, -5.0, 0.0), (5.0, 0, 0), (0, 10.0, 0), builder.texture(np.ones((4, 4)))))
     scene, module = builder.build(), seeing_module()
-    points, surface = points_seen(scene, lens_of(module), sliding(0.0), np.array([[20.0, 40.0], [120.0, 40.0]]), np.zeros(2))
+    seeds = np.array([[20.0, 40.0], [120.0, 40.0]])
+    points, surface = points_seen(scene, lens_of(module), sliding(0.0), seeds, np.zeros(2))
     assert surface.tolist() == [-1, 0]
     assert np.isnan(points[0]).all()
     tracks, visible = truth_tracks(scene, module, sliding(0.0), np.array([[20.0, 40.0]]), 0.0, [0.0])
