@@ -22,8 +22,8 @@ def noise(rng: Generator, shape: tuple[int, int], coarsest: float, octaves: int 
     for octave in range(octaves):
         cell = max(coarsest / 2**octave, 1.0)
         size = [max(int(np.ceil(side / cell)) + 1, 2) for side in shape]
-        total = cv2.resize(total, size[::-1], interpolation=cv2.INTER_CUBIC)
-        total += np.float32(fall**octave) * rng.standard_normal(size, dtype=np.float32)
+        total = np.asarray(cv2.resize(total, size[::-1], interpolation=cv2.INTER_CUBIC))
+        total = total + np.float32(fall**octave) * rng.standard_normal(size, dtype=np.float32)
         power += fall ** (2 * octave)
         if cell == 1.0:
             break
