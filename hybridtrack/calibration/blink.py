@@ -13,6 +13,7 @@ near the nominal rate gives the frequency to a small part of 1 / span. Reading t
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import ArrayLike
 
 from hybridtrack.calibration.kernels import tile_histogram
 from hybridtrack.errors import ModuleMismatchError, NoBlinkError
@@ -50,14 +51,14 @@ class Blink:
         """Blink period on the event clock."""
         return 1e9 / self.hz
 
-    def phase(self, t_ns: Array) -> Array:
+    def phase(self, t_ns: ArrayLike) -> Array:
         """Cycles (any shape) since set A turned bright at cycle 0."""
-        return (np.asarray(t_ns) - self.epoch_ns) * (self.hz * 1e-9) + self.epoch_phase
+        return np.asarray((np.asarray(t_ns) - self.epoch_ns) * (self.hz * 1e-9) + self.epoch_phase)
 
     def flips_ns(self, t0_ns: float, t1_ns: float, to_bright: bool = True) -> Array:
         """Instants (K,), ns after `epoch_ns`, within the interval at which set A turns bright, or dark."""
         shift = 0.0 if to_bright else self.duty
-        first, last = np.ceil(self.phase(t0_ns) - shift), np.floor(self.phase(t1_ns) - shift)
+        first, last = (float(edge(self.phase(t) - shift)) for edge, t in ((np.ceil, t0_ns), (np.floor, t1_ns)))
         return (np.arange(first, last + 1) + shift - self.epoch_phase) * self.period_ns
 
 
@@ -100,7 +101,10 @@ def block_spectra(recording: Recording, shape: tuple[int, int], nominal_hz: floa
     fine_hz = nominal_hz * (1.0 + np.linspace(-1.0, 1.0, FINE_STEPS) * SEARCH)
     tiles = (-(-shape[0] // TILE), -(-shape[1] // TILE))
     block_ns = BIN_NS * BLOCK_BINS
-    starts, powers, squares, sums = [], [], [], []
+    starts: list[int] = []
+    powers: list[Array] = []
+    squares: list[Array] = []
+    sums: list[Array] = []
     histogram = np.zeros((BLOCK_BINS, *tiles), np.float32)
     start = origin
 
@@ -201,7 +205,9 @@ def flicker_lines(lines: list[tuple[float, float, float]], blink_hz: float, reso
     sampling_hz = 1e9 / BIN_NS
     harmonics = blink_hz * np.arange(1, int(4 * sampling_hz / blink_hz))
     folded = np.abs((harmonics + sampling_hz / 2) % sampling_hz - sampling_hz / 2)
-    strongest = max((power for hz, _, power in lines if np.min(np.abs(harmonics[:3] - hz)) < 1.6 * resolution_hz), default=0.0)
+    strongest = max(
+        (power for hz, _, power in lines if np.min(np.abs(harmonics[:3] - hz)) < 1.6 * resolution_hz), default=0.0
+    )
     limit = np.where(harmonics < sampling_hz / 2, np.inf, 4.0 * strongest * np.sinc(harmonics / sampling_hz) ** 2)
     found = []
     for hz, _, power in lines:

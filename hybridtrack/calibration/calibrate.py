@@ -104,23 +104,40 @@ def require_common_time(recording: Recording) -> None:
         )
 
 
-def images_of_views(views: list[View], folds: list[ViewFold], frames: FrameViews) -> tuple[list[ViewImages], list[ViewFold]]:
+def images_of_views(
+    views: list[View], folds: list[ViewFold], frames: FrameViews
+) -> tuple[list[ViewImages], list[ViewFold]]:
     """Pictures and folds of the views whose frames could be demodulated."""
     images, kept = [], []
     for k, (view, fold, picture) in enumerate(zip(views, folds, frames.demodulated, strict=True)):
         if picture is None:
             continue
-        images.append(ViewImages(
-            k, view.t0_ns, view.t1_ns, frames.frames[k], picture.bright_dn, picture.dark_dn, picture.bright_sigma_dn,
-            picture.dark_sigma_dn, fold.on_count(), fold.off_count(), fold.amplitude(), fold.snr(), fold.cycles,
-            view.sway_px,
-        ))
+        images.append(
+            ViewImages(
+                k,
+                view.t0_ns,
+                view.t1_ns,
+                frames.frames[k],
+                picture.bright_dn,
+                picture.dark_dn,
+                picture.bright_sigma_dn,
+                picture.dark_sigma_dn,
+                fold.on_count(),
+                fold.off_count(),
+                fold.amplitude(),
+                fold.snr(),
+                fold.cycles,
+                view.sway_px,
+            )
+        )
         kept.append(fold)
     return images, kept
 
 
 def step_counts(folds: list[ViewFold], steps: list[EventSteps], share: float, healthy: Array) -> StepCounts:
-    """Observations of all `healthy` (rows, columns) pixels of set A and B that saw a step, `share` of which they felt."""
+    """Observations of all `healthy` (rows, columns) pixels of set A and B that saw a step, `share` of which they
+    felt.
+    """
     parts = []
     for view, (fold, step) in enumerate(zip(folds, steps, strict=True)):
         known = np.isfinite(step.log_step) & healthy
@@ -134,14 +151,22 @@ def step_counts(folds: list[ViewFold], steps: list[EventSteps], share: float, he
         rising = step.edge_step > 0
         on = np.where(rising, p[ON_BRIGHT], p[ON_DARK])[edge] / fold.cycles
         off = np.where(rising, p[OFF_DARK], p[OFF_BRIGHT])[edge] / fold.cycles
-        parts.append([np.flatnonzero(edge.ravel()), np.full(len(on), view), share * np.abs(step.edge_step)[edge], on, off])
+        parts.append(
+            [np.flatnonzero(edge.ravel()), np.full(len(on), view), share * np.abs(step.edge_step)[edge], on, off]
+        )
     return StepCounts(*(np.concatenate(column) for column in zip(*parts, strict=True)))
 
 
 def contrast_block(fit: ThresholdFit, refractory_ns: float | None) -> Contrast:
     """The module file's contrast."""
-    return Contrast(on_threshold=fit.on, off_threshold=fit.off, on_spread=fit.on_spread, off_spread=fit.off_spread,
-                    noise_width=None, refractory_ns=refractory_ns)
+    return Contrast(
+        on_threshold=fit.on,
+        off_threshold=fit.off,
+        on_spread=fit.on_spread,
+        off_spread=fit.off_spread,
+        noise_width=None,
+        refractory_ns=refractory_ns,
+    )
 
 
 def geometry_module(nominal: HybridModule, lens_fit: LensFit, map_fit: EventMapFit) -> HybridModule:
@@ -151,10 +176,14 @@ def geometry_module(nominal: HybridModule, lens_fit: LensFit, map_fit: EventMapF
     if cluster.clear_site != map_fit.clear_site:
         # The filter pattern names the place of the clear pixel, and no longer holds.
         cluster = cluster.model_copy(update={"clear_site": map_fit.clear_site, "filters": None})
-    return nominal.model_copy(update={
-        "event_grid": grid, "cluster": cluster, "lens": lens_parameters(lens_fit.lens),
-        "colour_from_event": map_fit.colour_from_event,
-    })
+    return nominal.model_copy(
+        update={
+            "event_grid": grid,
+            "cluster": cluster,
+            "lens": lens_parameters(lens_fit.lens),
+            "colour_from_event": map_fit.colour_from_event,
+        }
+    )
 
 
 def provenance(recording: Recording, target: Target, options: CalibrationOptions) -> dict[str, Any]:
@@ -230,7 +259,9 @@ def calibrate(
     board_of = {board.view: board for board in search.boards}
     shown = [
         CalibratedView(
-            image, board_of.get(image.index), pose_of.get(image.index),
+            image,
+            board_of.get(image.index),
+            pose_of.get(image.index),
             event_steps(image, module, lens_fit.lens, pose_of[image.index], target) if image.index in pose_of else None,
         )
         for image in images
@@ -249,14 +280,35 @@ def calibrate(
 
     tell("module", 0.97)
     mode = nominal.frame_mode.model_copy(update={"row_order": timing.row_order})
-    module = module.model_copy(update={
-        "frame_mode": mode, "timing": timing.timing, "contrast": contrast_block(thresholds, refractory), "defects": defects,
-        "settings": recording.settings or nominal.settings, "uncertainty": join_blocks(lens_fit, map_fit, timing, thresholds),
-        "findings": findings, "provenance": provenance(recording, target, options),
-    })
+    module = module.model_copy(
+        update={
+            "frame_mode": mode,
+            "timing": timing.timing,
+            "contrast": contrast_block(thresholds, refractory),
+            "defects": defects,
+            "settings": recording.settings or nominal.settings,
+            "uncertainty": join_blocks(lens_fit, map_fit, timing, thresholds),
+            "findings": findings,
+            "provenance": provenance(recording, target, options),
+        }
+    )
     tell("module", 1.0)
-    return CalibrationResult(module, target, shown, blink, onset, first_fire, frames, settings, lens_fit, map_fit, timing, thresholds,
-                             settling, findings)
+    return CalibrationResult(
+        module,
+        target,
+        shown,
+        blink,
+        onset,
+        first_fire,
+        frames,
+        settings,
+        lens_fit,
+        map_fit,
+        timing,
+        thresholds,
+        settling,
+        findings,
+    )
 
 
 def healthy_mask(defects: Defects, shape: tuple[int, int]) -> Array:
@@ -270,7 +322,8 @@ def healthy_mask(defects: Defects, shape: tuple[int, int]) -> Array:
 def blink_findings(blink: Blink, target: Target) -> list[str]:
     """What the spectrum says beyond the target's line."""
     findings = [
-        f"the target blinks at {blink.hz:.5f} Hz, {1e6 * (blink.hz / target.blink_hz - 1.0):+.1f} ppm from its nominal rate"
+        f"the target blinks at {blink.hz:.5f} Hz, {1e6 * (blink.hz / target.blink_hz - 1.0):+.1f} ppm from its nominal "
+        "rate"
     ]
     if blink.flicker_hz:
         lines = ", ".join(f"{hz:.1f}" for hz in blink.flicker_hz[:6])

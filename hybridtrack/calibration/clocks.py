@@ -4,10 +4,10 @@ The exposure of a row that was read after r others starts, on the event clock, a
 
     t_start + offset + drift (t_start - epoch) + r line_time,     and lasts   stamped exposure + correction,
 
-and the row's signal is a + b f, f the share of that exposure in which set A is bright (square_wave.py). a and b belong to
-the row of the view and are linear: they are projected out (Golub and Pereyra 1973, with Kaufman's 1975 Jacobian), which
-leaves offset, line time, exposure correction, drift and duty. A search over phase and line time starts it, then damped
-least squares with Huber's weights. The covariance is a sandwich clustered by view.
+and the row's signal is a + b f, f the share of that exposure in which set A is bright (square_wave.py). a and b
+belong to the row of the view and are linear: they are projected out (Golub and Pereyra 1973, with Kaufman's 1975
+Jacobian), which leaves offset, line time, exposure correction, drift and duty. A search over phase and line time
+starts it, then damped least squares with Huber's weights. The covariance is a sandwich clustered by view.
 
 f is periodic: the offset is known up to whole blink periods, and the one nearest the nominal is taken.
 """
@@ -28,7 +28,9 @@ PARAMETERS = ("offset_ns", "line_time_ns", "exposure_correction_ns", "drift", "d
 
 @dataclass(frozen=True)
 class Clocks:
-    """Offset at `drift_epoch_ns`, line time (negative: rows are read the other way), correction, drift (ns per ns), duty."""
+    """Offset at `drift_epoch_ns`, line time (negative: rows are read the other way), correction, drift (ns per ns),
+    duty.
+    """
 
     offset_ns: float = 0.0
     line_time_ns: float = 0.0
@@ -48,7 +50,9 @@ class Clocks:
 
 @dataclass(frozen=True)
 class ClockFit:
-    """Clocks with the `covariance` of the `free` parameters; residuals in deviations (R, N); how the signal is explained."""
+    """Clocks with the `covariance` of the `free` parameters; residuals in deviations (R, N); how the signal is
+    explained.
+    """
 
     clocks: Clocks
     free: tuple[str, ...]
@@ -59,7 +63,9 @@ class ClockFit:
 
     def sigma(self, name: str) -> float | None:
         """Deviation of a parameter, None where it was held."""
-        return float(np.sqrt(self.covariance[self.free.index(name)] [self.free.index(name)])) if name in self.free else None
+        return (
+            float(np.sqrt(self.covariance[self.free.index(name)][self.free.index(name)])) if name in self.free else None
+        )
 
 
 @dataclass(frozen=True)
@@ -76,11 +82,15 @@ class ClockModel:
         """Start and length (R, N) of all exposures, in cycles."""
         rows = self.rows
         from_epoch = rows.stamp_ns + float(rows.origin_ns - self.drift_epoch_ns)
-        start_ns = rows.stamp_ns + clocks.offset_ns + clocks.drift * from_epoch + rows.order[:, None] * clocks.line_time_ns
+        start_ns = (
+            rows.stamp_ns + clocks.offset_ns + clocks.drift * from_epoch + rows.order[:, None] * clocks.line_time_ns
+        )
         length_ns = np.maximum(rows.exposure_ns + clocks.exposure_correction_ns, 1000.0)
         rate = self.blink.hz * 1e-9
         # The blink's phase counts from where light is half way up, the waveform from where it begins to rise.
-        begin = (start_ns + float(rows.origin_ns - self.blink.epoch_ns)) * rate + self.blink.epoch_phase + 0.5 * self.rise
+        begin = (
+            (start_ns + float(rows.origin_ns - self.blink.epoch_ns)) * rate + self.blink.epoch_phase + 0.5 * self.rise
+        )
         return begin, length_ns * rate
 
     def waveform(self, clocks: Clocks) -> Waveform:

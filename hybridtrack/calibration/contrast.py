@@ -6,15 +6,15 @@ down, which it must make good before the first event of the next:
 
     S = w + N_on a + u = u + N_off b + w,    so   N_on a = N_off b,    N_on a = S - E[u + w]
 
-u and w take all values alike (thresholds differ from pixel to pixel, noise draws them about), E[u + w] = kappa (a + b) with
-kappa = 1/2 without noise and a little less with it. Dividing S by N alone is off by kappa (a + b) / S, a tenth. With
-r = N_on / N_off = b / a each pixel of each view gives
+u and w take all values alike (thresholds differ from pixel to pixel, noise draws them about), E[u + w] = kappa (a +
+b) with kappa = 1/2 without noise and a little less with it. Dividing S by N alone is off by kappa (a + b) / S, a
+tenth. With r = N_on / N_off = b / a each pixel of each view gives
 
     a = S / (N_on + kappa (1 + r)),    b = r a.
 
-Another pixel forgets what came while it was dead after an event: its reference starts afresh from the present level. Its
-counts fall behind as S grows. N over S tells the two apart wherever steps of several sizes were seen, and thresholds
-then come from the smallest steps alone, with a deviation that says so.
+Another pixel forgets what came while it was dead after an event: its reference starts afresh from the present level.
+Its counts fall behind as S grows. N over S tells the two apart wherever steps of several sizes were seen, and
+thresholds then come from the smallest steps alone, with a deviation that says so.
 """
 
 from dataclasses import dataclass
@@ -57,8 +57,8 @@ class CountCurve:
 
 @dataclass(frozen=True)
 class ThresholdFit:
-    """Medians over pixels with deviations, spreads over pixels, maps (rows, columns; NaN where unknown), the model of the
-    pixel that was chosen ("steps" or "resets"), the curve behind it, and findings. None: not to be told."""
+    """Medians over pixels with deviations, spreads over pixels, maps (rows, columns; NaN where unknown), the model
+    of the pixel that was chosen ("steps" or "resets"), the curve behind it, and findings. None: not to be told."""
 
     on: float | None
     off: float | None
@@ -80,8 +80,11 @@ def count_curve(counts: StepCounts, bins: int = 16) -> CountCurve:
     low, high = np.quantile(counts.step, [0.001, 0.999])
     which = np.digitize(counts.step, np.linspace(low, high, bins + 1)[1:-1])
     groups = [np.flatnonzero(which == k) for k in range(bins)]
-    columns = [[float(counts.step[g].mean()), float(counts.on[g].mean()), float(counts.off[g].mean()), len(g)]
-               for g in groups if len(g) >= LEAST_PIXELS]
+    columns = [
+        [float(counts.step[g].mean()), float(counts.on[g].mean()), float(counts.off[g].mean()), len(g)]
+        for g in groups
+        if len(g) >= LEAST_PIXELS
+    ]
     return CountCurve(*np.array(columns).reshape(-1, 4).T)
 
 
@@ -92,14 +95,14 @@ def thresholds_by_steps(counts: StepCounts) -> tuple[Array, Array]:
     return on, on * ratio
 
 
-def pixel_means(values: Array, pixel: Array, size: int) -> tuple[Array, Array]:
+def pixel_means(values: Array, pixel: Array, size: int) -> tuple[Array, float]:
     """Mean over the views of each pixel (size,), NaN where none, and the variance of a single view about it."""
     number = np.bincount(pixel, minlength=size)
     with np.errstate(invalid="ignore", divide="ignore"):
         mean = np.bincount(pixel, values, minlength=size) / number
         deviation = (values - mean[pixel]) ** 2 * (number / np.maximum(number - 1, 1))[pixel]
     several = number[pixel] > 1
-    return mean, np.array(float(np.mean(deviation[several])) if np.any(several) else np.nan)
+    return mean, float(np.mean(deviation[several])) if np.any(several) else float("nan")
 
 
 def spread_over_pixels(mean: Array, variance_of_view: float, number: Array) -> float:
@@ -113,6 +116,27 @@ def spread_over_pixels(mean: Array, variance_of_view: float, number: Array) -> f
 def view_medians(values: Array, view: Array) -> Array:
     """Median over each view's observations."""
     return np.array([np.median(values[view == v]) for v in np.unique(view)])
+
+
+@dataclass(frozen=True)
+class _OverPixels:
+    """Median over pixels, its deviation, the spread over pixels, and the map (rows, columns)."""
+
+    median: float
+    sigma: float
+    spread: float
+    map: Array
+
+
+def over_pixels(values: Array, counts: StepCounts, shape: tuple[int, int], relative: float) -> _OverPixels:
+    """Sum up one polarity's thresholds (M,) of the observations; `relative`: deviation that the pixel model leaves."""
+    size = shape[0] * shape[1]
+    mean, variance = pixel_means(values, counts.pixel, size)
+    median = float(np.nanmedian(mean))
+    by_view = view_medians(values, counts.view)
+    statistical = float(np.std(by_view) / np.sqrt(max(len(by_view) - 1, 1)))
+    spread = spread_over_pixels(mean, variance, np.bincount(counts.pixel, minlength=size))
+    return _OverPixels(median, float(np.hypot(statistical, relative * median)), spread, mean.reshape(shape))
 
 
 def falls_behind(curve: CountCurve, on: float, off: float) -> bool:
@@ -162,9 +186,13 @@ def fit_thresholds(counts: StepCounts, shape: tuple[int, int]) -> ThresholdFit:
     curve = count_curve(usable)
     good = usable[(usable.on > LEAST_COUNT) & (usable.off > LEAST_COUNT)]
     if len(good.step) < LEAST_PIXELS:
-        return refused(shape, curve, "contrast thresholds cannot be told: at least "
-                       f"{LEAST_PIXELS} pixels inside squares with {LEAST_COUNT:g} events a flip are required, got "
-                       f"{len(good.step)}")
+        return refused(
+            shape,
+            curve,
+            "contrast thresholds cannot be told: at least "
+            f"{LEAST_PIXELS} pixels inside squares with {LEAST_COUNT:g} events a flip are required, got "
+            f"{len(good.step)}",
+        )
     on, off = thresholds_by_steps(good)
     model, findings = "steps", []
     if falls_behind(curve, float(np.median(on)), float(np.median(off))):
@@ -173,24 +201,15 @@ def fit_thresholds(counts: StepCounts, shape: tuple[int, int]) -> ThresholdFit:
         good = good[good.step < max(1.6 * smallest, smallest + 0.3)]
         on, off = thresholds_by_steps(good)
         findings.append(
-            "counts fall behind as steps grow: the pixels lose what happens in their refractory time, and thresholds are "
-            "taken from the smallest steps alone"
+            "counts fall behind as steps grow: the pixels lose what happens in their refractory time, and thresholds "
+            "are taken from the smallest steps alone"
         )
-    maps, spreads, sigmas, medians = [], [], [], []
     relative, finding = model_deviation(curve, float(np.median(on)), float(np.median(off)))
     if model == "resets":
         relative = float(np.hypot(relative, 0.08))
-    size = shape[0] * shape[1]
-    number = np.bincount(good.pixel, minlength=size)
-    for values in (on, off):
-        mean, variance = pixel_means(values, good.pixel, size)
-        median = float(np.nanmedian(mean))
-        by_view = view_medians(values, good.view)
-        statistical = float(np.std(by_view) / np.sqrt(max(len(by_view) - 1, 1)))
-        maps.append(mean.reshape(shape))
-        medians.append(median)
-        spreads.append(spread_over_pixels(mean, float(variance), number))
-        sigmas.append(float(np.hypot(statistical, relative * median)))
     if finding:
         findings.append(finding)
-    return ThresholdFit(*medians, *sigmas, *spreads, *maps, model, curve, findings)
+    up, down = (over_pixels(values, good, shape, relative) for values in (on, off))
+    return ThresholdFit(
+        up.median, down.median, up.sigma, down.sigma, up.spread, down.spread, up.map, down.map, model, curve, findings
+    )

@@ -2,8 +2,8 @@
 
 Still light is the last fifth of the bright half of a cycle, when a burst is long over, and, for pixels away from
 everything that blinks, all of the view. A pixel is hot where its count is far more than that of its neighbourhood
-could be by chance (Poisson tail); lamps that flicker over a whole patch are not. A pixel is dead where it all but never fired
-although light blinked on it by a step that any healthy pixel answers.
+could be by chance (Poisson tail); lamps that flicker over a whole patch are not. A pixel is dead where it all but
+never fired although light blinked on it by a step that any healthy pixel answers.
 """
 
 from dataclasses import dataclass
@@ -53,16 +53,18 @@ def away_from_blinking(fold: ViewFold, reach_px: int = 4) -> Array:
     return ~maximum_filter(follows & (crowd >= 3), 2 * reach_px + 1)
 
 
-def quiet_counts(recording: Recording, views: list[View], folds: list[ViewFold], blink: Blink,
-                 shape: tuple[int, int]) -> QuietCounts:
+def quiet_counts(
+    recording: Recording, views: list[View], folds: list[ViewFold], blink: Blink, shape: tuple[int, int]
+) -> QuietCounts:
     """Count events in still light over all views."""
     count, time_s = np.zeros(shape, np.int64), np.zeros(shape)
     first, last = QUIET[0] * blink.duty, QUIET[1] * blink.duty
     for view, fold in zip(views, folds, strict=True):
         anytime = away_from_blinking(fold)
         for events in recording.event_blocks(view.t0_ns, view.t1_ns):
-            count_quiet_events(events.t, events.x, events.y, blink.epoch_ns, blink.epoch_phase, blink.hz, first, last,
-                               anytime, count)
+            count_quiet_events(
+                events.t, events.x, events.y, blink.epoch_ns, blink.epoch_phase, blink.hz, first, last, anytime, count
+            )
         time_s += (view.t1_ns - view.t0_ns) * 1e-9 * np.where(anytime, 1.0, last - first)
     return QuietCounts(count, time_s)
 

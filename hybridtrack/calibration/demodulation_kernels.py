@@ -9,13 +9,14 @@ Array = np.ndarray
 
 
 @kernel(parallel=True)
-def fit_row_lines(light: Array, share: Array, least_spread: float, dark: Array, swing: Array, square: Array,
-                  frame_square: Array) -> None:
+def fit_row_lines(
+    light: Array, share: Array, least_spread: float, dark: Array, swing: Array, square: Array, frame_square: Array
+) -> None:
     """Fit D + f K to `light` (N, H, W) with shares f (N, H).
 
-    Fills `dark` D, `swing` K and `square`, the sum of squared residuals (all (H, W)), and `frame_square` (H, N), the mean
-    of the row's squared residuals in each frame. NaN where a row's shares vary by less than `least_spread` (variance) or
-    a sample is NaN.
+    Fills `dark` D, `swing` K and `square`, the sum of squared residuals (all (H, W)), and `frame_square` (H, N), the
+    mean of the row's squared residuals in each frame. NaN where a row's shares vary by less than `least_spread`
+    (variance) or a sample is NaN.
     """
     count, height, width = light.shape
     for row in prange(height):

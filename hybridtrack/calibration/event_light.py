@@ -1,7 +1,7 @@
 """How large a step of log light each event pixel saw, read from the frames around it.
 
-Well inside a square the light of an event pixel's own aperture is that of the frame pixels around it, whatever the blur:
-their bright and dark light is averaged over a small box, so that frame noise hardly enters, and the step is
+Well inside a square the light of an event pixel's own aperture is that of the frame pixels around it, whatever the
+blur: their bright and dark light is averaged over a small box, so that frame noise hardly enters, and the step is
 log(bright / dark). No light meter is needed, but the black level is. Across an edge the steps take all sizes; there
 they come from the view's light model, levels and blur fitted to the frames, through the event pixel's own aperture.
 """
@@ -22,8 +22,9 @@ Array = np.ndarray
 
 @dataclass(frozen=True)
 class SquareHits:
-    """Which square each event pixel looks at: `column`, `row` (-1 off the board), its `kind` (1 set A, -1 set B, 0 steady
-    dark or off the board) and the `margin_px` to its nearest edge in colour px, all (rows, columns) of the event grid."""
+    """Which square each event pixel looks at: `column`, `row` (-1 off the board), its `kind` (1 set A, -1 set B, 0
+    steady dark or off the board) and the `margin_px` to its nearest edge in colour px, all (rows, columns) of the event
+    grid."""
 
     column: Array
     row: Array
@@ -33,9 +34,9 @@ class SquareHits:
 
 @dataclass(frozen=True)
 class EventSteps:
-    """`log_step` (rows, columns): natural log of light after over light before the flip to bright of the pixel's own set,
-    NaN but well inside blinking squares; `bright_dn`, `dark_dn` behind it. `edge_step` (rows, columns): log of light with
-    set A bright over light with set A dark by the light model, NaN but near edges. `hits`: squares."""
+    """`log_step` (rows, columns): natural log of light after over light before the flip to bright of the pixel's own
+    set, NaN but well inside blinking squares; `bright_dn`, `dark_dn` behind it. `edge_step` (rows, columns): log of
+    light with set A bright over light with set A dark by the light model, NaN but near edges. `hits`: squares."""
 
     log_step: Array
     bright_dn: Array
@@ -65,8 +66,9 @@ def box_mean(picture: Array, size: int) -> Array:
     return np.where(uniform_filter(known.astype(float), size) > 1.0 - 0.5 / size**2, mean, np.nan)
 
 
-def modelled_steps(view: ViewImages, module: HybridModule, place: BoardPlace, frame_place: BoardPlace,
-                   target: Target) -> Array:
+def modelled_steps(
+    view: ViewImages, module: HybridModule, place: BoardPlace, frame_place: BoardPlace, target: Target
+) -> Array:
     """Log step (rows * columns) between the two states at event pixels with `place`, by the view's light model."""
     aperture = frame_aperture(module.frame_mode, module.cluster)
     light = fit_view_light(view, frame_place, aperture, target)
@@ -82,7 +84,9 @@ def modelled_steps(view: ViewImages, module: HybridModule, place: BoardPlace, fr
     return result
 
 
-def event_steps(view: ViewImages, module: HybridModule, lens: Lens, camera_from_board: Array, target: Target) -> EventSteps:
+def event_steps(
+    view: ViewImages, module: HybridModule, lens: Lens, camera_from_board: Array, target: Target
+) -> EventSteps:
     """Steps of all event pixels that look at the board, the module's map being calibrated."""
     positions = module.event_pixel_positions()
     place = place_on_board(lens, camera_from_board, positions.reshape(-1, 2))

@@ -1,9 +1,9 @@
 """When the pixels fire after a flip, seen past the queue of the readout.
 
-A row-scanned readout stamps an event when its row is read, so that under load the stamps of first events say little about
-when they happened. But each time a row is read, all its pixels that have fired by then have been read: the share of
-fired pixels at that instant is a sample of the distribution F of firing times (current status data; Ayer et al. 1955),
-whatever the queue. The isotonic regression of those shares on time is its maximum-likelihood estimate, and
+A row-scanned readout stamps an event when its row is read, so that under load the stamps of first events say little
+about when they happened. But each time a row is read, all its pixels that have fired by then have been read: the
+share of fired pixels at that instant is a sample of the distribution F of firing times (current status data; Ayer et
+al. 1955), whatever the queue. The isotonic regression of those shares on time is its maximum-likelihood estimate, and
 
     mean delay of the first event = integral of (1 - F).
 
@@ -49,9 +49,21 @@ def status_of_view(recording: Recording, view: View, fold: ViewFold, blink: Blin
     status = np.zeros((2, int((BEFORE_NS + AFTER_NS) / BIN_NS)))
     # A view's events are read whole: a flip must not be cut by the end of a block.
     events = Events.joined(list(recording.event_blocks(view.t0_ns, view.t1_ns)))
-    first_fire_status(events.t - blink.epoch_ns, events.x, events.y, events.on, flips, BEFORE_NS, AFTER_NS, BIN_NS,
-                      blinking_pixels(fold), np.full(shape, -1, np.int64), np.zeros(shape[0], np.int64),
-                      np.zeros(shape[0], np.int64), status)
+    first_fire_status(
+        events.t - blink.epoch_ns,
+        events.x,
+        events.y,
+        events.on,
+        flips,
+        BEFORE_NS,
+        AFTER_NS,
+        BIN_NS,
+        blinking_pixels(fold),
+        np.full(shape, -1, np.int64),
+        np.zeros(shape[0], np.int64),
+        np.zeros(shape[0], np.int64),
+        status,
+    )
     return status
 
 
@@ -63,7 +75,9 @@ def fired_share(status: Array) -> tuple[Array, Array]:
     return time, share
 
 
-def measure_first_fire(recording: Recording, views: list[View], folds: list[ViewFold], onset: OnsetFit) -> FirstFire | None:
+def measure_first_fire(
+    recording: Recording, views: list[View], folds: list[ViewFold], onset: OnsetFit
+) -> FirstFire | None:
     """Mean delay of first events after the onset of `onset`, or None where too few reads tell."""
     statuses = [status_of_view(recording, view, fold, onset.blink) for view, fold in zip(views, folds, strict=True)]
     total = np.sum(statuses, axis=0)
@@ -84,5 +98,9 @@ def at_mean_first_event(onset: OnsetFit, first: FirstFire | None) -> OnsetFit:
         return onset
     blink = onset.blink
     phase = (blink.epoch_phase - first.delay_ns / blink.period_ns) % 1.0
-    return replace(onset, blink=replace(blink, epoch_phase=float(phase)), centre_ns=onset.centre_ns + first.delay_ns,
-                   systematic_ns=first.sigma_ns)
+    return replace(
+        onset,
+        blink=replace(blink, epoch_phase=float(phase)),
+        centre_ns=onset.centre_ns + first.delay_ns,
+        systematic_ns=first.sigma_ns,
+    )

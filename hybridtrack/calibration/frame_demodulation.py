@@ -34,13 +34,15 @@ class FrameDemodulation:
 
     def swapped(self) -> "FrameDemodulation":
         """The same with the names of the two states exchanged."""
-        return FrameDemodulation(self.dark_dn, self.bright_dn, self.dark_sigma_dn, self.bright_sigma_dn, self.noise_dn, self.kept)
+        return FrameDemodulation(
+            self.dark_dn, self.bright_dn, self.dark_sigma_dn, self.bright_sigma_dn, self.noise_dn, self.kept
+        )
 
 
 @dataclass(frozen=True)
 class RowLines:
-    """`dark` D and `swing` K (H, W), `variance` of a sample about its line (H, W), `frame_rms` (N,) of the residuals of each
-    frame, and the rows' inverse normal matrices `inverse` (H, 2, 2) for (D, K)."""
+    """`dark` D and `swing` K (H, W), `variance` of a sample about its line (H, W), `frame_rms` (N,) of the residuals
+    of each frame, and the rows' inverse normal matrices `inverse` (H, 2, 2) for (D, K)."""
 
     dark: Array
     swing: Array
@@ -104,5 +106,12 @@ def demodulate_frames(light: Array, share: Array) -> FrameDemodulation:
     inverse = lines.inverse
     bright_factor = np.sqrt(inverse[:, 0, 0] + 2 * inverse[:, 0, 1] + inverse[:, 1, 1])
     dark_factor = np.sqrt(inverse[:, 0, 0])
-    pictures = (lines.dark + lines.swing, lines.dark, noise * bright_factor[:, None], noise * dark_factor[:, None], noise)
-    return FrameDemodulation(*(picture.astype(np.float32) for picture in pictures), kept)
+    pictures = (
+        lines.dark + lines.swing,
+        lines.dark,
+        noise * bright_factor[:, None],
+        noise * dark_factor[:, None],
+        noise,
+    )
+    bright, dark, bright_sigma, dark_sigma, noise = (picture.astype(np.float32) for picture in pictures)
+    return FrameDemodulation(bright, dark, bright_sigma, dark_sigma, noise, kept)

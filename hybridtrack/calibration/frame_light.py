@@ -17,7 +17,9 @@ GAMMA = 2.2
 
 
 def linear_dn(image: Array, mode: FrameMode) -> Array:
-    """Light above black (H, W) float32 in DN of a linear response, from a picture (H, W) or (H, W, 3); NaN if saturated."""
+    """Light above black (H, W) float32 in DN of a linear response, from a picture (H, W) or (H, W, 3); NaN if
+    saturated.
+    """
     # A picture has few levels: each is turned once.
     levels = np.arange(np.iinfo(image.dtype).max + 1, dtype=np.float32)
     light = levels - np.float32(mode.black_dn)

@@ -1,8 +1,8 @@
 """From the frames of all views to clocks and demodulated pictures.
 
-The first round knows neither clocks nor board: rows speak through their leading singular vector, and a search over phase
-and line time finds the blinking. The pictures that follow give each pixel its proper weight, and the second round fits
-the clocks with them.
+The first round knows neither clocks nor board: rows speak through their leading singular vector, and a search over
+phase and line time finds the blinking. The pictures that follow give each pixel its proper weight, and the second
+round fits the clocks with them.
 """
 
 from dataclasses import dataclass, replace
@@ -11,7 +11,7 @@ import numpy as np
 
 from hybridtrack.calibration.agreement import Agreement, compare_pictures
 from hybridtrack.calibration.blink import Blink
-from hybridtrack.calibration.clocks import ClockFit, ClockModel, Clocks, explained_part, fit_clocks, search
+from hybridtrack.calibration.clocks import ClockFit, ClockModel, Clocks, fit_clocks, search
 from hybridtrack.calibration.frame_demodulation import FrameDemodulation, demodulate_frames
 from hybridtrack.calibration.frame_light import view_light
 from hybridtrack.calibration.row_signals import (
@@ -66,8 +66,9 @@ class FrameSettings:
 
 @dataclass(frozen=True)
 class FrameViews:
-    """Clocks and pictures: `demodulated[k]` belongs to view `views[k]` (index into the list given), None where its frames
-    could not be resolved; `frames[k]` indices of frames used. `rows` are the signals behind `clocks`, for figures."""
+    """Clocks and pictures: `demodulated[k]` belongs to view `views[k]` (index into the list given), None where its
+    frames could not be resolved; `frames[k]` indices of frames used. `rows` are the signals behind `clocks`, for
+    figures."""
 
     demodulated: list[FrameDemodulation | None]
     frames: list[Array]
@@ -87,11 +88,16 @@ def frames_of_view(frames: FrameTable, view: View, offset_ns: float, readout_ns:
 def view_shares(settings: FrameSettings, clocks: Clocks, frames: FrameTable, chosen: Array) -> Array:
     """Share f (N, H) of the chosen frames' rows."""
     mode, blink = settings.nominal.frame_mode, settings.blink
-    stamp = frames.t_start_ns[chosen].astype(float)[:, None]
+    # Stamps may be large: differences are taken before they turn to floating point.
+    stamp = (frames.t_start_ns[chosen] - settings.drift_epoch_ns).astype(float)[:, None]
     order = mode.read_order(np.arange(mode.height))
-    start = stamp + clocks.offset_ns + clocks.drift * (stamp - settings.drift_epoch_ns) + order * clocks.line_time_ns
+    start = stamp + clocks.offset_ns + clocks.drift * stamp + order * clocks.line_time_ns
     length = frames.exposure_ns[chosen].astype(float)[:, None] + clocks.exposure_correction_ns
-    cycles = (start - blink.epoch_ns) * (blink.hz * 1e-9) + blink.epoch_phase + 0.5 * settings.edges[0]
+    cycles = (
+        (start + float(settings.drift_epoch_ns - blink.epoch_ns)) * (blink.hz * 1e-9)
+        + blink.epoch_phase
+        + 0.5 * settings.edges[0]
+    )
     return bright_share(cycles, length * (blink.hz * 1e-9) + np.zeros_like(cycles), settings.waveform(clocks))
 
 
@@ -119,8 +125,8 @@ def first_rows(settings: FrameSettings, recording: Recording, frames: list[Array
             parts.append((signal, deviation, table.t_start_ns[chosen], table.exposure_ns[chosen], k))
     if not parts:
         raise DegenerateDataError(
-            f"a view needs at least {LEAST_FRAMES} frames that lie wholly within it; the longest of {len(frames)} views has "
-            f"{max((len(chosen) for chosen in frames), default=0)}"
+            f"a view needs at least {LEAST_FRAMES} frames that lie wholly within it; the longest of {len(frames)} "
+            f"views has {max((len(chosen) for chosen in frames), default=0)}"
         )
     rows = join_row_signals(parts, mode.read_order(np.arange(mode.height)), int(table.t_start_ns[0]), signed)
     if len(rows.row) < 20:
@@ -131,8 +137,9 @@ def first_rows(settings: FrameSettings, recording: Recording, frames: list[Array
     return rows
 
 
-def demodulate_view(settings: FrameSettings, recording: Recording, clocks: Clocks, chosen: Array,
-                    light: Array | None = None) -> FrameDemodulation | None:
+def demodulate_view(
+    settings: FrameSettings, recording: Recording, clocks: Clocks, chosen: Array, light: Array | None = None
+) -> FrameDemodulation | None:
     """Pictures of one view, or None where it has too few frames or their rows all see the same share."""
     if len(chosen) < LEAST_FRAMES:
         return None
@@ -179,15 +186,22 @@ def agree(settings: FrameSettings, demodulated: list[FrameDemodulation | None], 
     return agreement
 
 
-def second_rows(settings: FrameSettings, recording: Recording, clocks: Clocks, frames: list[Array],
-                demodulated: list[FrameDemodulation | None]) -> RowSignals:
+def second_rows(
+    settings: FrameSettings,
+    recording: Recording,
+    clocks: Clocks,
+    frames: list[Array],
+    demodulated: list[FrameDemodulation | None],
+) -> RowSignals:
     """Row signals weighted by the demodulated pictures."""
     mode, table = settings.nominal.frame_mode, recording.frames
     parts = []
     for k, (chosen, picture) in enumerate(zip(frames, demodulated, strict=True)):
         if picture is not None:
             used = chosen[picture.kept]
-            signal, deviation = weighted_row_signals(view_light(recording, used, settings.nominal), picture.swing_dn, picture.noise_dn)
+            signal, deviation = weighted_row_signals(
+                view_light(recording, used, settings.nominal), picture.swing_dn, picture.noise_dn
+            )
             parts.append((signal, deviation, table.t_start_ns[used], table.exposure_ns[used], k))
     return join_row_signals(parts, mode.read_order(np.arange(mode.height)), int(table.t_start_ns[0]), True)
 
@@ -199,8 +213,8 @@ def final_clocks(settings: FrameSettings, rows: RowSignals, clocks: Clocks) -> t
         free.insert(1, "line_time_ns")
     model, findings = settings.model(rows), []
     sentences = {
-        "drift": "clock drift cannot be told from {views} views over {span:.1f} s: it is left out, and the offset holds "
-                 "for the time of this recording",
+        "drift": "clock drift cannot be told from {views} views over {span:.1f} s: it is left out, and the offset "
+        "holds for the time of this recording",
         "duty": "the target's duty is taken as stated: the frames do not tell it from the exposure",
         "exposure_correction_ns": "the stamped exposure is taken as it is: the frames do not tell a correction",
     }

@@ -8,8 +8,8 @@ from hybridtrack.calibration.view_data import EventMapFit, LensFit
 from hybridtrack.module import Uncertainty
 
 METHOD = (
-    "sandwich clustered by view for clocks and map; lens from the bundle adjustment, poses marginalised; thresholds from "
-    "the scatter of views with the pixel model's deviation"
+    "sandwich clustered by view for clocks and map; lens from the bundle adjustment, poses marginalised; thresholds "
+    "from the scatter of views with the pixel model's deviation"
 )
 
 
@@ -17,7 +17,10 @@ def join_blocks(lens: LensFit, event_map: EventMapFit, timing: TimingResult, thr
     """One covariance over all parameters, in the order lens, map, clocks, thresholds."""
     names = [*lens.parameters, *event_map.parameters, *timing.parameters]
     blocks = [lens.covariance, event_map.covariance, timing.covariance]
-    for name, value, sigma in (("on", thresholds.on, thresholds.on_sigma), ("off", thresholds.off, thresholds.off_sigma)):
+    for name, value, sigma in (
+        ("on", thresholds.on, thresholds.on_sigma),
+        ("off", thresholds.off, thresholds.off_sigma),
+    ):
         if value is not None and sigma is not None:
             names.append(f"contrast.{name}_threshold")
             blocks.append(np.array([[sigma**2]]))

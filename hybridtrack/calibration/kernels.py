@@ -29,8 +29,9 @@ def tile_histogram(t: Array, x: Array, y: Array, on: Array, t0_ns: int, bin_ns: 
 
 
 @kernel
-def fold_events(t: Array, x: Array, y: Array, on: Array, epoch_ns: int, epoch_phase: float, hz: float,
-                duty: float, out: Array) -> None:
+def fold_events(
+    t: Array, x: Array, y: Array, on: Array, epoch_ns: int, epoch_phase: float, hz: float, duty: float, out: Array
+) -> None:
     """Count events by pixel, polarity and half of the cycle into `out` (4, rows, columns)."""
     rate = hz * 1e-9
     for k in range(len(t)):
@@ -40,8 +41,9 @@ def fold_events(t: Array, x: Array, y: Array, on: Array, epoch_ns: int, epoch_ph
 
 
 @kernel
-def fold_phase(t: Array, x: Array, y: Array, on: Array, epoch_ns: int, epoch_phase: float, hz: float,
-               selected: Array, out: Array) -> None:
+def fold_phase(
+    t: Array, x: Array, y: Array, on: Array, epoch_ns: int, epoch_phase: float, hz: float, selected: Array, out: Array
+) -> None:
     """Histogram over the blink phase, `out` (2, bins): ON and OFF events of the `selected` (rows, columns) pixels."""
     rate = hz * 1e-9
     bins = out.shape[1]
@@ -52,8 +54,18 @@ def fold_phase(t: Array, x: Array, y: Array, on: Array, epoch_ns: int, epoch_pha
 
 
 @kernel
-def flip_histogram(t: Array, x: Array, y: Array, on: Array, polarity: int, flips_ns: Array, before_ns: float,
-                   bin_ns: float, selected: Array, out: Array) -> None:
+def flip_histogram(
+    t: Array,
+    x: Array,
+    y: Array,
+    on: Array,
+    polarity: int,
+    flips_ns: Array,
+    before_ns: float,
+    bin_ns: float,
+    selected: Array,
+    out: Array,
+) -> None:
     """Histogram of events around each flip, `out` (flips, bins), first bin `before_ns` before the flip.
 
     `flips_ns` (flips,) float, rising, relative to the same origin as `t`; windows of neighbours must not overlap.
@@ -91,8 +103,18 @@ def shortest_intervals(t: Array, x: Array, y: Array, last_ns: Array, shortest_ns
 
 
 @kernel
-def count_quiet_events(t: Array, x: Array, y: Array, epoch_ns: int, epoch_phase: float, hz: float, first: float,
-                       last: float, anytime: Array, out: Array) -> None:
+def count_quiet_events(
+    t: Array,
+    x: Array,
+    y: Array,
+    epoch_ns: int,
+    epoch_phase: float,
+    hz: float,
+    first: float,
+    last: float,
+    anytime: Array,
+    out: Array,
+) -> None:
     """Count events by pixel into `out` (rows, columns): those between two phases of the cycle, or `anytime` there."""
     rate = hz * 1e-9
     for k in range(len(t)):
@@ -106,14 +128,27 @@ def count_quiet_events(t: Array, x: Array, y: Array, epoch_ns: int, epoch_phase:
 
 
 @kernel
-def first_fire_status(t: Array, x: Array, y: Array, on: Array, flips_ns: Array, before_ns: float, after_ns: float,
-                      bin_ns: float, selected: Array, fired: Array, in_row: Array, seen: Array, status: Array) -> None:
+def first_fire_status(
+    t: Array,
+    x: Array,
+    y: Array,
+    on: Array,
+    flips_ns: Array,
+    before_ns: float,
+    after_ns: float,
+    bin_ns: float,
+    selected: Array,
+    fired: Array,
+    in_row: Array,
+    seen: Array,
+    status: Array,
+) -> None:
     """How many pixels of a row have fired since a flip, each time the row is read.
 
-    `t` and `flips_ns` (flips,) from one origin. A *read* is a run of events from one row. `status` (2, bins) gains, in the
-    bin of the read's last stamp after the flip less `before_ns`, the number of the row's `selected` pixels that have
-    fired ON, and of those that will before `after_ns` is over. Work space: `fired` (rows, columns) int64, filled with -1,
-    `in_row` and `seen` (rows,).
+    `t` and `flips_ns` (flips,) from one origin. A *read* is a run of events from one row. `status` (2, bins) gains,
+    in the bin of the read's last stamp after the flip less `before_ns`, the number of the row's `selected` pixels
+    that have fired ON, and of those that will before `after_ns` is over. Work space: `fired` (rows, columns) int64,
+    filled with -1, `in_row` and `seen` (rows,).
     """
     start = 0
     for k in range(len(flips_ns)):

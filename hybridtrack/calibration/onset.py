@@ -32,9 +32,9 @@ LEAST_EVENTS = 200
 class OnsetFit:
     """Blink clock by burst onsets.
 
-    `covariance` (2, 2) of (phase in ns at `centre_ns`, relative frequency), scatter only; `systematic_ns`: deviation that
-    all flips share. `rise_ns`: time between the quantiles a third and three times that used, which says how sharp the
-    onset is; `view_residual_ns` (V,): mean residual a view.
+    `covariance` (2, 2) of (phase in ns at `centre_ns`, relative frequency), scatter only; `systematic_ns`: deviation
+    that all flips share. `rise_ns`: time between the quantiles a third and three times that used, which says how
+    sharp the onset is; `view_residual_ns` (V,): mean residual a view.
     """
 
     blink: Blink
@@ -87,8 +87,9 @@ def onsets_of_view(recording: Recording, view: View, fold: ViewFold, blink: Blin
     histogram = np.zeros((len(flips), bins), np.uint32)
     selected = blinking_pixels(fold)
     for events in recording.event_blocks(view.t0_ns, view.t1_ns):
-        flip_histogram(events.t - blink.epoch_ns, events.x, events.y, events.on, 1, flips, BEFORE_NS, BIN_NS,
-                       selected, histogram)
+        flip_histogram(
+            events.t - blink.epoch_ns, events.x, events.y, events.on, 1, flips, BEFORE_NS, BIN_NS, selected, histogram
+        )
     times = quantile_times(histogram.astype(float), (QUANTILE / 3, QUANTILE, 3 * QUANTILE))
     number = np.rint(flips / blink.period_ns + blink.epoch_phase)
     return number, times + (flips - BEFORE_NS)[:, None]
@@ -132,8 +133,8 @@ def fit_onsets(recording: Recording, blink: Blink, views: list[View], folds: lis
     number, time, view_of = np.concatenate(numbers), np.concatenate(times), np.concatenate(owner)
     if len(number) < 4:
         raise NoBlinkError(
-            f"flips cannot be dated: at least {LEAST_EVENTS} ON events a flip are required, and only {len(number)} flips "
-            f"of {blink.hz:.2f} Hz have as many"
+            f"flips cannot be dated: at least {LEAST_EVENTS} ON events a flip are required, and only {len(number)} "
+            f"flips of {blink.hz:.2f} Hz have as many"
         )
     centre = float(np.round(number.mean()))
     line, covariance, residual = regress(number, time[:, 1], view_of, centre)
@@ -146,9 +147,9 @@ def fit_onsets(recording: Recording, blink: Blink, views: list[View], folds: lis
         epoch_phase=float((centre - line[0] / period) % 1.0),
         fold_lead=0.015,
     )
-    view_residual = np.array([
-        residual[view_of == k].mean() if np.any(view_of == k) else np.nan for k in range(len(views))
-    ])
+    view_residual = np.array(
+        [residual[view_of == k].mean() if np.any(view_of == k) else np.nan for k in range(len(views))]
+    )
     rise_ns = float(np.median(time[:, 2] - time[:, 0]))
     return OnsetFit(
         blink=refined,

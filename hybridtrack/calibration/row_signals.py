@@ -1,12 +1,13 @@
 """How bright each row's share of the board is, frame by frame: what the clocks are fitted to.
 
 Under a rolling shutter the light of a pixel in row r of frame n is D + f[n, r] K, where f is the part of the row's
-exposure in which set A is bright. Summed over the row with weights w, all pixels give one number s[n, r] = a + b f[n, r]
-with a and b of the row alone. The first weights are the leading right singular vector of the row's pixels over frames, which
-needs no knowledge of the clocks or the board; later ones are K / sigma^2 from the demodulated pictures.
+exposure in which set A is bright. Summed over the row with weights w, all pixels give one number s[n, r] = a + b
+f[n, r] with a and b of the row alone. The first weights are the leading right singular vector of the row's pixels
+over frames, which needs no knowledge of the clocks or the board; later ones are K / sigma^2 from the demodulated
+pictures.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -19,9 +20,9 @@ LEAST_FRAMES = 4
 class RowSignals:
     """Signals of the rows of all views, one line a row.
 
-    `signal` (R, N) with `weight` (R, N): one over its deviation, zero where there is no frame; `stamp_ns`, `exposure_ns`
-    (R, N) of the frames, stamps after `origin_ns`; `order` (R,): rows read before; `row`, `view` (R,): where it comes from.
-    `signed`: whether the sign of b is known to be positive.
+    `signal` (R, N) with `weight` (R, N): one over its deviation, zero where there is no frame; `stamp_ns`,
+    `exposure_ns` (R, N) of the frames, stamps after `origin_ns`; `order` (R,): rows read before; `row`, `view` (R,):
+    where it comes from. `signed`: whether the sign of b is known to be positive.
     """
 
     origin_ns: int
@@ -36,13 +37,13 @@ class RowSignals:
 
     def __getitem__(self, rows: Array) -> "RowSignals":
         """The lines selected by a mask or index array."""
-        columns = (getattr(self, name)[rows] for name in
-                   ("signal", "weight", "stamp_ns", "exposure_ns", "order", "row", "view"))
-        return RowSignals(self.origin_ns, *columns, self.signed)
+        names = ("signal", "weight", "stamp_ns", "exposure_ns", "order", "row", "view")
+        return replace(self, **{name: getattr(self, name)[rows] for name in names})
 
 
 def singular_row_signals(light: Array, signed: bool) -> tuple[Array, Array]:
-    """Signals (H, N) of every row of a view's frames (N, H, W), and their deviation (H,), inf where a row shows nothing.
+    """Signals (H, N) of every row of a view's frames (N, H, W), and their deviation (H,), inf where a row shows
+    nothing.
 
     For `signed` views (all pixels brighten together) the sign makes the row's sum of weights positive.
     """
@@ -76,20 +77,28 @@ def weighted_row_signals(light: Array, swing: Array, sigma: Array) -> tuple[Arra
         return signal / np.maximum(total, 1e-300)[:, None], np.where(total > 0, np.sqrt(variance) / total, np.inf)
 
 
-def join_row_signals(parts: list[tuple[Array, Array, Array, Array, int]], order: Array, origin_ns: int,
-                     signed: bool) -> RowSignals:
-    """Join the views' (signal (H, N), deviation (H,), stamps (N,), exposures (N,), view number); `order` (H,) of rows."""
+def join_row_signals(
+    parts: list[tuple[Array, Array, Array, Array, int]], order: Array, origin_ns: int, signed: bool
+) -> RowSignals:
+    """Join the views' (signal (H, N), deviation (H,), stamps (N,), exposures (N,), view number); `order` (H,) of
+    rows.
+    """
     longest = max(signal.shape[1] for signal, *_ in parts)
-    columns: dict[str, list[Array]] = {name: [] for name in ("signal", "weight", "stamp", "exposure", "order", "row", "view")}
+    columns: dict[str, list[Array]] = {
+        name: [] for name in ("signal", "weight", "stamp_ns", "exposure_ns", "order", "row", "view")
+    }
     for signal, deviation, stamps, exposures, view in parts:
         rows = np.flatnonzero(np.isfinite(deviation))
         pad = ((0, 0), (0, longest - signal.shape[1]))
-        times = [np.broadcast_to(np.asarray(a, float), (len(rows), len(stamps))) for a in (stamps - origin_ns, exposures)]
+        times = [
+            np.broadcast_to(np.asarray(a, float), (len(rows), len(stamps))) for a in (stamps - origin_ns, exposures)
+        ]
         columns["signal"].append(np.pad(signal[rows], pad))
         columns["weight"].append(np.pad(np.repeat(1.0 / deviation[rows, None], len(stamps), axis=1), pad))
-        columns["stamp"].append(np.pad(times[0], pad))
-        columns["exposure"].append(np.pad(times[1], pad, constant_values=1.0))
+        columns["stamp_ns"].append(np.pad(times[0], pad))
+        columns["exposure_ns"].append(np.pad(times[1], pad, constant_values=1.0))
         columns["order"].append(order[rows])
         columns["row"].append(rows)
         columns["view"].append(np.full(len(rows), view))
-    return RowSignals(origin_ns, *(np.concatenate(column) for column in columns.values()), signed)
+    joined = {name: np.concatenate(column) for name, column in columns.items()}
+    return RowSignals(origin_ns=origin_ns, signed=signed, **joined)

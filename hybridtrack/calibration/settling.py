@@ -1,9 +1,9 @@
 """How far the photoreceptor gets in half a cycle.
 
 A photoreceptor is slow in the dark: its first-order lag is milliseconds where the bright side takes a tenth of one. The
-OFF events of a dark half then die out as exp(-t / tau), and what is left of the step at the next flip, exp(-T / tau), is
-never seen by the comparator. tau is read from the counts in two windows late in the half, where the readout's lag of
-under a millisecond no longer matters.
+OFF events of a dark half then die out as exp(-t / tau), and what is left of the step at the next flip, exp(-T /
+tau), is never seen by the comparator. tau is read from the counts in two windows late in the half, where the
+readout's lag of under a millisecond no longer matters.
 """
 
 from dataclasses import dataclass
@@ -23,8 +23,9 @@ BINS = 400
 
 @dataclass(frozen=True)
 class Settling:
-    """`tau_on_ns`, `tau_off_ns`: lag after a flip to bright and to dark, None where over too soon to tell; `share`: part
-    of the step of log light that the comparator sees in steady blinking; `phase` (2, BINS): events over the cycle."""
+    """`tau_on_ns`, `tau_off_ns`: lag after a flip to bright and to dark, None where over too soon to tell; `share`:
+    part of the step of log light that the comparator sees in steady blinking; `phase` (2, BINS): events over the
+    cycle."""
 
     tau_on_ns: float | None
     tau_off_ns: float | None
@@ -56,7 +57,9 @@ def measure_settling(recording: Recording, views: list[View], folds: list[ViewFo
     for view, fold in zip(views, folds, strict=True):
         selected = blinking_pixels(fold)
         for events in recording.event_blocks(view.t0_ns, view.t1_ns):
-            fold_phase(events.t, events.x, events.y, events.on, blink.epoch_ns, blink.epoch_phase, blink.hz, selected, phase)
+            fold_phase(
+                events.t, events.x, events.y, events.on, blink.epoch_ns, blink.epoch_phase, blink.hz, selected, phase
+            )
     bin_ns = blink.period_ns / BINS
     flip = round(blink.duty * BINS)
     on, off = phase[0, :flip].astype(float), phase[1, flip:].astype(float)

@@ -44,7 +44,9 @@ def sweep_deviation_ns(target: Target) -> float:
     return target.scanout_s * 1e9 / np.sqrt(12.0)
 
 
-def timing_result(fit: ClockFit, onset: OnsetFit, mode: FrameMode, target: Target, nominal_offset_ns: float) -> TimingResult:
+def timing_result(
+    fit: ClockFit, onset: OnsetFit, mode: FrameMode, target: Target, nominal_offset_ns: float
+) -> TimingResult:
     """Timing block, joint covariance of its parameters, and findings."""
     values, covariance, free = transform(fit, mode.height)
     findings = [LATENCY_FINDING]
@@ -52,8 +54,8 @@ def timing_result(fit: ClockFit, onset: OnsetFit, mode: FrameMode, target: Targe
     if fit.clocks.line_time_ns < 0:
         row_order = -mode.row_order
         findings.append(
-            f"rows are read {'top down' if row_order == 1 else 'bottom up'}: row_order of the nominal module is the other way "
-            "and is corrected"
+            f"rows are read {'top down' if row_order == 1 else 'bottom up'}: row_order of the nominal module is the "
+            "other way and is corrected"
         )
     period = onset.blink.period_ns
     values["offset_ns"] = nearest_offset(values["offset_ns"], period, nominal_offset_ns)
@@ -73,10 +75,15 @@ def timing_result(fit: ClockFit, onset: OnsetFit, mode: FrameMode, target: Targe
         covariance[drift, drift] += onset.covariance[1, 1] * 1e12
     if target.scanout_s > 0:
         findings.append(
-            f"the target is a screen that sweeps over {target.scanout_s * 1e3:.1f} ms: clock figures carry that as deviation"
+            f"the target is a screen that sweeps over {target.scanout_s * 1e3:.1f} ms: clock figures carry that as "
+            "deviation"
         )
-    names = {"offset_ns": "frame_offset_ns", "line_time_ns": "line_time_ns",
-             "exposure_correction_ns": "exposure_correction_ns", "drift": "frame_drift_ppm"}
+    names = {
+        "offset_ns": "frame_offset_ns",
+        "line_time_ns": "line_time_ns",
+        "exposure_correction_ns": "exposure_correction_ns",
+        "drift": "frame_drift_ppm",
+    }
     kept = [k for k, name in enumerate(free) if name in names]
     timing = Timing(
         frame_offset_ns=values["offset_ns"],
@@ -86,5 +93,6 @@ def timing_result(fit: ClockFit, onset: OnsetFit, mode: FrameMode, target: Targe
         exposure_correction_ns=values["exposure_correction_ns"] if "exposure_correction_ns" in free else None,
         event_latency_ns=None,
     )
-    return TimingResult(timing, row_order, tuple(f"timing.{names[free[k]]}" for k in kept), covariance[np.ix_(kept, kept)],
-                        findings)
+    return TimingResult(
+        timing, row_order, tuple(f"timing.{names[free[k]]}" for k in kept), covariance[np.ix_(kept, kept)], findings
+    )

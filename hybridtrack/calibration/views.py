@@ -74,7 +74,9 @@ class ViewFold:
         return signed_amplitude(self.planes, self.cycles)
 
     def snr(self) -> Array:
-        """|amplitude| over its deviation (rows, columns), counts taken as Poisson, which bounds a comparator's scatter."""
+        """|amplitude| over its deviation (rows, columns), counts taken as Poisson, which bounds a comparator's
+        scatter.
+        """
         total = self.planes.sum(axis=0, dtype=float)
         return np.abs(self.amplitude()) * 2 * self.cycles / np.sqrt(np.maximum(total, 1.0))
 
@@ -127,12 +129,12 @@ def cycle_blocks(recording: Recording, blink: Blink) -> Iterator[tuple[int, list
     t0_ns, t1_ns = recording.event_span_ns
     cycle = int(np.ceil(blink.phase(t0_ns) + blink.fold_lead))
     origin = blink.epoch_phase + blink.fold_lead
-    boundary = blink.epoch_ns + int(round((cycle - origin) * period))
+    boundary = blink.epoch_ns + round((cycle - origin) * period)
     pieces: list[Events] = []
     for events in recording.event_blocks(boundary, t1_ns + 1):
         rest = events
         while len(rest):
-            end = blink.epoch_ns + int(round((cycle + BLOCK_CYCLES - origin) * period))
+            end = blink.epoch_ns + round((cycle + BLOCK_CYCLES - origin) * period)
             inside = int(np.searchsorted(rest.t, end))
             pieces.append(rest[:inside])
             rest = rest[inside:]
@@ -186,7 +188,9 @@ def path_sway_px(path: Array) -> float:
 
 
 def stillest_part(path: Array, length: int, sway_px: float) -> tuple[int, int]:
-    """The longest part [first, last) of a path within `sway_px`, or the stillest of `length` where none is that still."""
+    """The longest part [first, last) of a path within `sway_px`, or the stillest of `length` where none is that
+    still.
+    """
     best, best_key = (0, len(path)), (-1, -np.inf)
     for first in range(len(path) - length + 1):
         for last in range(first + length, len(path) + 1):
@@ -215,7 +219,9 @@ def view_of_run(blocks: list[Block], run: tuple[int, int], blink: Blink, options
         sway, is_part = path_sway_px(path[part[0] : part[1]]), part[1] - part[0] < len(path)
         first, last = first + part[0], first + part[1]
     cycles = np.array([blocks[first].cycle, blocks[last - 1].cycle + BLOCK_CYCLES])
-    t0_ns, t1_ns = blink.epoch_ns + np.rint((cycles - blink.epoch_phase - blink.fold_lead) * blink.period_ns).astype(np.int64)
+    t0_ns, t1_ns = blink.epoch_ns + np.rint((cycles - blink.epoch_phase - blink.fold_lead) * blink.period_ns).astype(
+        np.int64
+    )
     return View(int(t0_ns), int(t1_ns), sway, is_part)
 
 

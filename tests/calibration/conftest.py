@@ -9,7 +9,7 @@ import pytest
 # Helpers beside the tests; importlib mode leaves their folder off the path.
 sys.path.insert(0, str(Path(__file__).parent))
 
-from ideal_board import Scene, board_target, opened, small_module, tilted_poses  # noqa: E402
+from ideal_board import Scene, board_target, opened, small_module, tilted_poses
 
 
 @pytest.fixture(scope="session")
@@ -36,11 +36,20 @@ def noisy_scene(clean_scene):
     """Eight-bit frames with noise, background events, hot and dead pixels, mismatched thresholds."""
     module = small_module()
     contrast = module.contrast.model_copy(update={"on_spread": 0.012, "off_spread": 0.014})
-    timing = module.timing.model_copy(update={"frame_offset_ns": -1.7e6, "exposure_correction_ns": 35e3, "frame_drift_ppm": 12.0})
+    timing = module.timing.model_copy(
+        update={"frame_offset_ns": -1.7e6, "exposure_correction_ns": 35e3, "frame_drift_ppm": 12.0}
+    )
     module = module.model_copy(update={"contrast": contrast, "timing": timing})
     return replace(
-        clean_scene, module=module, poses=tilted_poses(6, 3), noise_dn=1.0, quantise=True, background_hz=0.3,
-        hot=((10, 10), (60, 40)), dead=((55, 33), (64, 38)), seed=5,
+        clean_scene,
+        module=module,
+        poses=tilted_poses(6, 3),
+        noise_dn=1.0,
+        quantise=True,
+        background_hz=0.3,
+        hot=((10, 10), (60, 40)),
+        dead=((55, 33), (64, 38)),
+        seed=5,
     )
 
 

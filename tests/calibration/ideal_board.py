@@ -121,7 +121,7 @@ def apertured(scene: Scene, pose: np.ndarray, uv: np.ndarray) -> tuple[np.ndarra
     total = [0.0, 0.0]
     for du in RASTER:
         for dv in RASTER:
-            for k, light in enumerate(board_light(scene, pose, uv + [du, dv])):
+            for k, light in enumerate(board_light(scene, pose, uv + np.array([du, dv]))):
                 total[k] = total[k] + light / 4.0
     return total[0], total[1]
 
@@ -183,8 +183,12 @@ class Comparators:
     def __init__(self, scene: Scene, rng: np.random.Generator) -> None:
         contrast, shape = scene.module.contrast, scene.module.event_grid.shape
         self.scene, self.rng = scene, rng
-        self.on = contrast.on_threshold * np.exp(contrast.on_spread / contrast.on_threshold * rng.standard_normal(shape))
-        self.off = contrast.off_threshold * np.exp(contrast.off_spread / contrast.off_threshold * rng.standard_normal(shape))
+        self.on = contrast.on_threshold * np.exp(
+            contrast.on_spread / contrast.on_threshold * rng.standard_normal(shape)
+        )
+        self.off = contrast.off_threshold * np.exp(
+            contrast.off_spread / contrast.off_threshold * rng.standard_normal(shape)
+        )
         self.dead = np.zeros(shape, bool)
         for x, y in scene.dead:
             self.dead[y, x] = True
@@ -219,8 +223,9 @@ def random_events(scene: Scene, rng: np.random.Generator, t0: float, t1: float) 
     parts = [np.column_stack([noise, rng.integers(0, 2, count)])]
     for x, y in scene.hot:
         number = rng.poisson(300.0 * (t1 - t0) * 1e-9)
-        parts.append(np.column_stack([rng.uniform(t0, t1, number), np.full(number, x), np.full(number, y),
-                                      np.ones(number)]))
+        parts.append(
+            np.column_stack([rng.uniform(t0, t1, number), np.full(number, x), np.full(number, y), np.ones(number)])
+        )
     return np.concatenate(parts)
 
 
@@ -241,8 +246,12 @@ def record_events(scene: Scene, writer: RecordingWriter) -> None:
         events = np.concatenate(parts)
         events = events[np.lexsort(events.T[::-1])]
         events = events[events[:, 0] < end]
-        writer.append_events(events[:, 0].astype(np.int64), events[:, 1].astype(np.uint16),
-                             events[:, 2].astype(np.uint16), events[:, 3].astype(np.uint8))
+        writer.append_events(
+            events[:, 0].astype(np.int64),
+            events[:, 1].astype(np.uint16),
+            events[:, 2].astype(np.uint16),
+            events[:, 3].astype(np.uint8),
+        )
 
 
 def record(scene: Scene, path) -> None:

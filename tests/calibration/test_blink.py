@@ -32,8 +32,9 @@ def test_frequency_of_a_counterphase_board(counterphase, counterphase_scene):
 def test_steady_light_is_refused(clean_scene, folder):
     """With no blinking the sentence says what was looked for and what was found."""
     scene = replace(clean_scene, blinking=False, background_hz=3.0, poses=tilted_poses(2))
-    with opened(scene, folder, "steady") as recording, pytest.raises(
-        NoBlinkError, match=r"within 1 % of 61 Hz is required .* no line above 20 Hz"
+    with (
+        opened(scene, folder, "steady") as recording,
+        pytest.raises(NoBlinkError, match=r"within 1 % of 61 Hz is required .* no line above 20 Hz"),
     ):
         find_blink(recording, SHAPE, scene.target)
 
@@ -58,14 +59,19 @@ def test_lamp_flicker_is_named(folder):
         for k in range(int(3.0 * hz)):
             for phase, on in ((0.0, 1), (0.5, 0)):
                 t = (k + phase) / hz * 1e9 + rng.uniform(0, 4e5, 300)
-                parts.append(np.stack([t, rng.integers(left, left + 40, 300), rng.integers(10, 70, 300),
-                                       np.full(300, on)], 1))
+                parts.append(
+                    np.stack([t, rng.integers(left, left + 40, 300), rng.integers(10, 70, 300), np.full(300, on)], 1)
+                )
     events = np.concatenate(parts)
     events = events[np.argsort(events[:, 0])]
     path = folder / "lamp.h5"
     with RecordingWriter(path) as writer:
-        writer.append_events(events[:, 0].astype(np.int64), events[:, 1].astype(np.uint16),
-                             events[:, 2].astype(np.uint16), events[:, 3].astype(np.uint8))
+        writer.append_events(
+            events[:, 0].astype(np.int64),
+            events[:, 1].astype(np.uint16),
+            events[:, 2].astype(np.uint16),
+            events[:, 3].astype(np.uint8),
+        )
     with Recording.open(path) as recording:
         blink = find_blink(recording, SHAPE, board_target())
     assert blink.hz == pytest.approx(61.0, rel=3e-5)

@@ -27,8 +27,17 @@ def blank_rows(views=5, rows=60, frames=24, exposure_ns=4e6, frame_hz=60.0, sign
     stamp = np.repeat(stamps.reshape(views, 1, frames), rows, axis=1).reshape(-1, frames)
     order = np.tile(np.arange(rows) * 7.0, views)
     shape = stamp.shape
-    return RowSignals(0, np.zeros(shape), np.full(shape, 1.0), stamp, np.full(shape, exposure_ns), order,
-                      order.astype(int), np.repeat(np.arange(views), rows), signed)
+    return RowSignals(
+        0,
+        np.zeros(shape),
+        np.full(shape, 1.0),
+        stamp,
+        np.full(shape, exposure_ns),
+        order,
+        order.astype(int),
+        np.repeat(np.arange(views), rows),
+        signed,
+    )
 
 
 def with_signal(rows, clocks, noise, seed):
@@ -37,8 +46,17 @@ def with_signal(rows, clocks, noise, seed):
     share = ClockModel(rows, BLINK, 0.0, 0.0, 0).shares(clocks)
     gain, base = rng.uniform(40, 120, (len(share), 1)), rng.uniform(5, 30, (len(share), 1))
     signal = base + gain * share + noise * rng.standard_normal(share.shape)
-    return RowSignals(rows.origin_ns, signal, np.full(share.shape, 1.0 / max(noise, 1e-3)), rows.stamp_ns,
-                      rows.exposure_ns, rows.order, rows.row, rows.view, rows.signed)
+    return RowSignals(
+        rows.origin_ns,
+        signal,
+        np.full(share.shape, 1.0 / max(noise, 1e-3)),
+        rows.stamp_ns,
+        rows.exposure_ns,
+        rows.order,
+        rows.row,
+        rows.view,
+        rows.signed,
+    )
 
 
 def model_of(rows):

@@ -29,8 +29,11 @@ def cycle_counts(step, on, off, kind, cycles=40, seed=0):
                     break
                 count += fires
                 if kind == "leaps":
-                    reference = np.where(fires, reference + sign * threshold * np.floor(
-                        sign * (level - reference) / threshold), reference)
+                    reference = np.where(
+                        fires,
+                        reference + sign * threshold * np.floor(sign * (level - reference) / threshold),
+                        reference,
+                    )
                     count += np.where(fires, 0, 0)
                 elif kind == "dead":
                     left = sign * (level - reference) - threshold

@@ -30,8 +30,10 @@ def test_errors_match_their_deviations():
     """Normalised errors of both pictures have unit variance under constant noise."""
     dark, swing, share = pictures(2, (60, 80))
     result = demodulate_frames(frames_of(dark, swing, share, 2.0, 3), share)
-    for error, sigma in ((result.dark_dn - dark, result.dark_sigma_dn),
-                         (result.bright_dn - dark - swing, result.bright_sigma_dn)):
+    for error, sigma in (
+        (result.dark_dn - dark, result.dark_sigma_dn),
+        (result.bright_dn - dark - swing, result.bright_sigma_dn),
+    ):
         assert np.std(error / sigma) == pytest.approx(1.0, abs=0.05)
 
 

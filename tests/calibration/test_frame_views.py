@@ -46,7 +46,9 @@ def test_clean_frames_give_exact_clocks(clean, clean_scene):
     settings, onset, frames = fitted(clean, clean_scene)
     clocks = frames.clocks.clocks
     assert clocks.line_time_ns == pytest.approx(30e3, rel=1e-4)
-    assert wrapped(clocks.offset_ns - true_offset_ns(clean_scene, settings), onset.blink.period_ns) == pytest.approx(0, abs=5e3)
+    assert wrapped(clocks.offset_ns - true_offset_ns(clean_scene, settings), onset.blink.period_ns) == pytest.approx(
+        0, abs=5e3
+    )
     assert abs(clocks.exposure_correction_ns) < 2e3
     assert clocks.duty == pytest.approx(0.5, abs=1e-4)
     assert (frames.agreement.mirror_x, frames.agreement.mirror_y) == (False, False)
@@ -58,7 +60,9 @@ def test_noisy_frames_are_within_their_deviations(noisy, noisy_scene):
     settings, onset, frames = fitted(noisy, noisy_scene)
     fit, true = frames.clocks, noisy_scene.module.timing
     assert abs(fit.clocks.line_time_ns - true.line_time_ns) < 4 * fit.sigma("line_time_ns")
-    assert abs(fit.clocks.exposure_correction_ns - true.exposure_correction_ns) < 4 * fit.sigma("exposure_correction_ns")
+    assert abs(fit.clocks.exposure_correction_ns - true.exposure_correction_ns) < 4 * fit.sigma(
+        "exposure_correction_ns"
+    )
     result = timing_result(fit, onset, noisy.module.frame_mode, noisy_scene.target, 0.0)
     named = dict(zip(result.parameters, np.sqrt(np.diag(result.covariance)), strict=True))
     error = wrapped(result.timing.frame_offset_ns - true_offset_ns(noisy_scene, settings), onset.blink.period_ns)
@@ -126,8 +130,12 @@ def test_global_shutter_has_no_line_time(folder, clean_scene):
 def test_exposure_of_a_whole_period_is_refused(folder, clean_scene):
     """Frames that integrate whole blinks show none."""
     scene = replace(clean_scene, exposure_ns=round(clean_scene.period_ns), poses=tilted_poses(1))
-    with opened(scene, folder, "whole") as recording, pytest.raises(
-        DegenerateDataError, match=r"frames show no blinking.* whole number of blink periods|do not follow the blinking"
+    with (
+        opened(scene, folder, "whole") as recording,
+        pytest.raises(
+            DegenerateDataError,
+            match=r"frames show no blinking.* whole number of blink periods|do not follow the blinking",
+        ),
     ):
         fitted(recording, scene)
 

@@ -15,7 +15,9 @@ SHAPE = (80, 120)
 
 
 def test_blink_clock_of_a_recording(clean, clean_scene):
-    """Frequency to a part in a million and phase to a few microseconds, although mean stamps lag by half a millisecond."""
+    """Frequency to a part in a million and phase to a few microseconds, although mean stamps lag by half a
+    millisecond.
+    """
     rough = find_blink(clean, SHAPE, clean_scene.target)
     views, _ = find_views(clean, rough, SHAPE)
     folds = [fold_view(clean, view, rough, SHAPE) for view in views]
@@ -94,14 +96,26 @@ def test_mean_delay_is_seen_past_the_queue():
     rows, columns, flips = 100, 100, 8
     status = np.zeros((2, 1250))
     mean_stamp = []
-    for flip in range(flips):
+    for _ in range(flips):
         fire = np.maximum(60e3 + 25e3 * rng.standard_normal(rows * columns), 5e3)
         row = np.repeat(np.arange(rows), columns)
         stamps, y, pixel = queued(fire, row, 20.0)
         mean_stamp.append(stamps.mean())
-        first_fire_status(np.round(stamps).astype(np.int64), (pixel % columns).astype(np.uint16), y.astype(np.uint16),
-                          np.ones(len(y), np.uint8), np.zeros(1), 1e5, 2.4e6, 2e3, np.ones((rows, columns), bool),
-                          np.full((rows, columns), -1, np.int64), np.zeros(rows, np.int64), np.zeros(rows, np.int64), status)
+        first_fire_status(
+            np.round(stamps).astype(np.int64),
+            (pixel % columns).astype(np.uint16),
+            y.astype(np.uint16),
+            np.ones(len(y), np.uint8),
+            np.zeros(1),
+            1e5,
+            2.4e6,
+            2e3,
+            np.ones((rows, columns), bool),
+            np.full((rows, columns), -1, np.int64),
+            np.zeros(rows, np.int64),
+            np.zeros(rows, np.int64),
+            status,
+        )
     time, share = fired_share(status)
     edges, level = np.r_[-1e5, time, 2.4e6], np.r_[0.0, share, 1.0]
     mean = np.sum(np.diff(edges) * (1 - 0.5 * (level[1:] + level[:-1]))) - 1e5

@@ -69,9 +69,15 @@ def test_blinking_that_never_holds_still_is_refused(folder, clean_scene):
     events = events[np.argsort(events[:, 0])]
     path = folder / "restless.h5"
     with RecordingWriter(path) as writer:
-        writer.append_events(events[:, 0].astype(np.int64), events[:, 1].astype(np.uint16),
-                             events[:, 2].astype(np.uint16), events[:, 3].astype(np.uint8))
+        writer.append_events(
+            events[:, 0].astype(np.int64),
+            events[:, 1].astype(np.uint16),
+            events[:, 2].astype(np.uint16),
+            events[:, 3].astype(np.uint8),
+        )
     with Recording.open(path) as recording:
         blink = find_blink(recording, SHAPE, clean_scene.target)
-        with pytest.raises(BoardNotFoundError, match=r"blinks at 61\.\d+ Hz and holds still .* no pattern of them holds"):
+        with pytest.raises(
+            BoardNotFoundError, match=r"blinks at 61\.\d+ Hz and holds still .* no pattern of them holds"
+        ):
             find_views(recording, blink, SHAPE)
