@@ -5,8 +5,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from hybridtrack.module import FrameMode, HybridModule
-from hybridtrack.tracking.advance_kernels import Pace
-from hybridtrack.tracking.feature_table import Features, new_features
+from hybridtrack.tracking.feature_table import Features, Pace, new_features
 from hybridtrack.tracking.options import TrackerOptions
 from hybridtrack.tracking.track_state import ALIVE, LEFT_PICTURE, OUT_OF_VIEW
 from hybridtrack.tracking.tracks_file import Tracks
@@ -57,9 +56,14 @@ class Core:
         """The module's frame mode."""
         return self.module.frame_mode
 
+    @property
+    def table(self) -> np.recarray:
+        """The features' records."""
+        return self.features.table
+
     def active(self) -> Array:
         """Slots (K,) that hold a feature."""
-        return np.flatnonzero(self.features.active)
+        return np.flatnonzero(self.table.active)
 
     def inside(self, uv: Array) -> Array:
         """Whether frame positions (..., 2) lie in the picture."""
@@ -69,7 +73,7 @@ class Core:
     def typical_speed(self) -> float:
         """Median speed of the features, frame px/s; 0 with none."""
         active = self.active()
-        return float(np.median(np.linalg.norm(self.features.state[active, 2:4], axis=1))) if len(active) else 0.0
+        return float(np.median(np.linalg.norm(self.table.state[active, 2:4], axis=1))) if len(active) else 0.0
 
     def lines(self, slot: Array, t_ns: Array, uv: Array, cov: Array, source: int) -> Tracks:
         """Lines in colour px of the given slots (N,), positions (N, 2) and covariances (N, 3) in frame px."""
@@ -84,7 +88,7 @@ class Core:
 
     def release(self, slot: int) -> None:
         """Free a slot."""
-        self.features.active[slot] = 0
+        self.table.active[slot] = 0
         self.slots.id[slot] = -1
         self.slots.state[slot] = ALIVE
 
@@ -110,8 +114,9 @@ def new_pace(module: HybridModule, options: TrackerOptions, radius: float) -> Pa
     affine = event_from_frame(module)
     reach = np.ceil(np.abs(affine[:, :2]).sum(axis=1) * radius).astype(np.int64) + map_slack(module, affine)
     return Pace(
-        radius=radius, event_from_frame=affine, box=reach, acceleration_share=30.0, acceleration_floor=1000.0,
-        acceleration_time_s=0.01, gain_rate=0.5, level_discount=0.5, slack=1.2, slack_fresh=1.6, output_ns=base * parts,
+        radius, *affine.ravel().tolist(), *reach.tolist(), acceleration_share=60.0, acceleration_floor=1000.0,
+        acceleration_time_s=0.01, speed_memory_s=0.1, gain_rate=0.5, level_discount=0.5, slack=1.2, slack_fresh=1.6,
+        output_ns=base * parts,
         history_ns=LONGEST_EXPOSURE_NS // 150, base_ns=base, shortest_ns=int(1e9 / options.fastest_rate_hz), step_px=1.0,
         surprise=9.0, measuring=0,
     )

@@ -66,7 +66,7 @@ class EventFollower:
     def _check(self, events: Events) -> None:
         if self._now_ns is not None and events.t[0] < self._now_ns:
             raise OptionError(f"events must be pushed in order, got {events.t[0]} ns after {self._now_ns} ns")
-        rows, columns = self.levels.level.shape
+        rows, columns = self.levels.shape
         if events.x.max() >= columns or events.y.max() >= rows:
             raise OptionError(
                 f"events must lie on the module's {columns}x{rows} grid, got ({events.x.max()}, {events.y.max()})"
@@ -91,7 +91,7 @@ class EventFollower:
         room = active * (max(until - int(self._clock[0]), 0) // core.pace.output_ns + 2) if record else 0
         slot, when, rows = np.zeros(room, np.int64), np.zeros(room, np.int64), np.zeros((room, 5))
         written, used = advance(
-            events.t, events.x, events.y, events.on, until, self._ramp_ns(), self.levels, core.features,
+            events.t, events.x, events.y, events.on, until, self._ramp_ns(), self.levels, core.table, core.features.work,
             core.pace._replace(measuring=int(self._measuring)), self._clock, slot, when, rows,
         )
         core.counters.events_used += used if record else 0
@@ -112,10 +112,10 @@ class EventFollower:
     def activity(self, clock: FrameClock, uv: Array, radius: float) -> tuple[Array, Array]:
         """Events in the rows' exposures within `radius` of frame positions (N, 2), and how many event pixels look there."""
         events = self._buffer.since(clock.span_ns[0])
-        start = clock.start_ns(self.levels.frame_uv[events.y, events.x, 1])
+        start = clock.start_ns(self.levels.v[events.y, events.x])
         events = events[(events.t >= start) & (events.t < start + clock.exposure_ns)]
-        where = self.levels.frame_uv[events.y, events.x]
-        pixels = self.levels.frame_uv[self.levels.usable > 0]
+        where = self._pictures.frame_uv[events.y, events.x]
+        pixels = self._pictures.frame_uv[self.levels.usable > 0]
         counts = [
             [int(np.sum(np.abs(points - position).max(axis=-1) <= radius)) for points in (where, pixels)] for position in uv
         ]

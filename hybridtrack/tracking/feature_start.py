@@ -6,6 +6,7 @@ from hybridtrack.tracking import track_state as ts
 from hybridtrack.tracking.core import Core
 from hybridtrack.tracking.detection import detect_corners
 from hybridtrack.tracking.event_follower import EventFollower
+from hybridtrack.tracking.feature_table import FORGOTTEN
 from hybridtrack.tracking.frame_step import FrameMatcher, pyramidal_flow
 from hybridtrack.tracking.light_levels import FrameClock
 from hybridtrack.tracking.log_light import LogLight
@@ -48,8 +49,8 @@ class FeatureStarter:
 
     def _start_corners(self, light: LogLight, sharp: Array, clock: FrameClock) -> list[int]:
         core = self._core
-        free = np.flatnonzero(core.features.active == 0)
-        if len(free) < max(1, 0.05 * len(core.features.active)):
+        free = np.flatnonzero(core.table.active == 0)
+        if len(free) < max(1, 0.05 * len(core.table.active)):
             return []
         taken = core.slots.at_frame[core.active()]
         margin = int(core.radius) + 2
@@ -73,7 +74,7 @@ class FeatureStarter:
         for k, position in zip(due, moved, strict=True):
             self._waiting[k] = False
             if core.inside(position):
-                slot = int(np.flatnonzero(core.features.active == 0)[0])
+                slot = int(np.flatnonzero(core.table.active == 0)[0])
                 self._fill(slot, int(points.id[k]), position, sharp, clock)
                 started.append(slot)
         return started
@@ -98,17 +99,18 @@ class FeatureStarter:
         return moved
 
     def _fill(self, slot: int, identity: int, uv: Array, sharp: Array, clock: FrameClock) -> None:
-        core, features, slots = self._core, self._core.features, self._core.slots
-        features.active[slot] = 1
-        features.t_ns[slot] = int(clock.middle_ns(uv[1]))
-        features.state[slot] = 0.0
-        features.state[slot, :2] = uv
-        features.cov[slot] = 0.0
-        np.fill_diagonal(features.cov[slot], [START_SIGMA_PX**2] * 2 + [WIDE_VELOCITY**2] * 2 + [0.1**2])
-        features.static_cov[slot] = 0.0
-        features.level_sigma[slot] = 0.4 * self._follower.theta if self._follower is not None else 0.1
-        features.history_t[slot] = np.iinfo(np.int64).min
-        features.history_next[slot] = 0
+        core, table, slots = self._core, self._core.table, self._core.slots
+        table.active[slot] = 1
+        table.t_ns[slot] = int(clock.middle_ns(uv[1]))
+        table.state[slot] = 0.0
+        table.state[slot, :2] = uv
+        table.cov[slot] = 0.0
+        np.fill_diagonal(table.cov[slot], [START_SIGMA_PX**2] * 2 + [WIDE_VELOCITY**2] * 2 + [0.1**2])
+        table.static_cov[slot] = 0.0
+        table.level_sigma[slot] = 0.4 * self._follower.theta if self._follower is not None else 0.1
+        table.history_t[slot] = FORGOTTEN
+        table.recent_speed[slot] = 0.0
+        table.history_next[slot] = 0
         self._matcher.take_own(slot, sharp, uv)
         slots.id[slot], slots.state[slot], slots.reason[slot] = identity, ts.ALIVE, ts.STARTED
         slots.missed[slot], slots.at_frame[slot] = 0, uv
@@ -116,15 +118,15 @@ class FeatureStarter:
         core.counters.started += 1
 
     def _set_velocity(self, slot: int, velocity: Array, sigma: float) -> None:
-        features = self._core.features
-        features.state[slot, 2:4] = velocity
-        features.cov[slot, 2, 2] = features.cov[slot, 3, 3] = sigma**2
+        table = self._core.table
+        table.state[slot, 2:4] = velocity
+        table.cov[slot, 2, 2] = table.cov[slot, 3, 3] = sigma**2
 
     def _velocity_of_neighbours(self, started: list[int], settled: Array) -> None:
         """Give new features the median velocity of the nearest settled ones."""
-        states = self._core.features.state[settled]
+        states = self._core.table.state[settled]
         for slot in started:
-            near = np.argsort(np.linalg.norm(states[:, :2] - self._core.features.state[slot, :2], axis=1))[:7]
+            near = np.argsort(np.linalg.norm(states[:, :2] - self._core.table.state[slot, :2], axis=1))[:7]
             velocities = states[near, 2:4]
             middle = np.median(velocities, axis=0)
             self._set_velocity(slot, middle, 50.0 + 2.0 * float(np.median(np.linalg.norm(velocities - middle, axis=1))))
@@ -135,7 +137,7 @@ class FeatureStarter:
         A pixel fires at slope times speed over threshold (Gehrig et al. 2018); two more events may have gone amiss.
         """
         assert self._follower is not None
-        uv = self._core.features.state[started, :2]
+        uv = self._core.table.state[started, :2]
         slope = np.hypot(*np.gradient(sharp))
         reach = int(self._core.radius)
         events, pixels = self._follower.activity(clock, uv, self._core.radius)
@@ -151,7 +153,7 @@ class FeatureStarter:
         assert self._follower is not None
         first, last = (_eight_bit(self._follower.sharp_at(light, clock, share)) for share in (0.05, 0.95))
         slots = np.array(started)
-        uv = self._core.features.state[slots, :2]
+        uv = self._core.table.state[slots, :2]
         found, good = pyramidal_flow(first, last, uv, uv, 1.0)
         events, pixels = self._follower.activity(clock, uv, self._core.radius)
         activity = events / np.maximum(pixels, 1)

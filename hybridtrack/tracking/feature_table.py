@@ -1,4 +1,7 @@
-"""The tracker's memory in plain arrays, as the kernels take it: pixel levels and features, of fixed size."""
+"""The tracker's memory as the kernels take it: one record a feature, one record an event pixel.
+
+Records keep what is used together close in memory, and are one argument to a kernel, which makes it quick to compile.
+"""
 
 from typing import NamedTuple
 
@@ -7,67 +10,98 @@ import numpy as np
 Array = np.ndarray
 STATE_SIZE = 5  # position u, v (frame px), velocity u, v (frame px/s), log gain of the patch
 HISTORY = 160
+FORGOTTEN = np.iinfo(np.int64).min
+NEVER = np.iinfo(np.int64).min // 4
+
+PIXEL = np.dtype(
+    [
+        ("level", "f8"),  # log light at the anchor
+        ("anchor_ns", "i8"),  # when it had that level: the last event, or the last frame's instant
+        ("last_ns", "i8"),  # stamp of the last event
+        ("reference_ns", "i8"),  # the last frame's instant; events up to it are part of the level
+        ("u", "f8"),  # where the pixel looks, frame px
+        ("v", "f8"),
+        ("theta_on", "f4"),
+        ("theta_off", "f4"),
+        ("fresh", "u1"),  # 1: no event since the last frame's instant
+        ("usable", "u1"),  # 0: hot, dead, outside the frame or saturated in it
+    ],
+    align=True,
+)
+
+FEATURE = np.dtype(
+    [
+        ("active", "u1"),
+        ("from_frame", "u1"),  # 1: the work template is the last frame itself
+        ("t_ns", "i8"),  # time of the state
+        ("state", "f8", (STATE_SIZE,)),
+        ("cov", "f8", (STATE_SIZE, STATE_SIZE)),
+        ("warp", "f8", (2, 2)),  # image offset from offset in the own template
+        ("own_offset", "f8", (2,)),  # the feature in its own template, from the middle, template px
+        ("work_warp", "f8", (2, 2)),
+        ("work_offset", "f8", (2,)),
+        ("level_sigma", "f8"),  # misfit of levels to the template
+        ("recent_speed", "f8"),  # frame px/s, decaying maximum
+        ("static_cov", "f8", (2, 2)),  # position error from level errors that stay, frame px^2
+        ("anchor_uv", "f8", (2,)),  # position at the last frame
+        ("updates", "i8"),  # pixels that fired for it since the last frame
+        ("history_next", "i8"),  # slot that is written next
+        ("history_t", "i8", (HISTORY,)),
+        ("history", "f8", (HISTORY, STATE_SIZE)),
+        ("history_cov", "f8", (HISTORY, STATE_SIZE, STATE_SIZE)),
+        # Room for the filter's normal equations.
+        ("h", "f8", (STATE_SIZE, STATE_SIZE)),
+        ("g", "f8", (STATE_SIZE,)),
+        ("prior", "f8", (STATE_SIZE,)),
+        ("information", "f8", (STATE_SIZE, STATE_SIZE)),
+        ("factor", "f8", (STATE_SIZE, STATE_SIZE)),
+        ("step", "f8", (STATE_SIZE,)),
+    ],
+    align=True,
+)
 
 
-class Levels(NamedTuple):
-    """What is known of log light at each event pixel; every array is (rows, columns) of the event grid."""
+class Pace(NamedTuple):
+    """Constants of the event filter; lengths in frame px."""
 
-    level: Array  # float32, log light at the anchor
-    anchor_ns: Array  # int64, when it had that level: the last event, or the last frame's instant
-    last_ns: Array  # int64, stamp of the last event
-    fresh: Array  # uint8, 1: no event since the last frame's instant
-    reference_ns: Array  # int64, the last frame's instant; events up to it are part of the level
-    theta_on: Array  # float32
-    theta_off: Array  # float32
-    usable: Array  # uint8, 0: hot or dead
-    frame_uv: Array  # float64 (rows, columns, 2), where the pixel looks, frame px
+    radius: float  # half width of the patch, template px
+    x_u: float  # event-grid position from frame px, to find the pixels of a patch: x = x_u u + x_v v + x_0
+    x_v: float
+    x_0: float
+    y_u: float
+    y_v: float
+    y_0: float
+    reach_x: int  # half width of that search, event px
+    reach_y: int
+    acceleration_share: float  # 1/s, expected acceleration over recent speed
+    acceleration_floor: float  # px/s^2
+    acceleration_time_s: float
+    speed_memory_s: float
+    gain_rate: float  # 1/sqrt(s), random walk of the log gain
+    level_discount: float  # how much of an event's information is new: events of one pixel share errors
+    slack: float  # thresholds by which a silent pixel may have moved, if it fired since the frame
+    slack_fresh: float  # the same if it did not
+    output_ns: int
+    history_ns: int
+    base_ns: int  # longest time between updates; divides output_ns
+    shortest_ns: int
+    step_px: float  # movement between updates that is aimed at
+    surprise: float  # squared deviations of an update from its prediction at which the velocity is doubted
+    measuring: int  # 0: coast only
 
 
 class Features(NamedTuple):
-    """Every feature slot; arrays have one row a slot."""
+    """Every feature slot: `table` (M,) of FEATURE, `own` (M, S, S) float32 log light around each where it was best
+    seen, `work` (M, S, S, 3) float32 what events are compared to, log light and its two slopes."""
 
-    active: Array  # uint8, 1: followed
-    t_ns: Array  # int64, time of the state
-    state: Array  # float64 (M, 5)
-    cov: Array  # float64 (M, 5, 5)
-    shape: Array  # float64 (M, 2, 2): image offset from template offset
-    level_sigma: Array  # float64 (M,): misfit of levels to the template
-    own: Array  # float32 (M, S, S): log light around the feature when it was best seen
-    own_offset: Array  # float64 (M, 2): the feature in the own template, from its middle, template px
-    work: Array  # float32 (M, S, S, 3): what events are compared to: log light and its two slopes
-    work_offset: Array  # float64 (M, 2)
-    work_shape: Array  # float64 (M, 2, 2)
-    static_cov: Array  # float64 (M, 2, 2): position error from level errors that stay, frame px^2
-    anchor_uv: Array  # float64 (M, 2): position at the last frame
-    from_frame: Array  # uint8, 1: the work template is the last frame itself
-    history_t: Array  # int64 (M, HISTORY)
-    history: Array  # float64 (M, HISTORY, 5)
-    history_cov: Array  # float64 (M, HISTORY, 5, 5)
-    history_next: Array  # int64 (M,): slot that is written next
-    updates: Array  # int64 (M,): event updates since the last frame
+    table: np.recarray
+    own: Array
+    work: Array
 
 
 def new_features(capacity: int, template_size: int) -> Features:
     """Empty slots."""
-    m, s = capacity, template_size
-    return Features(
-        active=np.zeros(m, np.uint8),
-        t_ns=np.zeros(m, np.int64),
-        state=np.zeros((m, STATE_SIZE)),
-        cov=np.zeros((m, STATE_SIZE, STATE_SIZE)),
-        shape=np.tile(np.eye(2), (m, 1, 1)),
-        level_sigma=np.zeros(m),
-        own=np.zeros((m, s, s), np.float32),
-        own_offset=np.zeros((m, 2)),
-        work=np.zeros((m, s, s, 3), np.float32),
-        work_offset=np.zeros((m, 2)),
-        work_shape=np.tile(np.eye(2), (m, 1, 1)),
-        static_cov=np.zeros((m, 2, 2)),
-        anchor_uv=np.zeros((m, 2)),
-        from_frame=np.zeros(m, np.uint8),
-        history_t=np.full((m, HISTORY), np.iinfo(np.int64).min, np.int64),
-        history=np.zeros((m, HISTORY, STATE_SIZE)),
-        history_cov=np.zeros((m, HISTORY, STATE_SIZE, STATE_SIZE)),
-        history_next=np.zeros(m, np.int64),
-        updates=np.zeros(m, np.int64),
-    )
+    table = np.zeros(capacity, FEATURE).view(np.recarray)
+    table.history_t[:] = FORGOTTEN
+    size = (capacity, template_size, template_size)
+    return Features(table, np.zeros(size, np.float32), np.zeros((*size, 3), np.float32))

@@ -47,16 +47,16 @@ class FrameLocator:
 
     def expect(self, slot: int, clock: FrameClock) -> Expectation | None:
         """Take a feature to its row's middle of exposure; None where it only started after that."""
-        features, position = self._core.features, np.zeros((1, 2))
-        position[0] = features.state[slot, :2]
+        record, position = self._core.table[slot], np.zeros((1, 2))
+        position[0] = record.state[:2]
         t_ns = 0
         for _ in range(4):
             t_ns = int(clock.middle_ns(np.clip(position[0, 1], -0.5, clock.height - 0.5)))
-            trajectory(slot, features, np.array([t_ns]), position)
+            trajectory(record, np.array([t_ns]), position)
         path = self._matcher.path(slot, clock, t_ns)
-        if not rewind(slot, features, t_ns, self._core.pace):
+        if not rewind(record, t_ns, self._core.pace):
             return None
-        return Expectation(slot, t_ns, features.state[slot, :2].copy(), path, self._matcher.smear_px(path))
+        return Expectation(slot, t_ns, record.state[:2].copy(), path, self._matcher.smear_px(path))
 
     def locate(self, light: LogLight, clock: FrameClock, picture: Array) -> list[Expectation]:
         """Locate all features; return what was expected of those that the frame concerns."""
@@ -99,7 +99,7 @@ class FrameLocator:
 
     def _agrees(self, e: Expectation, match: Match) -> bool:
         """Whether the frame and the prediction agree within their deviations."""
-        p = self._core.features.cov[e.slot, :2, :2] + self._core.features.static_cov[e.slot]
+        p = self._core.table.cov[e.slot, :2, :2] + self._core.table.static_cov[e.slot]
         away = match.position - e.position
         s = p + np.array([[match.cov[0], match.cov[1]], [match.cov[1], match.cov[2]]])
         return bool(np.hypot(*away) < ALWAYS_AGREE_PX or away @ np.linalg.solve(s, away) < GATE**2)
@@ -129,7 +129,7 @@ class FrameLocator:
             self._accept(e, match, ts.WEAK, ts.FRAME_DISAGREES)
         elif self._core.options.mode == "frames" or self._agrees(e, _flow_match(flow)):
             self._widen(e, flow)
-            observe_position(e.slot, self._core.features, flow[0], flow[1], FLOW_SIGMA_PX**2, 0.0, FLOW_SIGMA_PX**2)
+            observe_position(self._core.table[e.slot], flow[0], flow[1], FLOW_SIGMA_PX**2, 0.0, FLOW_SIGMA_PX**2)
             self._core.slots.missed[e.slot] += 1
             self._mark(e.slot, ts.WEAK, ts.FRAME_UNMATCHED)
         else:
@@ -137,8 +137,8 @@ class FrameLocator:
 
     def _widen(self, e: Expectation, position: Array) -> None:
         """Let the prediction be as wrong as it was found to be."""
-        away = float(np.sum((position - self._core.features.state[e.slot, :2]) ** 2))
-        cov = self._core.features.cov[e.slot]
+        away = float(np.sum((position - self._core.table.state[e.slot, :2]) ** 2))
+        cov = self._core.table.cov[e.slot]
         dt = 0.01
         for k in range(2):
             cov[k, k] += away
@@ -146,14 +146,14 @@ class FrameLocator:
 
     def _accept(self, e: Expectation, match: Match, state: int, reason: int) -> None:
         """Join a match to the filter."""
-        features = self._core.features
-        features.cov[e.slot, :2, :2] += features.static_cov[e.slot]
-        observe_position(e.slot, features, *match.position, *match.cov)
+        table = self._core.table
+        table.cov[e.slot, :2, :2] += table.static_cov[e.slot]
+        observe_position(table[e.slot], *match.position, *match.cov)
         # The template's own noise is in every frame's match and does not average out.
         floor = 0.5 * match.cov
         for k, value in ((0, floor[0]), (1, floor[2])):
-            features.cov[e.slot, k, k] = max(features.cov[e.slot, k, k], value)
-        features.shape[e.slot] = match.shape
+            table.cov[e.slot, k, k] = max(table.cov[e.slot, k, k], value)
+        table.warp[e.slot] = match.shape
         self._core.slots.missed[e.slot] = 0
         self._mark(e.slot, state, reason)
 
@@ -161,7 +161,7 @@ class FrameLocator:
         """The frame does not show the feature where it could be."""
         u, v = (round(float(c)) for c in np.clip(e.position, 0, [self._core.mode.width - 1, self._core.mode.height - 1]))
         self._core.slots.missed[e.slot] += 1
-        cov = self._core.features.cov[e.slot]
+        cov = self._core.table.cov[e.slot]
         for k in range(2):
             cov[k, k] += MISS_SIGMA_PX**2
             cov[k + 2, k + 2] += MISS_SIGMA_PX_S**2

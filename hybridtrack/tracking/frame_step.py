@@ -71,7 +71,7 @@ class FrameMatcher:
         half = clock.exposure_ns * (1.0 - 1.0 / count) * 0.5
         times = (middle_ns + np.linspace(-half, half, count)).astype(np.int64)
         path = np.zeros((count, 2))
-        trajectory(slot, self._features, times, path)
+        trajectory(self._features.table[slot], times, path)
         return path
 
     def smear_px(self, path: Array) -> float:
@@ -80,15 +80,15 @@ class FrameMatcher:
 
     def match(self, slot: int, light: LogLight, start: Array, path: Array | None) -> Match:
         """Align from `start` (2,). `path` (K, 2) smears the template; None: as it is."""
-        features = self._features
-        position, shape = np.array(start, float), features.shape[slot].copy()
+        features, table = self._features, self._features.table
+        position, shape = np.array(start, float), table.warp[slot].copy()
         values = features.own[slot]
         if path is not None:
             values = self._smear(slot, path)
         with_slopes(values, self._template)
         shape_sigma = SHAPE_SIGMA if path is None else 0.0
         converged = align(
-            light.log_light, light.trust, self._template, features.own_offset[slot], self._radius, position, shape,
+            light.log_light, light.trust, self._template, table.own_offset[slot], self._radius, position, shape,
             shape_sigma, 15, self._out,
         )
         cov = self._out[:3] * NOISE_FACTOR + np.array([1.0, 0.0, 1.0]) * ALIGNMENT_FLOOR_PX**2
@@ -98,35 +98,35 @@ class FrameMatcher:
         steps = int(np.clip(np.ceil(self.smear_px(path) / 0.8), 2, 32))
         spaced = np.linspace(0, len(path) - 1, steps)
         dense = np.stack([np.interp(spaced, np.arange(len(path)), path[:, k]) for k in range(2)], axis=1)
-        shifts = (dense - dense.mean(axis=0)) @ np.linalg.inv(self._features.shape[slot]).T
+        shifts = (dense - dense.mean(axis=0)) @ np.linalg.inv(self._features.table.warp[slot]).T
         smear(self._features.own[slot], shifts, self._smeared)
         return self._smeared
 
     def take_own(self, slot: int, picture: Array, position: Array) -> None:
         """Make the picture around `position` the feature's own template."""
-        features = self._features
-        features.own_offset[slot] = cut_patch(picture, position[0], position[1], features.own[slot])
-        features.shape[slot] = np.eye(2)
+        features, table = self._features, self._features.table
+        table.own_offset[slot] = cut_patch(picture, position[0], position[1], features.own[slot])
+        table.warp[slot] = np.eye(2)
 
     def prepare_work(self, slot: int, picture: Array, from_frame: bool) -> None:
         """Set what events are compared to: the frame around the feature, or its own template."""
-        features = self._features
-        features.from_frame[slot] = from_frame
+        features, table = self._features, self._features.table
+        table.from_frame[slot] = from_frame
         if from_frame:
-            position = features.state[slot, :2]
-            features.work_offset[slot] = cut_patch(picture, position[0], position[1], self._smeared)
+            position = table.state[slot, :2]
+            table.work_offset[slot] = cut_patch(picture, position[0], position[1], self._smeared)
             with_slopes(self._smeared, features.work[slot])
-            features.work_shape[slot] = np.eye(2)
-            features.state[slot, 4] = 0.0
-            features.cov[slot, 4, :] = features.cov[slot, :, 4] = 0.0
-            features.cov[slot, 4, 4] = 0.01**2
+            table.work_warp[slot] = np.eye(2)
+            table.state[slot, 4] = 0.0
+            table.cov[slot, 4, :] = table.cov[slot, :, 4] = 0.0
+            table.cov[slot, 4, 4] = 0.01**2
         else:
             with_slopes(features.own[slot], features.work[slot])
-            features.work_offset[slot] = features.own_offset[slot]
-            features.work_shape[slot] = features.shape[slot]
-            features.cov[slot, 4, 4] = max(features.cov[slot, 4, 4], 0.1**2)
-        features.anchor_uv[slot] = features.state[slot, :2]
-        features.updates[slot] = 0
+            table.work_offset[slot] = table.own_offset[slot]
+            table.work_warp[slot] = table.warp[slot]
+            table.cov[slot, 4, 4] = max(table.cov[slot, 4, 4], 0.1**2)
+        table.anchor_uv[slot] = table.state[slot, :2]
+        table.updates[slot] = 0
 
 
 def static_covariance(work: Array, shape: Array, radius: float, pixels_per_px2: float, level_sigma: float) -> Array:

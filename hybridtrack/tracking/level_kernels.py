@@ -8,9 +8,10 @@ by half a threshold, the hysteresis of the comparator, and the ramp does not.
 import numpy as np
 
 from hybridtrack.compiled import kernel
+from hybridtrack.tracking.feature_table import NEVER
 
 Array = np.ndarray
-NEVER = np.iinfo(np.int64).min // 4
+
 
 
 @kernel

@@ -16,8 +16,8 @@ import numpy as np
 from hybridtrack.errors import DegenerateDataError, NotCalibratedError
 from hybridtrack.module import HybridModule
 from hybridtrack.recording import Events
-from hybridtrack.tracking.feature_table import Levels
-from hybridtrack.tracking.level_kernels import NEVER, integrate_exposures
+from hybridtrack.tracking.feature_table import NEVER, PIXEL
+from hybridtrack.tracking.level_kernels import integrate_exposures
 from hybridtrack.tracking.log_light import LogLight
 
 Array = np.ndarray
@@ -74,8 +74,8 @@ def check_for_events(module: HybridModule) -> None:
         )
 
 
-def new_levels(module: HybridModule) -> Levels:
-    """Levels of a calibrated module, before the first frame."""
+def new_levels(module: HybridModule) -> np.recarray:
+    """Pixel records (rows, columns) of a calibrated module, before the first frame."""
     check_for_events(module)
     assert module.contrast is not None
     shape = module.event_grid.shape
@@ -88,38 +88,35 @@ def new_levels(module: HybridModule) -> Levels:
     height, width = module.frame_mode.shape
     usable[(frame_uv[..., 0] < 0) | (frame_uv[..., 0] > width - 1)] = 0
     usable[(frame_uv[..., 1] < 0) | (frame_uv[..., 1] > height - 1)] = 0
-    return Levels(
-        level=np.zeros(shape, np.float32),
-        anchor_ns=np.full(shape, NEVER, np.int64),
-        last_ns=np.full(shape, NEVER, np.int64),
-        fresh=np.ones(shape, np.uint8),
-        reference_ns=np.full(shape, NEVER, np.int64),
-        theta_on=np.full(shape, module.contrast.on_threshold, np.float32),
-        theta_off=np.full(shape, module.contrast.off_threshold, np.float32),
-        usable=usable,
-        frame_uv=frame_uv,
-    )
+    levels = np.zeros(shape, PIXEL).view(np.recarray)
+    levels.anchor_ns[:] = levels.last_ns[:] = levels.reference_ns[:] = NEVER
+    levels.fresh[:] = 1
+    levels.theta_on[:], levels.theta_off[:] = module.contrast.on_threshold, module.contrast.off_threshold
+    levels.usable[:] = usable
+    levels.u[:], levels.v[:] = frame_uv[..., 0], frame_uv[..., 1]
+    return levels
 
 
 class SharpPictures:
     """Makes sharp pictures of one module and sets its levels by them."""
 
-    def __init__(self, module: HybridModule, levels: Levels) -> None:
+    def __init__(self, module: HybridModule, levels: np.recarray) -> None:
         self._levels = levels
         self._always_usable = levels.usable.copy()
         mode = module.frame_mode
         columns, rows = np.meshgrid(np.arange(mode.width), np.arange(mode.height))
         event_xy = module.event_from_colour_px(mode.colour_from_frame(np.stack([columns, rows], axis=-1)))
         self._event_xy = np.ascontiguousarray(event_xy.astype(np.float32))
-        self._frame_uv = np.ascontiguousarray(levels.frame_uv.astype(np.float32))
+        self.frame_uv = np.stack([levels.u, levels.v], axis=-1)
+        self._theta_on, self._theta_off = (np.ascontiguousarray(theta) for theta in (levels.theta_on, levels.theta_off))
 
     def correction(self, events: Events, clock: FrameClock, instant_ns: Array | None, ramp_ns: int) -> tuple[Array, Array]:
         """The double integral's bracket (rows, columns) at the rows' middles, or at `instant_ns` (rows, columns); and each
         pixel's last event before that."""
-        start = clock.start_ns(self._levels.frame_uv[..., 1])
+        start = clock.start_ns(self.frame_uv[..., 1])
         instant = start + clock.exposure_ns // 2 if instant_ns is None else instant_ns
         bracket, count, last = integrate_exposures(
-            events.t, events.x, events.y, events.on, self._levels.theta_on, self._levels.theta_off,
+            events.t, events.x, events.y, events.on, self._theta_on, self._theta_off,
             start, clock.exposure_ns, instant, ramp_ns,
         )
         if instant_ns is None:
@@ -129,7 +126,7 @@ class SharpPictures:
 
     def instants(self, clock: FrameClock, share: float) -> Array:
         """When `share` of its row's exposure has passed, for each event pixel, int64 ns."""
-        return clock.start_ns(self._levels.frame_uv[..., 1]) + np.int64(share * clock.exposure_ns)
+        return clock.start_ns(self.frame_uv[..., 1]) + np.int64(share * clock.exposure_ns)
 
     def at_frame_pixels(self, light: LogLight, bracket: Array) -> Array:
         """Sharp log light (H, W) on the frame's grid."""
@@ -140,12 +137,12 @@ class SharpPictures:
 
     def set_levels(self, light: LogLight, clock: FrameClock, bracket: Array, last_ns: Array) -> None:
         """Set every pixel's level to the sharp picture at its row's middle of exposure."""
-        levels, u, v = self._levels, self._frame_uv[..., 0], self._frame_uv[..., 1]
+        levels, (u, v) = self._levels, np.moveaxis(self.frame_uv.astype(np.float32), -1, 0)
         blurred = cv2.remap(light.log_light, u, v, cv2.INTER_CUBIC, borderMode=cv2.BORDER_REPLICATE)
         trust = cv2.remap(light.trust, u, v, cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE)
         levels.level[:] = blurred - bracket
         levels.usable[:] = self._always_usable & (trust > 0.05)
-        middle = clock.middle_ns(levels.frame_uv[..., 1])
+        middle = clock.middle_ns(self.frame_uv[..., 1])
         levels.anchor_ns[:] = middle
         levels.reference_ns[:] = middle
         levels.last_ns[:] = last_ns

@@ -93,7 +93,7 @@ class Tracker:
         self._locator.remember(picture)
         if self._follower is not None and bracket is not None and last is not None:
             self._follower.restart(light, clock, bracket, last)
-            velocity = core.features.state[started, 2:4]
+            velocity = core.table.state[started, 2:4]
             core.slots.smear[started] = np.linalg.norm(velocity, axis=1) * clock.exposure_ns * 1e-9
         core.counters.frames += 1
         return lines
@@ -102,7 +102,7 @@ class Tracker:
         """Set the states of features that end at this frame; return their slots."""
         core, ended = self._core, []
         for e in expected:
-            position, cov = core.features.state[e.slot, :2], core.features.cov[e.slot]
+            position, cov = core.table.state[e.slot, :2], core.table.cov[e.slot]
             core.slots.at_frame[e.slot] = position
             sigma_px = core.mode.binning * float(np.sqrt(max(np.linalg.eigvalsh(cov[:2, :2])[1], 0.0)))
             if not core.inside(position):
@@ -128,10 +128,10 @@ class Tracker:
         slots = np.array(located + started, int)
         if not len(slots):
             return Tracks.empty()
-        cov = core.features.cov[slots]
+        cov = core.table.cov[slots]
         flat = np.stack([cov[:, 0, 0], cov[:, 0, 1], cov[:, 1, 1]], axis=1)
         source = {"hybrid": ts.FROM_BOTH, "frames": ts.FROM_FRAME, "events": ts.FROM_EVENTS}[self.options.mode]
-        lines = core.lines(slots, core.features.t_ns[slots], core.features.state[slots, :2], flat, source)
+        lines = core.lines(slots, core.table.t_ns[slots], core.table.state[slots, :2], flat, source)
         alone = np.isin(core.slots.reason[slots], (ts.FRAME_UNMATCHED, ts.FRAME_BLURRED, ts.SATURATED))
         lines.source[alone & (lines.source == ts.FROM_BOTH)] = ts.FROM_EVENTS
         lines.source[len(located) :] = ts.FROM_FRAME
@@ -141,28 +141,29 @@ class Tracker:
         """Take new own templates: where the frame is sharper than they are, or where they no longer fit."""
         core = self._core
         for e in expected:
-            if not core.features.active[e.slot]:
+            if not core.table.active[e.slot]:
                 continue
             slots = core.slots
             sharper = slots.state[e.slot] == ts.ALIVE and slots.smear[e.slot] > 1.0 and (
                 e.smear < SHARPER * slots.smear[e.slot]
             )
             if sharper or (self.options.mode != "events" and self._locator.needs_renewal(e.slot)):
-                self._matcher.take_own(e.slot, sharp, core.features.state[e.slot, :2])
+                self._matcher.take_own(e.slot, sharp, core.table.state[e.slot, :2])
                 slots.smear[e.slot] = e.smear
                 slots.missed[e.slot] = 0
 
     def _prepare(self, sharp: Array, clock: FrameClock) -> None:
         """Set what events are compared to until the next frame."""
-        core, features = self._core, self._core.features
-        density = abs(float(np.linalg.det(core.pace.event_from_frame[:, :2])))
+        core, table = self._core, self._core.table
+        pace = core.pace
+        density = abs(pace.x_u * pace.y_v - pace.x_v * pace.y_u)
         for slot in core.active():
-            remember(slot, features, core.pace)
+            remember(table[slot], core.pace)
             if self._follower is None:
                 continue
-            smear = float(np.linalg.norm(features.state[slot, 2:4])) * clock.exposure_ns * 1e-9
+            smear = float(np.linalg.norm(table.state[slot, 2:4])) * clock.exposure_ns * 1e-9
             usable = core.slots.reason[slot] in (ts.NONE, ts.STARTED) and smear < FRAME_PATCH_SMEAR_PX
             self._matcher.prepare_work(slot, sharp, from_frame=usable and self.options.mode == "hybrid")
-            features.static_cov[slot] = static_covariance(
-                features.work[slot], features.work_shape[slot], core.radius, density, features.level_sigma[slot]
+            table.static_cov[slot] = static_covariance(
+                core.features.work[slot], table.work_warp[slot], core.radius, density, table.level_sigma[slot]
             )
