@@ -199,6 +199,7 @@ def generate_board(recipe: BoardRecipe, out: Path | str, seed: int = 0, progress
                       lambda part: tell("events", part))
         clock = FrameClock.of_recipe(recipe.frames, setup.true)
         frames = BoardFrames(setup.true, BoardOptics.of_colour_pixels(setup.true, setup.scene),
+                             BoardOptics.of_frame_pixels(setup.true, setup.scene),
                              FrameSensor(setup.true, recipe.sensor, seed), setup.motion, setup.blink, setup.flicker,
                              1e9 * setup.target.scanout_s)
         record_frames(frames, clock, writer, lambda part: tell("frames", part))

@@ -13,11 +13,11 @@ from hybridtrack.synthesis.event_pixels import EventPixels
 from hybridtrack.synthesis.event_sink import EventSink
 
 Array = np.ndarray
-SWAY_STEP_NS = 5e6
+SWAY_STEP_NS = 6e6
 FINE_STEP_NS = 250e3
 SWEEP_STEP_NS = 250e3  # a screen's flip passes the picture, and is ramped over this long at each pixel
 STEPS_PER_FLICKER = 24
-MOVE_PX = 1.0  # of picture motion between renders
+MOVE_PX = 2.5  # of picture motion between renders on the way from view to view
 CUT_NS = 1000.0
 BLOCK_SAMPLES = 48
 

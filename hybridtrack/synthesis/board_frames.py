@@ -17,8 +17,9 @@ from hybridtrack.synthesis.frame_sensor import FrameSensor
 from hybridtrack.synthesis.recipe_parts import FrameRecipe
 
 Array = np.ndarray
-BLUR_PX = 0.7  # of picture motion between renders within an exposure
-MOST_RENDERS = 6
+BLUR_PX = 0.35  # of picture motion between renders within an exposure
+MOST_RENDERS = 5
+FAST_PX = 2.0  # from this motion in an exposure on, frame pixels are rendered whole
 BLOCK_FRAMES = 16
 
 
@@ -69,6 +70,7 @@ class BoardFrames:
 
     module: HybridModule
     optics: BoardOptics
+    quick_optics: BoardOptics
     sensor: FrameSensor
     motion: BoardMotion
     blink: Blink
@@ -86,34 +88,40 @@ class BoardFrames:
         add_exposure(starts, duration_ns, share, pictures, self.scanout_ns, pulse_a, pulse_b, self.blink.amplitude_dn,
                      self.blink.before_dn, self.blink.first_cycle, self.flicker, out)
 
-    def renders_needed(self, t0_ns: float, t1_ns: float, exposure_ns: float) -> int:
-        """How many pictures an exposure of rows from t0 to t1 needs; 0: one kept for the whole view will do."""
-        segments = self.motion.segments
+    def is_still(self, t0_ns: float, t1_ns: float) -> bool:
+        """Whether one picture of the view holds from t0 to t1."""
         first, last = self.motion.segment_at(np.array([t0_ns, t1_ns]))
-        if self.motion.is_still and first == last and not segments[first].is_move:
-            return 0
+        return bool(self.motion.is_still and first == last and not self.motion.segments[first].is_move)
+
+    def moved_px(self, t0_ns: float, t1_ns: float, exposure_ns: float) -> float:
+        """About how far the picture moves during an exposure that lies in t0..t1."""
         poses = self.motion.poses(np.linspace(t0_ns, t1_ns, 3))
         turn = np.linalg.norm(np.diff(poses[:, :3, :3], axis=0), axis=(1, 2)).sum() / np.sqrt(2)
         shift = np.linalg.norm(np.diff(poses[:, :3, 3], axis=0), axis=1).sum() / abs(poses[1, 2, 3])
-        moved_px = self.module.lens_model().fx * (turn + shift) * exposure_ns / (t1_ns - t0_ns)
-        return int(np.clip(np.ceil(moved_px / BLUR_PX), 2, MOST_RENDERS))
+        return float(self.module.lens_model().fx * (turn + shift) * exposure_ns / (t1_ns - t0_ns))
 
     def light(self, starts_ns: Array, exposure_ns: float) -> Array:
         """Mean light (rows, columns) in DN of a frame whose rows expose from `starts_ns` (rows,)."""
         mode = self.module.frame_mode
         out = np.zeros(mode.shape)
-        renders = self.renders_needed(starts_ns.min(), starts_ns.max() + exposure_ns, exposure_ns)
-        if renders == 0:
+        t0_ns, t1_ns = starts_ns.min(), starts_ns.max() + exposure_ns
+        if self.is_still(t0_ns, t1_ns):
             view = self.motion.segments[int(self.motion.segment_at(starts_ns[:1])[0])].view
             if view != self._view or self._pictures is None:
                 self._view, self._pictures = view, self._binned(self.motion.views[view], None)
             self._add(starts_ns, exposure_ns, 1.0 / exposure_ns, self._pictures, out)
             return out
+        moved_px = self.moved_px(t0_ns, t1_ns, exposure_ns)
+        renders = int(np.clip(np.ceil(moved_px / BLUR_PX), 1, MOST_RENDERS))
         colour_rows = np.arange(self.optics.shape[0])
         pose_rows = np.clip((colour_rows - mode.crop[1]) // mode.binning, 0, mode.height - 1)
         part = exposure_ns / renders
         for k in range(renders):
-            pictures = self._binned(self.motion.poses(starts_ns + (k + 0.5) * part), pose_rows)
+            poses = self.motion.poses(starts_ns + (k + 0.5) * part)
+            if moved_px < FAST_PX:
+                pictures = self._binned(poses, pose_rows)
+            else:
+                pictures = self.quick_optics.pictures(poses, np.arange(mode.height))
             self._add(starts_ns + k * part, part, 1.0 / exposure_ns, pictures, out)
         return out
 

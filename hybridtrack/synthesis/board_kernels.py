@@ -16,7 +16,7 @@ import numpy as np
 
 from hybridtrack.compiled import kernel
 
-REACH = 5.0  # in standard deviations; beyond it an edge is not seen
+REACH = 4.5  # in standard deviations; beyond it an edge is not seen
 NODES, WEIGHTS = np.polynomial.legendre.leggauss(10)
 
 SET_A, SET_B, DARK, MOUNT, BACKGROUND = 0, 1, 2, 3, 4
@@ -90,7 +90,8 @@ def picture_pixel(n, rays, rays_u, rays_v, poses, p, square, sets, sigma, levels
     r20, r21, r22 = poses[p, 2, 0], poses[p, 2, 1], poses[p, 2, 2]
     dx, dy, dz = rays[n, 0], rays[n, 1], rays[n, 2]
     rz = r20 * dx + r21 * dy + r22 * dz
-    scale = -poses[p, 2, 3] / rz
+    by_rz = 1.0 / rz
+    scale = -poses[p, 2, 3] * by_rz
     if not (scale > 0.0):  # the ray misses the board's plane, or the lens has no ray here
         out[STILL, n] = levels[BACKGROUND]
         return
@@ -99,7 +100,7 @@ def picture_pixel(n, rays, rays_u, rays_v, poses, p, square, sets, sigma, levels
     rx, ry = r00 * dx + r01 * dy + r02 * dz, r10 * dx + r11 * dy + r12 * dz
     x, y = poses[p, 0, 3] + scale * rx, poses[p, 1, 3] + scale * ry
     ux, uy, uz, vx, vy, vz = rays_u[n, 0], rays_u[n, 1], rays_u[n, 2], rays_v[n, 0], rays_v[n, 1], rays_v[n, 2]
-    zu, zv = (r20 * ux + r21 * uy + r22 * uz) / rz, (r20 * vx + r21 * vy + r22 * vz) / rz
+    zu, zv = (r20 * ux + r21 * uy + r22 * uz) * by_rz, (r20 * vx + r21 * vy + r22 * vz) * by_rz
     xu, xv = scale * (r00 * ux + r01 * uy + r02 * uz - rx * zu), scale * (r00 * vx + r01 * vy + r02 * vz - rx * zv)
     yu, yv = scale * (r10 * ux + r11 * uy + r12 * uz - ry * zu), scale * (r10 * vx + r11 * vy + r12 * vz - ry * zv)
     out[SWEEP, n] = min(max(sweep[0] + sweep[1] * x + sweep[2] * y, 0.0), 1.0)
@@ -134,6 +135,15 @@ def picture_pixel(n, rays, rays_u, rays_v, poses, p, square, sets, sigma, levels
         add_cell(out, n, class_of(sets, column, row), 1.0, levels, background)
 
 
+@kernel
+def picture_row(first, size, rays, rays_u, rays_v, gain, poses, p, square, sets, sigma, levels, waves, sweep, out):  # type: ignore[no-untyped-def]
+    """Write the pictures of `size` pixels from `first` on. See `picture_board`."""
+    for n in range(first, first + size):
+        picture_pixel(n, rays, rays_u, rays_v, poses, p, square, sets, sigma, levels, waves, sweep, out)
+        for picture in range(SWEEP):
+            out[picture, n] *= gain[n]
+
+
 @kernel(parallel=True)
 def picture_board(rays, rays_u, rays_v, gain, poses, pose_rows, width, square, sets, sigma, levels, waves, sweep, out):  # type: ignore[no-untyped-def]
     """Pictures `out` (PICTURES, N) of the board at N = rows * width pixels.
@@ -143,10 +153,8 @@ def picture_board(rays, rays_u, rays_v, gain, poses, pose_rows, width, square, s
     classes; `levels` (5,) DN of classes when not lit; `waves` (W, 4); `sweep` (3,): part of its way as 1, x, y.
     """
     for r in numba.prange(pose_rows.shape[0]):
-        for n in range(r * width, (r + 1) * width):
-            picture_pixel(n, rays, rays_u, rays_v, poses, pose_rows[r], square, sets, sigma, levels, waves, sweep, out)
-            for picture in range(SWEEP):
-                out[picture, n] *= gain[n]
+        picture_row(r * width, width, rays, rays_u, rays_v, gain, poses, pose_rows[r], square, sets, sigma, levels,
+                    waves, sweep, out)
 
 
 @kernel

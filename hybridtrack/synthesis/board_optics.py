@@ -36,11 +36,6 @@ class BoardScene:
     vignetting: float = 0.1
 
     @property
-    def sigma_px(self) -> float:
-        """Standard deviation of point spread and aperture together."""
-        return float(np.sqrt(self.psf_px**2 + 1.0 / 12.0))
-
-    @property
     def classes(self) -> Array:
         """The kernels' class of each square (rows, columns)."""
         sets = self.target.square_sets()
@@ -59,7 +54,7 @@ class BoardScene:
         return np.array(along[self.target.scan_direction], float)
 
 
-def background_waves(contrast: float, random: np.random.Generator, count: int = 5) -> Array:
+def background_waves(contrast: float, random: np.random.Generator, count: int = 3) -> Array:
     """A smooth random pattern of RMS `contrast`: (count, 4), wavelengths of 5 to 50 cm."""
     wavelength = 0.05 * 10 ** random.uniform(0, 1, count)
     direction, phase = random.uniform(0, 2 * np.pi, (2, count))
@@ -71,11 +66,14 @@ def background_waves(contrast: float, random: np.random.Generator, count: int = 
 class BoardOptics:
     """Renders pictures of a board at a grid of positions on the colour array."""
 
-    def __init__(self, module: HybridModule, scene: BoardScene, positions: Array, px_per_step: Array) -> None:
-        """`positions` (rows, columns, 2) colour px; `px_per_step` (2, 2): change of position per column and row."""
+    def __init__(self, module: HybridModule, scene: BoardScene, positions: Array, px_per_step: Array,
+                 aperture_px: float = 1.0) -> None:
+        """`positions` (rows, columns, 2) colour px; `px_per_step` (2, 2): change of position per column and row;
+        `aperture_px` is the side of each pixel's square."""
         self.scene, self.shape = scene, positions.shape[:2]
+        self.sigma_px = float(np.hypot(scene.psf_px, aperture_px / np.sqrt(12.0)))
         rays = module.lens_model().unproject(positions, allow_outside=True)
-        by_row, by_column = np.gradient(rays, axis=(0, 1))
+        by_row, by_column = np.gradient(rays, axis=(0, 1), edge_order=2)
         inverse = np.linalg.inv(px_per_step)  # ray_column = ray_u M[0, 0] + ray_v M[1, 0], and so on
         self._rays = np.ascontiguousarray(rays.reshape(-1, 3))
         self._rays_u = np.ascontiguousarray((by_column * inverse[0, 0] + by_row * inverse[1, 0]).reshape(-1, 3))
@@ -99,6 +97,12 @@ class BoardOptics:
         columns, rows = np.meshgrid(np.arange(module.colour_array.width), np.arange(module.colour_array.height))
         return cls(module, scene, np.stack([columns, rows], axis=-1).astype(float), np.eye(2))
 
+    @classmethod
+    def of_frame_pixels(cls, module: HybridModule, scene: BoardScene) -> "BoardOptics":
+        """At every frame pixel, its whole bin as one aperture: quick, and good enough where the picture is blurred."""
+        binning = module.frame_mode.binning
+        return cls(module, scene, module.frame_pixel_centres(), binning * np.eye(2), float(binning))
+
     def pictures(self, world_from_camera: Array, pose_rows: Array | None = None) -> Array:
         """Pictures (PICTURES, rows, columns), float32, of the board seen from poses (P, 4, 4).
 
@@ -111,5 +115,5 @@ class BoardOptics:
         out = np.empty((kernels.PICTURES, rows * columns), np.float32)
         poses = np.ascontiguousarray(np.asarray(world_from_camera, float).reshape(-1, 4, 4)[:, :3])
         picture_board(self._rays, self._rays_u, self._rays_v, self._gain, poses, which, columns,
-                      np.array(scene.square_m), scene.classes, scene.sigma_px, levels, scene.waves, scene.sweep, out)
+                      np.array(scene.square_m), scene.classes, self.sigma_px, levels, scene.waves, scene.sweep, out)
         return out.reshape(kernels.PICTURES, rows, columns)

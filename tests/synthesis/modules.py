@@ -15,7 +15,9 @@ from hybridtrack.module import (
 )
 
 
-def small_module(columns: int = 32, rows: int = 20, contrast: dict[str, Any] | None = None, **parts: Any) -> HybridModule:
+def small_module(
+    columns: int = 32, rows: int = 20, contrast: dict[str, Any] | None = None, **parts: Any
+) -> HybridModule:
     """A 4x4-cluster module without mismatch or noise; `contrast` and `parts` override."""
     cluster, grid = Cluster(width=4, height=4, clear_site=(2, 1)), EventGrid(width=columns, height=rows)
     thresholds: dict[str, Any] = {"on_threshold": 0.25, "off_threshold": 0.25, "on_spread": 0.0, "off_spread": 0.0,

@@ -160,7 +160,8 @@ def test_chance_of_an_event_is_the_normal_law(step: float) -> None:
 
 def test_thresholds_have_the_stated_median_and_spread() -> None:
     """The maps of true thresholds follow the module's medians and spreads."""
-    module = small_module(160, 100, contrast={"on_threshold": 0.3, "off_threshold": 0.2, "on_spread": 0.02, "off_spread": 0.01})
+    contrast = {"on_threshold": 0.3, "off_threshold": 0.2, "on_spread": 0.02, "off_spread": 0.01}
+    module = small_module(160, 100, contrast=contrast)
     pixels = EventPixels(module, seed=4)
     assert np.median(pixels.on_threshold) == pytest.approx(0.3, abs=0.001)
     assert np.std(pixels.on_threshold) == pytest.approx(0.02, rel=0.05)
@@ -210,7 +211,7 @@ def test_refusals() -> None:
         pixels.expose(np.array([0.0, 1.0]), np.ones((2, 3)))
     with pytest.raises(ShapeError, match="do not run backwards"):
         exposed(pixels, [1.0, 0.0], [1.0, 1.0])
-    with pytest.raises(OptionError, match="contrast.on_threshold"):
+    with pytest.raises(OptionError, match=r"contrast\.on_threshold"):
         EventPixels(small_module().model_copy(update={"contrast": None}))
     with pytest.raises(OptionError, match="tau_ns must be positive"):
         PixelPhysics(tau_ns=0.0)

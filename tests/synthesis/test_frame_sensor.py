@@ -11,7 +11,9 @@ from tests.synthesis.modules import small_module
 QUIET = SensorPhysics(electrons_per_dn=1e9, read_noise_e=0.0)
 
 
-def sensor(physics: SensorPhysics = QUIET, cluster: Cluster | None = None, seed: int = 0, **mode: object) -> FrameSensor:
+def sensor(
+    physics: SensorPhysics = QUIET, cluster: Cluster | None = None, seed: int = 0, **mode: object
+) -> FrameSensor:
     """A sensor of 128 x 80 colour pixels."""
     fields = {"width": 64, "height": 40, "binning": 2, **mode}
     parts = {"frame_mode": FrameMode(**fields), "colour_array": ColourArray(width=128, height=80)}  # type: ignore[arg-type]
@@ -104,7 +106,8 @@ def test_mosaic_fills_from_its_own_filter() -> None:
 
 def test_mosaic_gains_and_clear_pixel() -> None:
     """Each filter has its gain; an included clear pixel has that of W."""
-    physics = SensorPhysics(electrons_per_dn=1e9, read_noise_e=0.0, channel_gain={"R": 0.5, "G": 1.0, "B": 0.25, "W": 1.5})
+    gains = {"R": 0.5, "G": 1.0, "B": 0.25, "W": 1.5}
+    physics = SensorPhysics(electrons_per_dn=1e9, read_noise_e=0.0, channel_gain=gains)
     frames = sensor(physics, mosaic="RGGB", binning=1, width=128, height=80)
     image = frames.record(np.full((80, 128), 100.0), 0)
     assert (image[0, 0], image[0, 1], image[1, 0], image[1, 1]) == (50, 100, 100, 25)
@@ -139,6 +142,7 @@ def test_refusals() -> None:
     with pytest.raises(OptionError, match="square such as"):
         sensor(mosaic="RGB")
     with pytest.raises(OptionError, match="hold nothing else"):
-        sensor(cluster=Cluster(width=1, height=1, clear_site=(0, 0)), clear_in_frame="omitted").light_from_colour(ramp())
+        all_clear = Cluster(width=1, height=1, clear_site=(0, 0))
+        sensor(cluster=all_clear, clear_in_frame="omitted").light_from_colour(ramp())
     with pytest.raises(OptionError, match="electrons_per_dn"):
         SensorPhysics(electrons_per_dn=0.0)
