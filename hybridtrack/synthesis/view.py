@@ -81,6 +81,14 @@ class View:
         rays = self._rays(self.module.frame_pixel_centres(), float(mode.binning), frame_channels(self.module))
         return RayCaster(self.scene, rays)
 
+    @cached_property
+    def _event_gain(self) -> Array:
+        return self._gain(self._events)
+
+    @cached_property
+    def _frame_gain(self) -> Array:
+        return self._gain(self._frames)
+
     def _gain(self, caster: RayCaster) -> Array:
         return fall_off(self.module, caster.rays.positions, self.optics.vignetting) * np.float32(self.lamp.white_dn)
 
@@ -96,7 +104,7 @@ class View:
         the lamps' turning points. Every block starts where the one before ended.
         """
         caster = self._events
-        gain = self._gain(caster)
+        gain = self._event_gain
         looks = motion.instants_ns(t0_ns, t1_ns, STEP_PX, _LONGEST_STEP_NS)
         last_seen: Array | None = None
         for begin in range(0, len(looks) - 1, _STEPS_A_BLOCK):
@@ -144,9 +152,9 @@ class View:
         )
         stations = self.trajectory.poses(motion.instants_ns(first, last + exposure_ns, LIST_MARGIN_PX, np.inf))
         light = self._frames.exposures(exposure, stations)
-        return (light * self._gain(self._frames)).reshape(mode.shape)
+        return (light * self._frame_gain).reshape(mode.shape)
 
     def sharp_light(self, t_ns: float) -> Array:
         """Light (rows, columns) at one instant for every frame pixel, lamps at their mean: no blur, skew or flicker."""
         light = self._frames.instants(self.trajectory.poses(np.array([t_ns])))[0]
-        return (light * self._gain(self._frames)).reshape(self.module.frame_mode.shape)
+        return (light * self._frame_gain).reshape(self.module.frame_mode.shape)
