@@ -249,17 +249,62 @@ def settle(n, t, light, state, random, pixel, constants):  # type: ignore[no-unt
 
 
 @kernel
+def coast(n, k, t, light, state, pixel, constants):  # type: ignore[no-untyped-def]
+    """Carry pixel `n` on from sample `k` for as long as it neither fires nor draws noise nor needs sub-steps.
+
+    Returns the first sample left to `step`. Nearly all samples go this way: it does what `step` would, bit by bit, with
+    the pixel's state at hand and one logarithm a sample.
+    """
+    before, t0, level, reference = state[n, LIGHT], state[n, TIME], state[n, LEVEL], state[n, REFERENCE]
+    extreme, direction = state[n, EXTREME], state[n, DIRECTION]
+    if state[n, READY] != -np.inf or pixel[n, 3] != 0.0:
+        return k
+    rise = max(pixel[n, 0] - state[n, ON_NOISE], LEAST_THRESHOLD * pixel[n, 0])
+    fall = max(pixel[n, 1] - state[n, OFF_NOISE], LEAST_THRESHOLD * pixel[n, 1])
+    q = math.log(before)
+    while k < t.shape[0] and t[k] > t0 and state[n, NEXT_BACKGROUND] > t[k]:
+        now = max(light[k, n] + constants[DARK_LIGHT], LIGHT_FLOOR)
+        dt = t[k] - t0
+        if now == before:
+            if abs(level - q) < SETTLED:
+                t0, k = t[k], k + 1
+                continue
+            q_end = q
+        else:
+            q_end = math.log(now)
+            sub_steps = 1 + int(QUICK * dt / time_constant(0.5 * (now + before), constants))
+            if abs(q_end - q) >= LOG_STEP and sub_steps > 1:
+                break
+            if direction >= 0.0:
+                if q_end < extreme - REVERSAL * pixel[n, 1]:
+                    break
+                extreme = max(extreme, q_end)
+            else:
+                if q_end > extreme + REVERSAL * pixel[n, 0]:
+                    break
+                extreme = min(extreme, q_end)
+        tau = time_constant(now - 0.5 * (now - before), constants)
+        level_end = respond(level, q, (q_end - q) / dt, tau, dt)
+        if max(level, level_end) - reference >= rise or reference - min(level, level_end) >= fall:
+            break
+        level, q, before, t0, k = level_end, q_end, now, t[k], k + 1
+    state[n, LIGHT], state[n, TIME], state[n, LEVEL], state[n, EXTREME] = before, t0, level, extreme
+    return k
+
+
+@kernel
 def expose_pixel(n, t, light, start, state, random, pixel, constants, keys, count, base, shift):  # type: ignore[no-untyped-def]
     """Run pixel `n` through samples `t` (T,) of `light` (T, N); returns the event count."""
-    for k in range(t.shape[0]):
-        now = max(light[k, n] + constants[DARK_LIGHT], LIGHT_FLOOR)
-        if start and k == 0:
-            settle(n, t[k], now, state, random, pixel, constants)
-        elif (now == state[n, LIGHT] and pixel[n, 3] == 0.0 and state[n, NEXT_BACKGROUND] > t[k]
-                and state[n, READY] == -np.inf and abs(state[n, LEVEL] - math.log(now)) < SETTLED):
-            state[n, TIME] = t[k]  # at rest: nothing to do
-        else:
+    k = 0
+    if start:
+        settle(n, t[0], max(light[0, n] + constants[DARK_LIGHT], LIGHT_FLOOR), state, random, pixel, constants)
+        k = 1
+    while k < t.shape[0]:
+        k = coast(n, k, t, light, state, pixel, constants)
+        if k < t.shape[0]:
+            now = max(light[k, n] + constants[DARK_LIGHT], LIGHT_FLOOR)
             count = step(n, t[k], now, state, random, pixel, constants, keys, count, base, shift)
+            k += 1
     return count
 
 
