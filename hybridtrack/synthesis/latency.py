@@ -6,7 +6,8 @@
 
 for a flip from the dark to the bright level of the recording (with several levels: the highest), seen by an unloaded
 readout. It holds photoreceptor, comparator, constant delay and the reading of one row; what waiting for other events
-adds is left out.
+adds is left out. Where light rises slowly, as on a screen, the threshold may be passed before half way: the latency is
+then negative.
 """
 
 import numpy as np
