@@ -34,7 +34,7 @@ def run_demo(sequences: Path, folder: Path, seed: int, progress: Progress) -> De
     """Run everything into `folder`: recordings, calibrated module, tracks, trajectory and map."""
     folder.mkdir(parents=True, exist_ok=True)
     marks = [time.perf_counter()]
-    recordings = make_recordings(sequences, folder, seed, progress, "greenhouse_lap")
+    recordings = make_recordings(sequences, folder, seed, progress, "greenhouse_demo")
     marks.append(time.perf_counter())
     calibration, score = calibrate_board(recordings, progress)
     save_module(calibration.module, folder / "calibrated.module.json")
