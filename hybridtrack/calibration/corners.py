@@ -2,7 +2,7 @@
 
 Detection finds and names crossings. A rough lens and the poses then predict the picture around every inner corner,
 those beside steady dark squares included, whose crossings have but one bright square. In the cell around each corner
-a light model with known edge directions and blur, free position and four free levels is fitted to the difference of
+a light model with known edge directions and blur, free position, four free levels and a free shading is fitted to the difference of
 the bright and dark pictures. All edge pixels of the board enter, each once; distortion and perspective inside a cell
 are in the model, so that big cells are no less exact than small ones. """
 
@@ -13,10 +13,10 @@ import numpy as np
 
 from hybridtrack.calibration.apertures import Aperture, frame_aperture
 from hybridtrack.calibration.board_detection import Detection, detect_board, difference_picture
-from hybridtrack.calibration.board_view import BoardPlace, place_frame_pixels, project_board
+from hybridtrack.calibration.board_view import BoardPlace, place_frame_pixels, place_on_board, project_board
 from hybridtrack.calibration.lens_fit import fit_lens
 from hybridtrack.calibration.light_kernels import crossing_memberships
-from hybridtrack.calibration.view_data import BoardCorners, BoardSearch, LensFit, ViewImages
+from hybridtrack.calibration.view_data import BoardCorners, BoardSearch, Lens, LensFit, ViewImages
 from hybridtrack.calibration.view_light import ViewLight, fit_view_light
 from hybridtrack.errors import HybridtrackError
 from hybridtrack.module import HybridModule, Target
@@ -47,11 +47,13 @@ class _FramePicture:
 
 @dataclass(frozen=True)
 class _CellFit:
-    """Displacement (2,) px of the picture, its covariance (2, 2) and the cell's levels (q00, q10, q01, q11)."""
+    """Displacement (2,) px of the picture, its covariance (2, 2), the cell's levels (q00, q10, q01, q11), and the
+    slope (2,) per px of what shading the view's smooth contrast leaves."""
 
     shift: Array
     covariance: Array
     levels: Array
+    shading: Array
 
 
 def _cell_pixels(picture: _FramePicture, at_frame: Array, corner_m: Array, size_m: Array, binning: int) -> Array:
@@ -85,48 +87,65 @@ def _position_slopes(members: Array, levels: Array) -> Array:
     return np.asarray((q10 - q00) * members[:, 3:5] + (q01 - q00) * members[:, 6:8] + d11 * members[:, 9:11])
 
 
+def _pixel_offsets(place: BoardPlace, corner_m: Array) -> Array:
+    """Offsets (N, 2) in px of pixels from the corner, to first order."""
+    return np.linalg.solve(place.gradient, (place.xy_m - corner_m)[..., None])[..., 0]
+
+
 def _fit_cell(picture: _FramePicture, index: Array, corner_m: Array) -> _CellFit | None:
-    """Fit displacement and levels in one cell; None where the picture does not fix them."""
+    """Fit displacement, levels and shading in one cell; None where the picture does not fix them.
+
+    A shading left out moves edges by its slope times the cell's width. One that is there before the blur moves them
+    besides by sigma^2 grad ln(shading), sigma being that of blur and aperture together.
+    """
     place, kind = picture.place[index], picture.aperture.kind.ravel()[index]
     value, weight = picture.value[index], 1.0 / picture.sigma[index]
-    members, shift = np.empty((len(index), 12)), np.zeros(2)
+    members, shift, offset = np.empty((len(index), 12)), np.zeros(2), _pixel_offsets(place, corner_m)
+    shading = np.zeros(2)
     board, gradient = np.ascontiguousarray(place.xy_m), np.ascontiguousarray(place.gradient)
     for _ in range(_STEPS):
         crossing_memberships(board, gradient, picture.aperture.nodes, picture.aperture.weights, kind,
                              np.asarray(corner_m, float), shift, picture.blur_px, members)  # fmt: skip
-        design = _levels_design(members)
+        design = _levels_design(members) * (1.0 + offset @ shading)[:, None]
         if np.any(design.sum(0) < 3.0):
             return None
         normal = design.T @ (design * weight[:, None] ** 2)
         levels = np.linalg.solve(normal, design.T @ (value * weight**2))
         slopes = -_position_slopes(members, levels)  # moving the picture by +shift moves pixels by -shift
-        full = np.concatenate([slopes, design], axis=1) * weight[:, None]
+        light = design @ levels
+        full = np.concatenate([slopes, design, light[:, None] * offset], axis=1) * weight[:, None]
         normal = full.T @ full
-        left = (value - design @ levels) * weight
+        left = (value - light) * weight
         if normal[0, 0] * normal[1, 1] - normal[0, 1] ** 2 < 1e-4 * np.trace(normal[:2, :2]) ** 2:
             return None
         try:
             inverse = np.linalg.inv(normal)
         except np.linalg.LinAlgError:
             return None
-        step = (inverse @ (full.T @ left))[:2]
-        shift = shift + np.clip(step, -1.0, 1.0)
+        change = inverse @ (full.T @ left)
+        step = change[:2]
+        shift, shading = shift + np.clip(step, -1.0, 1.0), shading + np.clip(change[6:], -0.01, 0.01)
         if np.hypot(*shift) > _MOST_MOVED_PX:
             return None
         if np.hypot(*step) < 1e-3:
             break
-    left = left - full[:, :2] @ step
-    excess = float(left @ left) / max(len(left) - 6, 1)
+    left = left - full @ change
+    excess = float(left @ left) / max(len(left) - 8, 1)
     # Scatter of a few hundred pixels measures the noise; the floor is for pictures without any.
     excess = max(excess, 1e-4)
-    return _CellFit(shift, inverse[:2, :2] * excess, levels)
+    return _CellFit(shift, inverse[:2, :2] * excess, levels, shading)
+
+
+def _contrast(light: ViewLight, place: BoardPlace, target: Target) -> Array:
+    """Step (N,) of the difference picture across an edge of set A, smooth over the board."""
+    bright, dark = light.levels(place, target)
+    return np.asarray((bright[:, 0] - dark[:, 0]) - (bright[:, 1] - dark[:, 1]))
 
 
 def _frame_picture(view: ViewImages, place: BoardPlace, aperture: Aperture, light: ViewLight,
                    target: Target) -> _FramePicture:
     """The difference picture over its smooth contrast across the edges of set A."""
-    bright, dark = light.levels(place, target)
-    step = (bright[:, 0] - dark[:, 0]) - (bright[:, 1] - dark[:, 1])
+    step = _contrast(light, place, target)
     usual = np.nanmedian(np.abs(step[np.isfinite(step)]))
     step = np.where(np.abs(step) > 0.2 * usual, step, np.nan)
     value = (view.bright_dn - view.dark_dn).ravel() / step
@@ -134,6 +153,14 @@ def _frame_picture(view: ViewImages, place: BoardPlace, aperture: Aperture, ligh
     # One per cent of the contrast: what levels, blur and linearity leave even in a picture without noise.
     sigma = np.hypot(np.where(np.isfinite(noise), noise, 1.0), 0.01)
     return _FramePicture(value, sigma, place, aperture, view.bright_dn.shape, light.blur_px)
+
+
+def _contrast_slope(light: ViewLight, lens: Lens, pose: Array, uv: Array, target: Target) -> Array:
+    """d ln(contrast) / d uv (N, 2) of the view's smooth contrast at corners `uv` (N, 2)."""
+    known = np.isfinite(uv).all(1)
+    place = place_on_board(lens, pose, np.where(known[:, None], uv, 0.0))
+    ends = [np.log(np.abs(_contrast(light, place.moved(move), target))) for move in (*np.eye(2), *-np.eye(2))]
+    return np.where(known[:, None], 0.5 * np.stack([ends[0] - ends[2], ends[1] - ends[3]], axis=1), np.nan)
 
 
 def _refine_view(view: ViewImages, board: BoardCorners, lens_fit: LensFit, target: Target,
@@ -151,6 +178,8 @@ def _refine_view(view: ViewImages, board: BoardCorners, lens_fit: LensFit, targe
     uv = project_board(lens_fit.lens, pose, ij * size)
     at_frame = mode.frame_from_colour(uv)
     seen = np.all(np.isfinite(at_frame) & (at_frame > 1.0) & (at_frame < [mode.width - 2, mode.height - 2]), axis=1)
+    slope = _contrast_slope(light, lens_fit.lens, pose, uv, target)
+    spread = np.hypot(light.blur_px, mode.binning / np.sqrt(12.0))
     kept, positions, covariances = [], [], []
     for n in np.flatnonzero(seen):
         index = _cell_pixels(picture, at_frame[n], ij[n] * size, size, mode.binning)
@@ -158,7 +187,7 @@ def _refine_view(view: ViewImages, board: BoardCorners, lens_fit: LensFit, targe
         if fit is None or np.ptp(fit.levels) < _LEAST_EDGE or not np.all(np.isfinite(fit.covariance)):
             continue
         kept.append(ij[n])
-        positions.append(uv[n] + fit.shift)
+        positions.append(uv[n] + fit.shift + spread**2 * (fit.shading + slope[n]))
         covariances.append(fit.covariance)
     if len(kept) < 4:
         return board

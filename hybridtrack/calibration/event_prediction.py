@@ -28,7 +28,8 @@ class PixelPlaces:
     """The event pixels of one view that take part.
 
     `pixel` (N,): reading-order index on the event grid; `count` (N,): measured amplitude; `place`: where they look on
-    the board; `levels_1`, `levels_2` (N, K): light of the classes of squares there in the two states.
+    the board; `levels_1`, `levels_2` (N, K): light of the classes of squares there in the two states, and `slopes_1`,
+    `slopes_2` (N, K, 2) per px.
     """
 
     view: int
@@ -37,13 +38,16 @@ class PixelPlaces:
     place: BoardPlace
     levels_1: Array
     levels_2: Array
+    slopes_1: Array
+    slopes_2: Array
     squares: Array
     blur_px: float
 
     def only(self, keep: Array) -> "PixelPlaces":
         """The pixels at the given indices, or where the given mask holds."""
         return replace(self, pixel=self.pixel[keep], count=self.count[keep], place=self.place[keep],
-                       levels_1=self.levels_1[keep], levels_2=self.levels_2[keep])  # fmt: skip
+                       levels_1=self.levels_1[keep], levels_2=self.levels_2[keep],
+                       slopes_1=self.slopes_1[keep], slopes_2=self.slopes_2[keep])  # fmt: skip
 
 
 @dataclass(frozen=True)
@@ -67,6 +71,15 @@ def _taking_part(place: BoardPlace, target: Target, blur_px: float, seed: int) -
     return np.asarray(near | (np.random.default_rng(seed).random(len(near)) < _FLAT_SHARE))
 
 
+def _level_slopes(light: ViewLight, place: BoardPlace, target: Target) -> tuple[Array, Array]:
+    """d level / d uv (N, K, 2) of every class in the bright and in the dark state."""
+    u_ahead, u_back, v_ahead, v_back = (
+        light.levels(place.moved(np.array(move)), target) for move in ((1, 0), (-1, 0), (0, 1), (0, -1))
+    )
+    slopes = [np.stack([u_ahead[s] - u_back[s], v_ahead[s] - v_back[s]], axis=-1) / 2.0 for s in (0, 1)]
+    return slopes[0], slopes[1]
+
+
 def choose_pixels(view: ViewImages, light: ViewLight, lens_fit: LensFit, pose: Array, target: Target,
                   uv: Array) -> PixelPlaces:
     """The event pixels of one view that look at the board from colour positions `uv` (He, We, 2)."""
@@ -76,8 +89,9 @@ def choose_pixels(view: ViewImages, light: ViewLight, lens_fit: LensFit, pose: A
     place = place[pixel]
     levels_1, levels_2 = light.levels(place, target)
     least = _LEAST_LIGHT * float(np.percentile(np.maximum(levels_1, levels_2), 99)) if len(pixel) else 0.0
+    slopes = _level_slopes(light, place, target)
     return PixelPlaces(view.index, pixel, count[pixel], place, np.maximum(levels_1, least),
-                       np.maximum(levels_2, least), light.squares, light.blur_px)  # fmt: skip
+                       np.maximum(levels_2, least), *slopes, light.squares, light.blur_px)  # fmt: skip
 
 
 def predict_steps(places: PixelPlaces, target: Target, shift_px: Array, blur_factor: float) -> PixelSteps:
@@ -85,8 +99,12 @@ def predict_steps(places: PixelPlaces, target: Target, shift_px: Array, blur_fac
     aperture = one_pixel_aperture((len(places.pixel),))
     blur = places.blur_px * blur_factor
     share = class_fractions(places.place.moved(shift_px), aperture, blur, target, places.squares)
-    light_1 = np.sum(places.levels_1 * share[..., 0], axis=1)
-    light_2 = np.sum(places.levels_2 * share[..., 0], axis=1)
+    # Shaded before it is blurred, an edge moves by sigma^2 grad ln(level): to first order in the slopes of the levels.
+    spread = blur**2 + 1.0 / 12.0
+    moved = spread * share[..., 1:3]
+    light_1 = np.sum(places.levels_1 * share[..., 0], axis=1) + np.sum(places.slopes_1 * moved, axis=(1, 2))
+    light_2 = np.sum(places.levels_2 * share[..., 0], axis=1) + np.sum(places.slopes_2 * moved, axis=(1, 2))
+    light_1, light_2 = np.maximum(light_1, 1e-9), np.maximum(light_2, 1e-9)
     rate = places.levels_1 / light_1[:, None] - places.levels_2 / light_2[:, None]
     d_uv = np.einsum("nk,nkj->nj", rate, share[..., 1:3])
     d_blur = np.einsum("nk,nk->n", rate, share[..., 3])
