@@ -146,8 +146,9 @@ def accumulate(
             if not pixel.usable:
                 continue
             fresh = pixel.fresh != 0
-            new = not fresh and pixel.anchor_ns > since_ns
-            age = (t_ns - pixel.anchor_ns) * 1e-9 if new else 0.0
+            new = not fresh and pixel.last_ns > since_ns
+            # What a silent pixel has not reported yet is light of one lag ago.
+            age = (t_ns - pixel.anchor_ns if new else pace.lag_ns) * 1e-9
             d_u, d_v = pixel.u - x[0] + age * x[2], pixel.v - x[1] + age * x[3]
             s_u, s_v = i00 * d_u + i01 * d_v, i10 * d_u + i11 * d_v
             reach = max(abs(s_u), abs(s_v))
@@ -159,13 +160,13 @@ def accumulate(
             if share == 0.0:
                 continue
             taper = share * min(1.0, pace.radius - reach)
+            grad_u, grad_v = i00 * sampled[1] + i10 * sampled[2], i01 * sampled[1] + i11 * sampled[2]  # (2)
             # Huber's weight: an outlier is bounded, yet keeps pulling, so that a wrong velocity gives way.
             weight = taper / max(1.0, abs(residual) / (2.0 * sigma)) / (sigma * sigma)
             if new:
                 fired += 1
                 squares += taper * min(residual * residual, 9.0 * sigma * sigma)
                 weights += taper
-            grad_u, grad_v = i00 * sampled[1] + i10 * sampled[2], i01 * sampled[1] + i11 * sampled[2]  # (2)
             # Derivatives of the prediction m: the residual's with the sign turned.
             jac[0], jac[1], jac[2], jac[3], jac[4] = -grad_u, -grad_v, age * grad_u, age * grad_v, 1.0
             for i in range(STATE_SIZE):
@@ -268,17 +269,18 @@ def write_line(feature: Record, out: Array, line: int) -> None:
 
 
 @kernel
-def apply_event(pixel: Record, t_ns: int, on: int, ramp_ns: int) -> None:
+def apply_event(pixel: Record, t_ns: int, on: int, ramp_ns: int, pace: Pace) -> None:
     """Move one pixel's level by an event after the last frame's instant."""
+    light_ns = t_ns - pace.lag_ns
     step = float(pixel.theta_on) if on else -float(pixel.theta_off)
     if pixel.fresh:
         # Part of the first step had been made when the frame was taken: the light ramps from event to event.
-        begin = max(pixel.last_ns, t_ns - ramp_ns)
+        begin = max(pixel.last_ns - pace.lag_ns, light_ns - ramp_ns)
         if pixel.reference_ns > begin:
-            step *= (t_ns - pixel.reference_ns) / (t_ns - begin)
+            step *= (light_ns - pixel.reference_ns) / (light_ns - begin)
         pixel.fresh = 0
     pixel.level += step
-    pixel.anchor_ns = t_ns
+    pixel.anchor_ns = light_ns
     pixel.last_ns = t_ns
 
 
@@ -314,8 +316,8 @@ def advance(
         now = clock[0]
         while k < count and t[k] <= now:
             pixel = levels[y[k], x[k]]
-            if t[k] > pixel.reference_ns:
-                apply_event(pixel, t[k], on[k], ramp_ns)
+            if t[k] - pace.lag_ns > pixel.reference_ns:
+                apply_event(pixel, t[k], on[k], ramp_ns, pace)
                 used += 1
             k += 1
         if now >= until_ns:

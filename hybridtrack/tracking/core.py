@@ -5,7 +5,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from hybridtrack.module import FrameMode, HybridModule
-from hybridtrack.tracking.feature_table import Features, Pace, new_features
+from hybridtrack.tracking.feature_table import Features, FeatureTable, Pace, new_features
 from hybridtrack.tracking.options import TrackerOptions
 from hybridtrack.tracking.track_state import ALIVE, LEFT_PICTURE, OUT_OF_VIEW
 from hybridtrack.tracking.tracks_file import Tracks
@@ -57,7 +57,7 @@ class Core:
         return self.module.frame_mode
 
     @property
-    def table(self) -> np.recarray:
+    def table(self) -> FeatureTable:
         """The features' records."""
         return self.features.table
 
@@ -118,7 +118,7 @@ def new_pace(module: HybridModule, options: TrackerOptions, radius: float) -> Pa
         acceleration_time_s=0.01, speed_memory_s=0.1, gain_rate=0.5, level_discount=0.5, slack=1.2, slack_fresh=1.6,
         output_ns=base * parts,
         history_ns=LONGEST_EXPOSURE_NS // 150, base_ns=base, shortest_ns=int(1e9 / options.fastest_rate_hz), step_px=1.0,
-        surprise=9.0, measuring=0,
+        surprise=9.0, lag_ns=0, measuring=0,
     )
 
 

@@ -9,6 +9,7 @@ from hybridtrack.tracking.advance_kernels import advance
 from hybridtrack.tracking.core import Core
 from hybridtrack.tracking.event_buffer import EventBuffer
 from hybridtrack.tracking.event_gaps import EventGaps
+from hybridtrack.tracking.event_lag import EventLag
 from hybridtrack.tracking.light_levels import FrameClock, SharpPictures, new_levels
 from hybridtrack.tracking.log_light import LogLight
 from hybridtrack.tracking.tracks_file import Tracks
@@ -28,6 +29,7 @@ class EventFollower:
         self._buffer = EventBuffer(core.options.buffered_events)
         self._gaps = EventGaps(core.options.flash_log_step, self.levels.theta_on, self.levels.theta_off)
         self._latency_ns = int(core.module.known_timing().event_latency_ns or 0)
+        self.lag = EventLag()
         self._measuring = False
         self._now_ns: int | None = None
         self._clock = np.zeros(2, np.int64)
@@ -90,9 +92,10 @@ class EventFollower:
         until = int(events.t[-1])
         room = active * (max(until - int(self._clock[0]), 0) // core.pace.output_ns + 2) if record else 0
         slot, when, rows = np.zeros(room, np.int64), np.zeros(room, np.int64), np.zeros((room, 5))
+        pace = core.pace._replace(measuring=int(self._measuring), lag_ns=self.lag.ns)
         written, used = advance(
-            events.t, events.x, events.y, events.on, until, self._ramp_ns(), self.levels, core.table, core.features.work,
-            core.pace._replace(measuring=int(self._measuring)), self._clock, slot, when, rows,
+            events.t, events.x, events.y, events.on, until, self._ramp_ns(), self.levels, core.table.records, core.features.work,
+            pace, self._clock, slot, when, rows,
         )
         core.counters.events_used += used if record else 0
         return core.lines(slot[:written], when[:written], rows[:written, :2], rows[:written, 2:], ts.FROM_EVENTS)
@@ -104,7 +107,7 @@ class EventFollower:
 
     def bracket(self, clock: FrameClock, instant_ns: Array | None = None) -> tuple[Array, Array]:
         """The double integral's correction on the event grid and each pixel's last event, see `SharpPictures`."""
-        bracket, last = self._pictures.correction(self.exposure_events(clock), clock, instant_ns, self._ramp_ns())
+        bracket, last = self._pictures.correction(self.exposure_events(clock), clock, instant_ns, self._ramp_ns(), self.lag.ns)
         if self._gaps.overlaps(*clock.span_ns):
             bracket = np.zeros_like(bracket)
         return bracket, last
@@ -114,12 +117,18 @@ class EventFollower:
         events = self._buffer.since(clock.span_ns[0])
         start = clock.start_ns(self.levels.v[events.y, events.x])
         events = events[(events.t >= start) & (events.t < start + clock.exposure_ns)]
-        where = self._pictures.frame_uv[events.y, events.x]
-        pixels = self._pictures.frame_uv[self.levels.usable > 0]
-        counts = [
-            [int(np.sum(np.abs(points - position).max(axis=-1) <= radius)) for points in (where, pixels)] for position in uv
-        ]
-        return np.array(counts)[:, 0], np.array(counts)[:, 1]
+        grid = self._pictures.frame_uv
+        height, width = self._core.mode.shape
+        sums = []
+        for points in (grid[events.y, events.x], grid[self.levels.usable > 0]):
+            at = np.clip(np.rint(points).astype(np.int64), 0, [width - 1, height - 1])
+            image = np.bincount(at[:, 1] * width + at[:, 0], minlength=height * width).reshape(height, width)
+            sums.append(np.pad(image, ((1, 0), (1, 0))).cumsum(axis=0).cumsum(axis=1))
+        low = np.clip(np.rint(uv - radius).astype(int), 0, [width, height])
+        high = np.clip(np.rint(uv + radius).astype(int) + 1, 0, [width, height])
+        (u0, v0), (u1, v1) = low.T, high.T
+        counts, pixels = (s[v1, u1] - s[v0, u1] - s[v1, u0] + s[v0, u0] for s in sums)
+        return counts, pixels
 
     def sharp_at(self, light: LogLight, clock: FrameClock, share: float | None = None, t_ns: int = 0) -> Array:
         """Sharp log light (H, W) when `share` of each row's exposure has passed, or all rows at `t_ns`."""
@@ -136,7 +145,7 @@ class EventFollower:
         """Set the levels by a frame, and run the events since its first row's middle again over the features as they
         are then."""
         middles = clock.middle_ns(np.array([0.0, clock.height - 1.0]))
-        self._pictures.set_levels(light, clock, bracket, last_ns)
+        self._pictures.set_levels(light, clock, bracket, last_ns, self.lag.ns)
         begin = int(middles.min())
         now = begin if self._now_ns is None else max(self._now_ns, begin)
         self._measuring = not self._gaps.overlaps(begin, now)

@@ -16,7 +16,7 @@ NEVER = np.iinfo(np.int64).min // 4
 PIXEL = np.dtype(
     [
         ("level", "f8"),  # log light at the anchor
-        ("anchor_ns", "i8"),  # when it had that level: the last event, or the last frame's instant
+        ("anchor_ns", "i8"),  # when its light had that level: before the last event, or the last frame's instant
         ("last_ns", "i8"),  # stamp of the last event
         ("reference_ns", "i8"),  # the last frame's instant; events up to it are part of the level
         ("u", "f8"),  # where the pixel looks, frame px
@@ -87,21 +87,37 @@ class Pace(NamedTuple):
     shortest_ns: int
     step_px: float  # movement between updates that is aimed at
     surprise: float  # squared deviations of an update from its prediction at which the velocity is doubted
+    lag_ns: int  # of an event behind its light, see `event_lag`
     measuring: int  # 0: coast only
 
 
+class FeatureTable:
+    """The records of all slots, and views of their fields made once: looking a field up anew is slow in Python."""
+
+    def __init__(self, capacity: int) -> None:
+        self.records = np.zeros(capacity, FEATURE).view(np.recarray)
+        self.rows: list[np.record] = [self.records[k] for k in range(capacity)]
+        plain = self.records.view(np.ndarray)
+        self.active, self.from_frame = plain["active"], plain["from_frame"]
+        self.t_ns, self.state, self.cov = plain["t_ns"], plain["state"], plain["cov"]
+        self.warp, self.own_offset = plain["warp"], plain["own_offset"]
+        self.work_warp, self.work_offset = plain["work_warp"], plain["work_offset"]
+        self.level_sigma, self.recent_speed = plain["level_sigma"], plain["recent_speed"]
+        self.static_cov, self.anchor_uv, self.updates = plain["static_cov"], plain["anchor_uv"], plain["updates"]
+        self.history_t, self.history_next = plain["history_t"], plain["history_next"]
+        self.history_t[:] = FORGOTTEN
+
+
 class Features(NamedTuple):
-    """Every feature slot: `table` (M,) of FEATURE, `own` (M, S, S) float32 log light around each where it was best
+    """Every feature slot: `table` of M records, `own` (M, S, S) float32 log light around each where it was best
     seen, `work` (M, S, S, 3) float32 what events are compared to, log light and its two slopes."""
 
-    table: np.recarray
+    table: FeatureTable
     own: Array
     work: Array
 
 
 def new_features(capacity: int, template_size: int) -> Features:
     """Empty slots."""
-    table = np.zeros(capacity, FEATURE).view(np.recarray)
-    table.history_t[:] = FORGOTTEN
     size = (capacity, template_size, template_size)
-    return Features(table, np.zeros(size, np.float32), np.zeros((*size, 3), np.float32))
+    return Features(FeatureTable(capacity), np.zeros(size, np.float32), np.zeros((*size, 3), np.float32))

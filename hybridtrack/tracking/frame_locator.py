@@ -10,8 +10,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from hybridtrack.tracking import track_state as ts
-from hybridtrack.tracking.advance_kernels import observe_position, predict, rewind, trajectory
+from hybridtrack.tracking.advance_kernels import observe_position, rewind, trajectory
 from hybridtrack.tracking.core import Core
+from hybridtrack.tracking.event_lag import LEAST_SPEED, EventLag
 from hybridtrack.tracking.frame_step import FrameMatcher, Match, pyramidal_flow
 from hybridtrack.tracking.light_levels import FrameClock
 from hybridtrack.tracking.log_light import LogLight
@@ -22,6 +23,7 @@ ALWAYS_AGREE_PX = 0.5
 FLOW_SIGMA_PX = 0.3  # deviation of pyramidal Lucas-Kanade from frame to frame
 FLOW_AGREES_PX = 1.5
 SMEAR_DIFFERENCE_PX = 0.35
+TRAIL_SIGMA_PX = 1.0  # spread of features about their common lag, in position
 RENEW_AFTER_FRAMES = 3
 MISS_SIGMA_PX, MISS_SIGMA_PX_S = 1.0, 100.0  # doubt of position and velocity that a frame without the feature adds
 SURE_CORRELATION = 0.85
@@ -41,14 +43,15 @@ class Expectation:
 class FrameLocator:
     """Locates features frame by frame."""
 
-    def __init__(self, core: Core, matcher: FrameMatcher) -> None:
-        self._core, self._matcher = core, matcher
+    def __init__(self, core: Core, matcher: FrameMatcher, lag: EventLag | None) -> None:
+        self._core, self._matcher, self._lag = core, matcher, lag
+        self._trails: list[tuple[float, float]] = []
         self._picture: Array | None = None
 
     def expect(self, slot: int, clock: FrameClock) -> Expectation | None:
         """Take a feature to its row's middle of exposure; None where it only started after that."""
-        record, position = self._core.table[slot], np.zeros((1, 2))
-        position[0] = record.state[:2]
+        record, position = self._core.table.rows[slot], np.zeros((1, 2))
+        position[0] = self._core.table.state[slot, :2]
         t_ns = 0
         for _ in range(4):
             t_ns = int(clock.middle_ns(np.clip(position[0, 1], -0.5, clock.height - 0.5)))
@@ -56,7 +59,7 @@ class FrameLocator:
         path = self._matcher.path(slot, clock, t_ns)
         if not rewind(record, t_ns, self._core.pace):
             return None
-        return Expectation(slot, t_ns, record.state[:2].copy(), path, self._matcher.smear_px(path))
+        return Expectation(slot, t_ns, self._core.table.state[slot, :2].copy(), path, self._matcher.smear_px(path))
 
     def locate(self, light: LogLight, clock: FrameClock, picture: Array) -> list[Expectation]:
         """Locate all features; return what was expected of those that the frame concerns."""
@@ -68,9 +71,24 @@ class FrameLocator:
         rest = [e for e in expected if not self._try_own(e, light, flow.get(e.slot))]
         if self._core.options.mode == "hybrid":
             flow = self._flow(rest, picture)
+        self._learn_lag()
         for e in rest:
             self._second_try(e, light, flow.get(e.slot))
         return expected
+
+    def _note_trail(self, e: Expectation, match: Match) -> None:
+        """Keep by how much time a moving feature trailed its frame, and the deviation of that."""
+        velocity = self._core.table.state[e.slot, 2:4]
+        speed = float(np.hypot(*velocity))
+        if speed > LEAST_SPEED and self._core.slots.reason[e.slot] != ts.STARTED:
+            trail = float((match.position - e.position) @ velocity) / speed**2
+            self._trails.append((trail, TRAIL_SIGMA_PX / speed))
+
+    def _learn_lag(self) -> None:
+        if self._lag is not None and self._trails:
+            trail_s, sigma_s = (np.array(column) for column in zip(*self._trails, strict=True))
+            self._lag.learn(trail_s, sigma_s)
+        self._trails.clear()
 
     def remember(self, picture: Array) -> None:
         """Keep a frame for Lucas-Kanade to the next one; positions are the slots' `at_frame`."""
@@ -113,6 +131,7 @@ class FrameLocator:
             return False
         if flow is None and not self._agrees(e, match):
             return False
+        self._note_trail(e, match)
         self._accept(e, match, ts.ALIVE, ts.NONE)
         return True
 
@@ -129,7 +148,7 @@ class FrameLocator:
             self._accept(e, match, ts.WEAK, ts.FRAME_DISAGREES)
         elif self._core.options.mode == "frames" or self._agrees(e, _flow_match(flow)):
             self._widen(e, flow)
-            observe_position(self._core.table[e.slot], flow[0], flow[1], FLOW_SIGMA_PX**2, 0.0, FLOW_SIGMA_PX**2)
+            observe_position(self._core.table.rows[e.slot], flow[0], flow[1], FLOW_SIGMA_PX**2, 0.0, FLOW_SIGMA_PX**2)
             self._core.slots.missed[e.slot] += 1
             self._mark(e.slot, ts.WEAK, ts.FRAME_UNMATCHED)
         else:
@@ -148,7 +167,7 @@ class FrameLocator:
         """Join a match to the filter."""
         table = self._core.table
         table.cov[e.slot, :2, :2] += table.static_cov[e.slot]
-        observe_position(table[e.slot], *match.position, *match.cov)
+        observe_position(table.rows[e.slot], *match.position, *match.cov)
         # The template's own noise is in every frame's match and does not average out.
         floor = 0.5 * match.cov
         for k, value in ((0, floor[0]), (1, floor[2])):

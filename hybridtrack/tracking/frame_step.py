@@ -71,7 +71,7 @@ class FrameMatcher:
         half = clock.exposure_ns * (1.0 - 1.0 / count) * 0.5
         times = (middle_ns + np.linspace(-half, half, count)).astype(np.int64)
         path = np.zeros((count, 2))
-        trajectory(self._features.table[slot], times, path)
+        trajectory(self._features.table.rows[slot], times, path)
         return path
 
     def smear_px(self, path: Array) -> float:

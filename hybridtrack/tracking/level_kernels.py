@@ -51,15 +51,15 @@ def ramp_integral(
 
 @kernel
 def integrate_exposures(
-    t: Array, x: Array, y: Array, on: Array, theta_on: Array, theta_off: Array,
+    t: Array, x: Array, y: Array, on: Array, theta_on: Array, theta_off: Array, lag_ns: int,
     start_ns: Array, exposure_ns: int, instant_ns: Array, ramp_ns: int,
 ) -> tuple[Array, Array, Array]:
     """The double integral of events over each pixel's own exposure (Pan et al. 2019).
 
-    Events (N,) in order; thresholds, exposure starts and instants on the grid (rows, columns). Returns on the grid:
+    Events (N,) in order; stamped `lag_ns` after their light; thresholds, exposure starts and instants on the grid (rows, columns). Returns on the grid:
     `correction` = log(mean over the exposure of exp(level)) - level at the instant, to be taken from the log of a
-    blurred picture to have the sharp one at the instant; `count` of events inside the exposure; `last_ns` stamp of the
-    last event at or before the instant (NEVER where none).
+    blurred picture to have the sharp one at the instant; `count` of events inside the exposure; `last_ns` light time
+    of the last event at or before the instant (NEVER where none).
     """
     rows, columns = start_ns.shape
     level = np.zeros((rows, columns))
@@ -69,7 +69,8 @@ def integrate_exposures(
     last = np.full((rows, columns), NEVER, np.int64)
     count = np.zeros((rows, columns), np.int32)
     for k in range(len(t)):
-        r, c, t_b = y[k], x[k], t[k]
+        r, c = y[k], x[k]
+        t_b = t[k] - lag_ns
         t_a, level_a = previous[r, c], level[r, c]
         level_b = level_a + (theta_on[r, c] if on[k] else -theta_off[r, c])
         t0, when = start_ns[r, c], instant_ns[r, c]

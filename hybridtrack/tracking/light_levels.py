@@ -110,13 +110,13 @@ class SharpPictures:
         self.frame_uv = np.stack([levels.u, levels.v], axis=-1)
         self._theta_on, self._theta_off = (np.ascontiguousarray(theta) for theta in (levels.theta_on, levels.theta_off))
 
-    def correction(self, events: Events, clock: FrameClock, instant_ns: Array | None, ramp_ns: int) -> tuple[Array, Array]:
+    def correction(self, events: Events, clock: FrameClock, instant_ns: Array | None, ramp_ns: int, lag_ns: int) -> tuple[Array, Array]:
         """The double integral's bracket (rows, columns) at the rows' middles, or at `instant_ns` (rows, columns); and each
         pixel's last event before that."""
         start = clock.start_ns(self.frame_uv[..., 1])
         instant = start + clock.exposure_ns // 2 if instant_ns is None else instant_ns
         bracket, count, last = integrate_exposures(
-            events.t, events.x, events.y, events.on, self._theta_on, self._theta_off,
+            events.t, events.x, events.y, events.on, self._theta_on, self._theta_off, lag_ns,
             start, clock.exposure_ns, instant, ramp_ns,
         )
         if instant_ns is None:
@@ -135,8 +135,10 @@ class SharpPictures:
         )
         return light.log_light - spread
 
-    def set_levels(self, light: LogLight, clock: FrameClock, bracket: Array, last_ns: Array) -> None:
-        """Set every pixel's level to the sharp picture at its row's middle of exposure."""
+    def set_levels(
+        self, light: LogLight, clock: FrameClock, bracket: Array, last_ns: Array, lag_ns: int
+    ) -> None:
+        """Set every pixel's level to the sharp picture at its row's middle of exposure, events being `lag_ns` late."""
         levels, (u, v) = self._levels, np.moveaxis(self.frame_uv.astype(np.float32), -1, 0)
         blurred = cv2.remap(light.log_light, u, v, cv2.INTER_CUBIC, borderMode=cv2.BORDER_REPLICATE)
         trust = cv2.remap(light.trust, u, v, cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE)
@@ -145,5 +147,5 @@ class SharpPictures:
         middle = clock.middle_ns(self.frame_uv[..., 1])
         levels.anchor_ns[:] = middle
         levels.reference_ns[:] = middle
-        levels.last_ns[:] = last_ns
+        levels.last_ns[:] = last_ns + lag_ns
         levels.fresh[:] = 1

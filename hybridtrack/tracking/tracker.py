@@ -18,7 +18,7 @@ from hybridtrack.tracking.feature_start import FeatureStarter
 from hybridtrack.tracking.frame_locator import Expectation, FrameLocator
 from hybridtrack.tracking.frame_step import FrameMatcher, eight_bit, static_covariance
 from hybridtrack.tracking.light_levels import FrameClock, check_for_events, frame_clock
-from hybridtrack.tracking.log_light import LogLight, LogLightReader
+from hybridtrack.tracking.log_light import LogLightReader
 from hybridtrack.tracking.options import TrackerOptions
 from hybridtrack.tracking.points_file import Points
 from hybridtrack.tracking.tracks_file import Tracks
@@ -48,7 +48,7 @@ class Tracker:
         self._reader = LogLightReader(module)
         self._matcher = FrameMatcher(self._core.features, self.options, self._core.radius)
         self._follower = EventFollower(self._core) if self.options.mode != "frames" else None
-        self._locator = FrameLocator(self._core, self._matcher)
+        self._locator = FrameLocator(self._core, self._matcher, self._follower.lag if self._follower else None)
         self._starter = FeatureStarter(self._core, self._matcher, self._follower, points)
 
     @property
@@ -158,7 +158,7 @@ class Tracker:
         pace = core.pace
         density = abs(pace.x_u * pace.y_v - pace.x_v * pace.y_u)
         for slot in core.active():
-            remember(table[slot], core.pace)
+            remember(table.rows[slot], core.pace)
             if self._follower is None:
                 continue
             smear = float(np.linalg.norm(table.state[slot, 2:4])) * clock.exposure_ns * 1e-9
