@@ -2,7 +2,8 @@
 
 The light of a pixel is sum_c level_c(p) f_c(p) over classes of squares c: set A, set B and steady dark. f_c is the
 share of the pixel's blurred aperture that looks at squares of class c (see light_kernels); the level of a class in
-each state of the blink is a smooth surface over the board. """
+each state of the blink is a smooth surface over the board.
+"""
 
 from dataclasses import dataclass
 

@@ -2,9 +2,10 @@
 
 Detection finds and names crossings. A rough lens and the poses then predict the picture around every inner corner,
 those beside steady dark squares included, whose crossings have but one bright square. In the cell around each corner
-a light model with known edge directions and blur, free position, four free levels and a free shading is fitted to the difference of
-the bright and dark pictures. All edge pixels of the board enter, each once; distortion and perspective inside a cell
-are in the model, so that big cells are no less exact than small ones. """
+a light model with known edge directions and blur, free position, four free levels and a free shading is fitted to the
+difference of the bright and dark pictures. All edge pixels of the board enter, each once; distortion and perspective
+inside a cell are in the model, so that big cells are no less exact than small ones.
+"""
 
 from collections.abc import Callable
 from dataclasses import dataclass, replace

@@ -16,7 +16,7 @@ _CELLS = (8, 5)
 class Coverage:
     """`area`: share of the array's cells that hold a corner; `corners`: whether each quarter's outer ninth was reached.
 
-    `tilt_deg` (V,): angle between the board's normal and the line of sight to its middle; `condition` of the
+    `tilt_deg` (V,): angle between the board's normal and the optical axis; `condition` of the
     column-scaled Jacobian (about 600 is healthy, 1e5 and above worthless); `focal_share`: deviation of the focal length
     over itself; `edge_sigma_px`: deviation of the lens at the array's worst corner, orientation removed.
     """
@@ -48,13 +48,9 @@ def displacement_jacobian(solution: Solution, uv: Array) -> Array:
     return np.asarray(J - (flat @ cancel).reshape(J.shape))
 
 
-def tilts_deg(solution: Solution, views: list[ViewPoints]) -> Array:
-    """Angle (V,) between the board's normal and the line of sight to the middle of its seen corners."""
-    angles = []
-    for pose, points in zip(solution.scene.poses, views, strict=True):
-        middle = pose[:3, :3] @ points.board_m.mean(0) + pose[:3, 3]
-        angles.append(np.degrees(np.arccos(abs(pose[:3, 2] @ middle) / np.linalg.norm(middle))))
-    return np.array(angles)
+def tilts_deg(solution: Solution) -> Array:
+    """Angle (V,) between the board's normal and the optical axis: without it a view says nothing of focal length."""
+    return np.asarray(np.degrees(np.arccos(np.minimum(np.abs(solution.scene.poses[:, 2, 2]), 1.0))))
 
 
 def _reached(views: list[ViewPoints], size: tuple[int, int]) -> tuple[float, list[str]]:
@@ -79,18 +75,17 @@ def coverage_of(solution: Solution, views: list[ViewPoints], size: tuple[int, in
     J = displacement_jacobian(solution, field_points(*size, 9, 7))
     variance = np.einsum("nij,jk,nik->n", J, covariance, J)
     lens = solution.scene.lens
-    return Coverage(area, missing, tilts_deg(solution, views), solution.condition,
+    return Coverage(area, missing, tilts_deg(solution), solution.condition,
                     float(np.sqrt(covariance[0, 0]) / lens.fx), float(np.sqrt(variance.max())))  # fmt: skip
 
 
 def coverage_findings(coverage: Coverage) -> list[str]:
     """One sentence for each weakness, with the view that would cure it."""
     findings = []
-    if np.ptp(coverage.tilt_deg) < 15.0 or coverage.tilt_deg.max() < 15.0:
+    if coverage.tilt_deg.max() < 15.0:
         findings.append(
-            f"lens: tilts of the board span only {coverage.tilt_deg.min():.0f} to {coverage.tilt_deg.max():.0f} "
-            "degrees, so focal length and distance are hard to tell apart; add views tilted by 20 to 35 "
-            "degrees, each way"
+            f"lens: the board was tilted by no more than {coverage.tilt_deg.max():.0f} degrees, so that focal length and "
+            "distance are hard to tell apart; add views tilted by 20 to 35 degrees, each way"
         )
     if coverage.missing:
         findings.append(

@@ -2,7 +2,8 @@
 
 Each candidate is fitted to all views but a few; on those only the poses are fitted, and what remains is the
 candidate's held-out error. Root mean square over the views that went in says nothing: it falls with every term added,
-while the error in the picture's corners may explode. """
+while the error in the picture's corners may explode.
+"""
 
 from dataclasses import dataclass
 

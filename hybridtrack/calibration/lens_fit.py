@@ -64,11 +64,10 @@ def _cluster_factor(solution: Solution, count: int) -> float:
 
 
 def _refuse_degenerate(coverage: Coverage) -> None:
-    if coverage.tilt_deg.max() < _LEAST_TILT_DEG or np.ptp(coverage.tilt_deg) < 1.0:
+    if coverage.tilt_deg.max() < _LEAST_TILT_DEG:
         raise DegenerateDataError(
-            f"lens: expected views of the board tilted by different angles, got tilts of {coverage.tilt_deg.min():.1f} "
-            f"to {coverage.tilt_deg.max():.1f} degrees, from which no focal length follows; add views tilted by "
-            "20 to 35 degrees"
+            f"lens: expected views in which the board is tilted, got tilts up to {coverage.tilt_deg.max():.1f} degrees, "
+            "from which no focal length follows; add views tilted by 20 to 35 degrees"
         )
     if coverage.focal_share > _WORST_FOCAL_SHARE or coverage.condition > _WORST_CONDITION:
         raise DegenerateDataError(

@@ -2,7 +2,8 @@
 
 Each class of squares (set A, set B, steady dark; on a shuttered board the last two are one) has a level in each state
 of the blink, a quadratic in board coordinates: lamps and lenses shade smoothly. With the levels linear and one blur
-for the view, a few Gauss-Newton steps on the logarithm of the blur suffice. """
+for the view, a few Gauss-Newton steps on the logarithm of the blur suffice.
+"""
 
 from dataclasses import dataclass, replace
 

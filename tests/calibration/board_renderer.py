@@ -5,7 +5,7 @@ over boxes; event pixels are ideal comparators with mismatched thresholds and no
 blink cycles, so that counts are quantised and show hysteresis.
 """
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 
 import numpy as np
 from scipy.interpolate import RectBivariateSpline
@@ -15,7 +15,7 @@ from hybridtrack.calibration.view_data import ViewImages
 from hybridtrack.geometry import PerspectiveLens, se3, so3
 from hybridtrack.module import Cluster, ColourArray, EventGrid, FrameMode, HybridModule, Target
 
-FINE = 4  # samples a colour pixel along each axis
+FINE = 3  # samples a colour pixel along each axis
 
 
 @dataclass(frozen=True)
@@ -76,7 +76,6 @@ class Scene:
     hot_share: float = 0.001
     cycles: int = 30
     vignetting: float = 0.25
-    shift_function: object = field(default=None, compare=False)
 
 
 def random_pose(rng: np.random.Generator, lens: PerspectiveLens, target: Target, tilt_deg: float, fill: float,
