@@ -143,8 +143,9 @@ def _contrast(light: ViewLight, place: BoardPlace, target: Target) -> Array:
     return np.asarray((bright[:, 0] - dark[:, 0]) - (bright[:, 1] - dark[:, 1]))
 
 
-def _frame_picture(view: ViewImages, place: BoardPlace, aperture: Aperture, light: ViewLight,
-                   target: Target) -> _FramePicture:
+def _frame_picture(
+    view: ViewImages, place: BoardPlace, aperture: Aperture, light: ViewLight, target: Target
+) -> _FramePicture:
     """The difference picture over its smooth contrast across the edges of set A."""
     step = _contrast(light, place, target)
     usual = np.nanmedian(np.abs(step[np.isfinite(step)]))
@@ -164,8 +165,9 @@ def _contrast_slope(light: ViewLight, lens: Lens, pose: Array, uv: Array, target
     return np.where(known[:, None], 0.5 * np.stack([ends[0] - ends[2], ends[1] - ends[3]], axis=1), np.nan)
 
 
-def _refine_view(view: ViewImages, board: BoardCorners, lens_fit: LensFit, target: Target,
-                 nominal: HybridModule) -> BoardCorners:
+def _refine_view(
+    view: ViewImages, board: BoardCorners, lens_fit: LensFit, target: Target, nominal: HybridModule
+) -> BoardCorners:
     """All inner corners of one view that its pictures fix."""
     pose = lens_fit.camera_from_board[int(np.flatnonzero(lens_fit.views == board.view)[0])]
     mode, aperture = nominal.frame_mode, frame_aperture(nominal.frame_mode, nominal.cluster)
@@ -196,8 +198,9 @@ def _refine_view(view: ViewImages, board: BoardCorners, lens_fit: LensFit, targe
                    event_xy=np.full((len(kept), 2), np.nan))  # fmt: skip
 
 
-def refine_boards(views: list[ViewImages], boards: list[BoardCorners], lens_fit: LensFit, target: Target,
-                  nominal: HybridModule) -> list[BoardCorners]:
+def refine_boards(
+    views: list[ViewImages], boards: list[BoardCorners], lens_fit: LensFit, target: Target, nominal: HybridModule
+) -> list[BoardCorners]:
     """Fit every inner corner of every board again, given a lens and poses within about a pixel.
 
     Boards that `lens_fit` does not hold come back as they were.
@@ -235,8 +238,9 @@ def _rough_board(view: ViewImages, detection: Detection, nominal: HybridModule) 
                         np.full((len(uv), 2), np.nan), detection.labelling.half_turn_lead > 0)  # fmt: skip
 
 
-def find_boards(views: list[ViewImages], target: Target, nominal: HybridModule,
-                progress: Progress | None = None) -> BoardSearch:
+def find_boards(
+    views: list[ViewImages], target: Target, nominal: HybridModule, progress: Progress | None = None
+) -> BoardSearch:
     """Find the board in every view; corners to hundredths of a pixel where three views or more fix a lens.
 
     Frame pixels are taken to sit where `nominal` says; where it omits clear sites from bins, the clear site must be
@@ -259,8 +263,9 @@ def find_boards(views: list[ViewImages], target: Target, nominal: HybridModule,
     return BoardSearch(boards, findings)
 
 
-def _first_fit(boards: list[BoardCorners], target: Target, nominal: HybridModule,
-               models: tuple[str, ...]) -> LensFit | None:
+def _first_fit(
+    boards: list[BoardCorners], target: Target, nominal: HybridModule, models: tuple[str, ...]
+) -> LensFit | None:
     """The fit of the model with the smallest residual; None where no model can be fitted."""
     fits = []
     for model in models:

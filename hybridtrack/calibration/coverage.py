@@ -16,7 +16,8 @@ _CELLS = (8, 5)
 class Coverage:
     """`area`: share of the array's cells that hold a corner; `corners`: whether each quarter's outer ninth was reached.
 
-    `tilt_deg` (V,): angle between the board's normal and the optical axis; `condition` of the
+    `tilt_deg` (V,): angle between the board's normal and the optical axis; `facing_deg`: the largest
+    angle between the normals of two views, for planes that are all parallel fix no focal length (Zhang 2000); `condition` of the
     column-scaled Jacobian (about 600 is healthy, 1e5 and above worthless); `focal_share`: deviation of the focal length
     over itself; `edge_sigma_px`: deviation of the lens at the array's worst corner, orientation removed.
     """
@@ -24,6 +25,7 @@ class Coverage:
     area: float
     missing: list[str]
     tilt_deg: Array
+    facing_deg: float
     condition: float
     focal_share: float
     edge_sigma_px: float
@@ -53,6 +55,12 @@ def tilts_deg(solution: Solution) -> Array:
     return np.asarray(np.degrees(np.arccos(np.minimum(np.abs(solution.scene.poses[:, 2, 2]), 1.0))))
 
 
+def facing_deg(solution: Solution) -> float:
+    """Largest angle between the board's normals in any two views."""
+    normals = solution.scene.poses[:, :3, 2]
+    return float(np.degrees(np.arccos(np.clip(normals @ normals.T, -1.0, 1.0))).max())
+
+
 def _reached(views: list[ViewPoints], size: tuple[int, int]) -> tuple[float, list[str]]:
     uv = np.concatenate([p.uv for p in views]) + 0.5
     column = np.clip((uv[:, 0] / size[0] * _CELLS[0]).astype(int), 0, _CELLS[0] - 1)
@@ -75,17 +83,17 @@ def coverage_of(solution: Solution, views: list[ViewPoints], size: tuple[int, in
     J = displacement_jacobian(solution, field_points(*size, 9, 7))
     variance = np.einsum("nij,jk,nik->n", J, covariance, J)
     lens = solution.scene.lens
-    return Coverage(area, missing, tilts_deg(solution), solution.condition,
+    return Coverage(area, missing, tilts_deg(solution), facing_deg(solution), solution.condition,
                     float(np.sqrt(covariance[0, 0]) / lens.fx), float(np.sqrt(variance.max())))  # fmt: skip
 
 
 def coverage_findings(coverage: Coverage) -> list[str]:
     """One sentence for each weakness, with the view that would cure it."""
     findings = []
-    if coverage.tilt_deg.max() < 15.0:
+    if coverage.facing_deg < 20.0:
         findings.append(
-            f"lens: the board was tilted by no more than {coverage.tilt_deg.max():.0f} degrees, so that focal length and "
-            "distance are hard to tell apart; add views tilted by 20 to 35 degrees, each way"
+            f"lens: the board faced nearly the same way in all views (within {coverage.facing_deg:.0f} degrees), so that "
+            "focal length and distance are hard to tell apart; add views tilted by 20 to 35 degrees, each way"
         )
     if coverage.missing:
         findings.append(

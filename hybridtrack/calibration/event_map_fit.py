@@ -166,8 +166,9 @@ def _stepped_model(model: MapModel, normal: MapNormal, step: Array, seen: Array)
                    gain_variance=gain_variance)  # fmt: skip
 
 
-def _stepped(state: _State, normal: MapNormal, step: Array, all_steps: list[PixelSteps], nominal: HybridModule,
-             with_odd: bool) -> _State:
+def _stepped(
+    state: _State, normal: MapNormal, step: Array, all_steps: list[PixelSteps], nominal: HybridModule, with_odd: bool
+) -> _State:
     """The state after a Gauss-Newton step; `with_odd` also drops pixels whose gain is odd."""
     seen = np.zeros(len(state.usable), bool)
     for steps in all_steps:
@@ -318,8 +319,9 @@ def _rows(matrix: Array) -> tuple[tuple[float, float, float], tuple[float, float
     return (a, b, c), (d, e, f)
 
 
-def _result(state: _State, base: Array, verdict: LatticeVerdict, mirror: tuple[bool, bool], centre: Array,
-            nominal: HybridModule) -> tuple[ColourFromEvent, tuple[int, int], list[str]]:
+def _result(
+    state: _State, base: Array, verdict: LatticeVerdict, mirror: tuple[bool, bool], centre: Array, nominal: HybridModule
+) -> tuple[ColourFromEvent, tuple[int, int], list[str]]:
     """The map with the terms that the verdict keeps, about the lattice `base` (2, 3)."""
     matrix = base + affine_of(verdict.coefficients[:6], nominal)
     if not verdict.linear:
@@ -341,8 +343,9 @@ def _kept_parameters(verdict: LatticeVerdict) -> Array:
     return np.flatnonzero([linear, linear, True, linear, linear, True, verdict.radial])
 
 
-def fit_event_map(views: list[ViewImages], boards: list[BoardCorners], lens_fit: LensFit, target: Target,
-                  nominal: HybridModule) -> EventMapFit:
+def fit_event_map(
+    views: list[ViewImages], boards: list[BoardCorners], lens_fit: LensFit, target: Target, nominal: HybridModule
+) -> EventMapFit:
     """Find mirroring, clear site and map from all views in `lens_fit`.
 
     Of `nominal` only sizes, cluster pitch and frame mode are believed. `boards` are not needed beyond the poses that

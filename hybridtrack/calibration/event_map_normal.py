@@ -125,8 +125,9 @@ def _prior(model: MapModel, views: int) -> tuple[Array, Array]:
     return matrix, right
 
 
-def accumulate(all_steps: list[PixelSteps], model: MapModel, basis: MapBasis, log_blur: float,
-               motions: list[Array] | None = None) -> MapNormal:
+def accumulate(
+    all_steps: list[PixelSteps], model: MapModel, basis: MapBasis, log_blur: float, motions: list[Array] | None = None
+) -> MapNormal:
     """Normal equations about the present state.
 
     `motions` [view] (N, 2, 6 + P), where given: d uv of the board's picture by the view's pose twist and the lens, for

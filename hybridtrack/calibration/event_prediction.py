@@ -80,8 +80,9 @@ def _level_slopes(light: ViewLight, place: BoardPlace, target: Target) -> tuple[
     return slopes[0], slopes[1]
 
 
-def choose_pixels(view: ViewImages, light: ViewLight, lens_fit: LensFit, pose: Array, target: Target,
-                  uv: Array) -> PixelPlaces:
+def choose_pixels(
+    view: ViewImages, light: ViewLight, lens_fit: LensFit, pose: Array, target: Target, uv: Array
+) -> PixelPlaces:
     """The event pixels of one view that look at the board from colour positions `uv` (He, We, 2)."""
     place, count = place_on_board(lens_fit.lens, pose, uv.reshape(-1, 2)), view.amplitude.ravel()
     usable = inside_board(place, target, _MARGIN_PX) & np.isfinite(count)

@@ -23,7 +23,7 @@ _LEAST_CORNERS = 8
 _WORST_CONDITION = 2e4
 _WORST_FOCAL_SHARE = 0.03
 _WORST_EDGE_PX = 20.0
-_LEAST_TILT_DEG = 5.0
+_LEAST_FACING_DEG = 6.0
 
 
 def _noise_floor(solution: Solution, views: list[ViewPoints]) -> float:
@@ -64,10 +64,11 @@ def _cluster_factor(solution: Solution, count: int) -> float:
 
 
 def _refuse_degenerate(coverage: Coverage) -> None:
-    if coverage.tilt_deg.max() < _LEAST_TILT_DEG:
+    if coverage.facing_deg < _LEAST_FACING_DEG:
         raise DegenerateDataError(
-            f"lens: expected views in which the board is tilted, got tilts up to {coverage.tilt_deg.max():.1f} degrees, "
-            "from which no focal length follows; add views tilted by 20 to 35 degrees"
+            "lens: expected views in which the board faces different ways, got normals within "
+            f"{coverage.facing_deg:.1f} degrees of each other, from which no focal length follows; add views tilted by "
+            "20 to 35 degrees"
         )
     if coverage.focal_share > _WORST_FOCAL_SHARE or coverage.condition > _WORST_CONDITION:
         raise DegenerateDataError(
@@ -106,12 +107,17 @@ def _model_finding(chosen: Candidate, candidates: list[Candidate]) -> str:
     return f"lens: model {chosen.name} chosen by error on views held out, in corner deviations per axis: {errors}"
 
 
-def fit_view_points(views: list[ViewPoints], view_numbers: Array, size: tuple[int, int], model: str | None = None,
-                    shape_sigma: Array | None = None) -> LensFit:
+def fit_view_points(
+    views: list[ViewPoints],
+    view_numbers: Array,
+    size: tuple[int, int],
+    model: str | None = None,
+    shape_sigma: Array | None = None,
+) -> LensFit:
     """Fit lens and poses to corners of a flat board on an array of `size` (width, height).
 
     `model` is one of `lens_choice.MODELS`, or None to choose. Raises DegenerateDataError where the views do not
-    determine a lens. """
+    determine a lens."""
     sigma = np.zeros(3) if shape_sigma is None else shape_sigma
     findings = []
     if model is None:

@@ -128,8 +128,9 @@ def _read_pictures(files: list[Path], skipped: list[tuple[Path, str]]) -> list[t
     return [(path, picture) for path, picture in pictures if picture.shape == shape]
 
 
-def _find_all(pictures: list[tuple[Path, Array]], columns: int, rows: int, skipped: list[tuple[Path, str]],
-              tell: Progress) -> list[BoardCorners]:
+def _find_all(
+    pictures: list[tuple[Path, Array]], columns: int, rows: int, skipped: list[tuple[Path, str]], tell: Progress
+) -> list[BoardCorners]:
     ij = np.stack(np.meshgrid(np.arange(1, columns + 1), np.arange(1, rows + 1)), axis=-1).reshape(-1, 2)
     boards = []
     for k, (path, picture) in enumerate(pictures):
@@ -152,13 +153,18 @@ def _results(boards: list[BoardCorners], fit: LensFit, files: list[Path]) -> lis
     return out
 
 
-def calibrate_photos(source: Path | str | Sequence[Path | str], columns: int, rows: int,
-                     square_m: float | tuple[float, float], model: str | None = None,
-                     progress: Progress | None = None) -> PhotoCalibration:
+def calibrate_photos(
+    source: Path | str | Sequence[Path | str],
+    columns: int,
+    rows: int,
+    square_m: float | tuple[float, float],
+    model: str | None = None,
+    progress: Progress | None = None,
+) -> PhotoCalibration:
     """Calibrate a lens from photographs of a board with `columns` x `rows` inner corners and squares of `square_m`.
 
     `source` is a folder or a list of files. `model` is one of `lens_choice.MODELS`, or None to choose by held-out
-    error. Raises OptionError, MissingFileError, BoardNotFoundError, DegenerateDataError. """
+    error. Raises OptionError, MissingFileError, BoardNotFoundError, DegenerateDataError."""
     if min(columns, rows) < 3 or np.min(square_m) <= 0:
         raise OptionError(
             f"photographs: a board of at least 3x3 inner corners and squares of positive size are required, got "

@@ -29,7 +29,7 @@ class ViewLight:
 
     `squares` (K, R, C): membership of squares in the K classes; `bright`, `dark` (K, 6): coefficients of the level in
     the state "A bright" and "A dark"; `blur_px`: deviation of the point spread in colour px; `residual`: root mean
-    square of what the difference of the two pictures leaves, over the step of set A. """
+    square of what the difference of the two pictures leaves, over the step of set A."""
 
     squares: Array
     bright: Array
@@ -84,8 +84,9 @@ def _samples(place: BoardPlace, view: ViewImages, target: Target, margin_px: flo
     return np.sort(usable[order[: len(usable) // step]])
 
 
-def fit_view_light(view: ViewImages, place: BoardPlace, aperture: Aperture, target: Target,
-                   blur_px: float = _FIRST_BLUR_PX) -> ViewLight | None:
+def fit_view_light(
+    view: ViewImages, place: BoardPlace, aperture: Aperture, target: Target, blur_px: float = _FIRST_BLUR_PX
+) -> ViewLight | None:
     """Fit levels and blur to all frame pixels, whose full bins' centres have `place` (Hf * Wf).
 
     Returns None where too little of the board is seen.

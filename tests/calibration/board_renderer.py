@@ -1,8 +1,7 @@
 """A board recorder for tests, independent of the package's light model and of its synthesis.
 
-Light is sampled on a fine grid (squares are looked up, not integrated in closed form), blurred by a Gaussian and averaged
-over boxes; event pixels are ideal comparators with mismatched thresholds and noise, run over many
-blink cycles, so that counts are quantised and show hysteresis.
+Light is sampled on a fine grid (squares are looked up, not integrated in closed form), blurred by a Gaussian and
+averaged over boxes; event pixels are ideal comparators with mismatched thresholds and noise, run over many blink cycles, so that counts are quantised and show hysteresis.
 """
 
 from dataclasses import dataclass
@@ -78,13 +77,15 @@ class Scene:
     vignetting: float = 0.25
 
 
-def random_pose(rng: np.random.Generator, lens: PerspectiveLens, target: Target, tilt_deg: float, fill: float,
-                offset: float = 0.18) -> np.ndarray:
+def random_pose(
+    rng: np.random.Generator, lens: PerspectiveLens, target: Target, tilt_deg: float, fill: float, offset: float = 0.18
+) -> np.ndarray:
     """camera_from_board with any roll and a random tilt; `fill`: board width over picture width."""
     extent = np.array([target.columns, target.rows]) * target.square_xy_m
     axis = rng.normal(size=2)
     axis /= np.linalg.norm(axis)
-    R = so3.exp(np.array([*axis * np.radians(tilt_deg), 0.0])) @ so3.exp(np.array([0.0, 0.0, rng.uniform(-np.pi, np.pi)]))
+    tilt, roll = np.array([*axis * np.radians(tilt_deg), 0.0]), np.array([0.0, 0.0, rng.uniform(-np.pi, np.pi)])
+    R = so3.exp(tilt) @ so3.exp(roll)
     z = lens.fx * extent[0] / (fill * 2.0 * lens.cx)
     centre = np.array([*rng.uniform(-offset, offset, 2) * 2.0 * np.array([lens.cx, lens.cy]) / lens.fx * z, z])
     return se3.compose(R, centre - R @ np.array([extent[0] / 2.0, extent[1] / 2.0, 0.0]))
@@ -128,7 +129,8 @@ def fine_board(scene: Scene, layout: Layout, pose: np.ndarray, pad: int) -> Fine
     vv = (np.arange(len(coarse_v))[:, None] + offsets).ravel()
     uu = (np.arange(len(coarse_u))[:, None] + offsets).ravel()
     index, share = [], []
-    for k, (size, count) in enumerate(zip(scene.target.square_xy_m, (scene.target.columns, scene.target.rows), strict=True)):
+    counts = (scene.target.columns, scene.target.rows)
+    for k, (size, count) in enumerate(zip(scene.target.square_xy_m, counts, strict=True)):
         smooth = RectBivariateSpline(np.arange(len(coarse_v)), np.arange(len(coarse_u)), board[..., k], kx=3, ky=3)
         fine = smooth(vv, uu)
         extent = sum(np.abs(np.gradient(fine, axis=axis)) for axis in (0, 1))
@@ -154,7 +156,8 @@ def _frame(layout: Layout, per_pixel: np.ndarray) -> np.ndarray:
     u = mode.crop[0] + np.arange(mode.width * mode.binning)
     v = mode.crop[1] + np.arange(mode.height * mode.binning)
     picture = per_pixel[np.ix_(v, u)]
-    clear = ((v % layout.cluster[1]) == layout.clear_site[1])[:, None] & ((u % layout.cluster[0]) == layout.clear_site[0])
+    (cu, cv), (site_u, site_v) = layout.cluster, layout.clear_site
+    clear = (v % cv == site_v)[:, None] & (u % cu == site_u)
     used = np.ones_like(picture)
     if layout.clear_in_frame == "omitted" and mode.binning > 1:
         used = 1.0 - clear
@@ -162,8 +165,9 @@ def _frame(layout: Layout, per_pixel: np.ndarray) -> np.ndarray:
     return (picture * used).reshape(shape).sum((1, 3)) / used.reshape(shape).sum((1, 3))
 
 
-def _comparator_counts(rng: np.random.Generator, high: np.ndarray, low: np.ndarray, scene: Scene,
-                       thresholds: tuple[np.ndarray, np.ndarray]) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+def _comparator_counts(
+    rng: np.random.Generator, high: np.ndarray, low: np.ndarray, scene: Scene, thresholds: tuple[np.ndarray, np.ndarray]
+) -> list[np.ndarray]:
     """Mean ON at the flip to `high`, OFF there, ON and OFF at the flip to `low`, after some cycles to settle."""
     reference = low + rng.uniform(-0.1, 0.1, low.shape)
     sums = [np.zeros(low.shape) for _ in range(4)]
@@ -176,7 +180,7 @@ def _comparator_counts(rng: np.random.Generator, high: np.ndarray, low: np.ndarr
             if cycle >= 4:
                 sums[2 * k] += on
                 sums[2 * k + 1] += off
-    return tuple(s / scene.cycles for s in sums)  # type: ignore[return-value]
+    return [s / scene.cycles for s in sums]
 
 
 @dataclass
@@ -195,8 +199,15 @@ class Pixels:
         return cls(on, off, rng.random(shape) < scene.hot_share)
 
 
-def render_view(rng: np.random.Generator, scene: Scene, layout: Layout, pixels: Pixels, pose: np.ndarray, index: int,
-                events: bool = True) -> ViewImages:
+def render_view(
+    rng: np.random.Generator,
+    scene: Scene,
+    layout: Layout,
+    pixels: Pixels,
+    pose: np.ndarray,
+    index: int,
+    events: bool = True,
+) -> ViewImages:
     """Record one view."""
     pad = 4
     states = ((True, False), (False, scene.target.is_counterphase))

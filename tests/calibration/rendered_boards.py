@@ -44,8 +44,9 @@ class RenderedSet:
         return self.scene.lens.project(se3.transform(self.poses[view], board_m))
 
 
-def rendered(scene: Scene, layout: Layout, seed: int, count: int, tilt_deg: float = 30.0, fill: float = 0.7,
-             offset: float = 0.12) -> RenderedSet:
+def rendered(
+    scene: Scene, layout: Layout, seed: int, count: int, tilt_deg: float = 30.0, fill: float = 0.7, offset: float = 0.12
+) -> RenderedSet:
     """Render `count` views with poses, thresholds and noise drawn from `seed`."""
     rng = np.random.default_rng(seed)
     pixels = Pixels.draw(rng, scene, layout.event_positions().shape[:2])
@@ -83,9 +84,16 @@ def as_boards(found: RenderedSet, rng: np.random.Generator, sigma_px: float) -> 
     return out
 
 
-def corner_views(rng: np.random.Generator, lens: PerspectiveLens | FisheyeLens, count: int, sigma_px: float,
-                 tilt_deg: float = 35.0, spread: float = 0.3, size: tuple[int, int] = (1280, 800),
-                 nearest_m: float = 0.35) -> tuple[list[ViewPoints], np.ndarray]:
+def corner_views(
+    rng: np.random.Generator,
+    lens: PerspectiveLens | FisheyeLens,
+    count: int,
+    sigma_px: float,
+    tilt_deg: float = 35.0,
+    spread: float = 0.3,
+    size: tuple[int, int] = (1280, 800),
+    nearest_m: float = 0.35,
+) -> tuple[list[ViewPoints], np.ndarray]:
     """Corners of a 12x9 board in `count` views from `nearest_m` on, with noise of `sigma_px`, and the true poses."""
     points = board().corners_m().reshape(-1, 3)
     views, poses = [], []

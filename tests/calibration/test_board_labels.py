@@ -13,7 +13,8 @@ TURNS = (np.eye(2, dtype=int), np.array([[0, -1], [1, 0]]), -np.eye(2, dtype=int
 def observed(target, columns, rows, turn, flip_sign=False):
     """Corners of the given ranges, their squares and a ring around them, seen under a turn of the grid."""
     ij = np.array([(i, j) for j in rows for i in columns])
-    squares = np.array([(i, j) for j in range(rows[0] - 2, rows[-1] + 2) for i in range(columns[0] - 2, columns[-1] + 2)])
+    around = [range(side[0] - 2, side[-1] + 2) for side in (columns, rows)]
+    squares = np.array([(i, j) for j in around[1] for i in around[0]])
     sets = np.pad(target.square_sets().astype(int), 4)
     blink = sets[squares[:, 1] + 4, squares[:, 0] + 4] * (-1 if flip_sign else 1)
     inverse = TURNS[turn].T

@@ -41,7 +41,7 @@ def test_without_noise_corners_are_exact_to_thousandths():
 
 
 def test_a_wrong_clear_site_moves_corners_where_it_is_omitted():
-    """What the frame mode says of omitted clear sites is used: a wrong site shifts corners by a twentieth of a pixel."""
+    """What the frame mode says of omitted clear sites is used: a wrong site shifts corners by 0.08 px."""
     scene = counterphase_set()
     wrong = scene.layout.module()
     wrong = wrong.model_copy(update={"cluster": wrong.cluster.model_copy(update={"clear_site": (2, 3)})})
@@ -49,7 +49,7 @@ def test_a_wrong_clear_site_moves_corners_where_it_is_omitted():
     right = refine_boards(scene.views, start, scene.true_fit(), scene.scene.target, scene.layout.module())
     moved = refine_boards(scene.views, start, scene.true_fit(), scene.scene.target, wrong)
     difference = np.mean([b.uv.mean(0) - a.uv.mean(0) for a, b in zip(right, moved, strict=True)], axis=0)
-    # One bin in four moves by 1/6 px each way: (1, 2) -> (2, 3) turns -1/6, +... on both axes into their opposites.
+    # One bin in four has its light 1/6 px off on each axis; the wrong site puts it off the other way.
     assert np.all(np.abs(np.abs(difference) - 2 / 6 / 4) < 0.02)
 
 

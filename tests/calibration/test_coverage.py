@@ -1,5 +1,7 @@
 """Coverage in numbers and sentences."""
 
+from dataclasses import replace
+
 import numpy as np
 from rendered_boards import corner_views
 
@@ -7,6 +9,7 @@ from hybridtrack.calibration.coverage import (
     coverage_findings,
     coverage_of,
     displacement_jacobian,
+    facing_deg,
     field_points,
     tilts_deg,
 )
@@ -42,7 +45,7 @@ def test_a_central_set_names_the_corners_to_add():
 
 def test_a_flat_set_asks_for_tilt():
     """Views that all face the board ask for tilts of 20 to 35 degrees."""
-    solution, views, _ = fitted(10, 8.0, 0.35)
+    solution, views, _ = fitted(10, 5.0, 0.35)
     findings = coverage_findings(coverage_of(solution, views, SIZE))
     assert any("tilted by 20 to 35 degrees" in f for f in findings)
 
@@ -53,6 +56,15 @@ def test_tilt_is_the_angle_to_the_optical_axis():
     np.testing.assert_allclose(tilts_deg(solution), np.degrees(np.arccos(np.abs(poses[:, 2, 2]))), atol=0.2)
 
 
+def test_parallel_boards_face_one_way_whatever_their_roll():
+    """Turning the board in its plane changes no normal, and says nothing of focal length."""
+    solution, _, poses = fitted(4, 30.0, 0.2)
+    rolls = [se3.compose(so3.exp(np.array([0.0, 0.0, roll])), np.zeros(3)) for roll in (0.0, 1.0, 2.0)]
+    rolled = replace(solution, scene=replace(solution.scene, poses=poses[0] @ np.array(rolls)))
+    assert facing_deg(rolled) < 1e-4
+    assert facing_deg(solution) > 20.0
+
+
 def test_turning_the_camera_is_no_displacement():
     """The displacement of a lens has no part that a rotation of the camera could make."""
     solution, _, _ = fitted(6, 35.0, 0.3)
@@ -60,6 +72,7 @@ def test_turning_the_camera_is_no_displacement():
     assert uv.shape == (20, 2)
     J = displacement_jacobian(solution, uv)
     rays = solution.scene.lens.unproject(uv)
-    turned = solution.scene.lens.project(se3.transform(se3.compose(so3.exp(np.array([1e-6, -2e-6, 1e-6])), np.zeros(3)), rays))
+    turn = se3.compose(so3.exp(np.array([1e-6, -2e-6, 1e-6])), np.zeros(3))
+    turned = solution.scene.lens.project(se3.transform(turn, rays))
     move = (turned - uv).ravel()
     assert np.abs(J.reshape(-1, J.shape[-1]).T @ move).max() < 1e-6 * np.abs(J).max() * np.linalg.norm(move) * 40 + 1e-9

@@ -24,7 +24,7 @@ def left_photos() -> list[Path]:
     """The 13 left photographs, or a skip that says what is missing."""
     files = sorted(FOLDER.glob("left[0-9][0-9].jpg"))
     if len(files) != 13:
-        pytest.skip(f"the 13 board photographs of Debian's package opencv-doc are not in {FOLDER}: install it to run this")
+        pytest.skip(f"the 13 board photographs of Debian's package opencv-doc are not in {FOLDER}")
     return files
 
 
@@ -86,7 +86,8 @@ def test_our_corners_fit_better_than_the_detectors():
     pictures = [cv2.imread(str(path), cv2.IMREAD_GRAYSCALE) for path in left_photos()]
     corners = [find_photo_corners(picture, 9, 6) for picture in pictures]
     board = np.concatenate([result.photos[0].ij * 0.025, np.zeros((54, 1))], axis=1).astype(np.float32)
-    rms, *_ = cv2.calibrateCamera([board] * 13, [c.astype(np.float32)[:, None] for c in corners], result.size, None, None)
+    seen = [c.astype(np.float32)[:, None] for c in corners]
+    rms, *_ = cv2.calibrateCamera([board] * 13, seen, result.size, None, None)
     assert result.lens_fit.rms_px < rms / np.sqrt(2.0)
 
 

@@ -32,7 +32,8 @@ def test_blur_and_levels_are_those_of_the_scene(found):
     bright, dark = light.levels(place[middle], scene.target)
     mode = rendered.layout.module().frame_mode
     uv = mode.colour_from_frame(np.stack([middle % mode.width, middle // mode.width], axis=-1))
-    r2 = np.sum((uv - np.array([rendered.layout.width, rendered.layout.height]) / 2) ** 2, 1) / (rendered.layout.width / 2) ** 2
+    size = np.array([rendered.layout.width, rendered.layout.height])
+    r2 = np.sum((uv - size / 2) ** 2, axis=1) / (size[0] / 2) ** 2
     shading = 1 - scene.vignetting * r2 / 2
     np.testing.assert_allclose(bright[:, 0], scene.bright_dn * shading, rtol=0.01)
     np.testing.assert_allclose(dark[:, 0], scene.dark_dn * shading, rtol=0.03)
