@@ -14,12 +14,12 @@ _CELLS = (8, 5)
 
 @dataclass(frozen=True)
 class Coverage:
-    """`area`: share of the array's cells that hold a corner; `corners`: whether each quarter's outer ninth was reached.
+    """`area`: share of the array's cells that hold a corner; `missing`: corners of the picture that were not reached.
 
-    `tilt_deg` (V,): angle between the board's normal and the optical axis; `facing_deg`: the largest
-    angle between the normals of two views, for planes that are all parallel fix no focal length (Zhang 2000); `condition` of the
-    column-scaled Jacobian (about 600 is healthy, 1e5 and above worthless); `focal_share`: deviation of the focal length
-    over itself; `edge_sigma_px`: deviation of the lens at the array's worst corner, orientation removed.
+    `tilt_deg` (V,): angle between the board's normal and the optical axis; `facing_deg`: the largest angle between the
+    normals of two views, for planes that are all parallel fix no focal length (Zhang 2000). `condition`: of the
+    column-scaled Jacobian (about 600 is healthy, 1e5 and above worthless); `focal_share`: deviation of the focal
+    length over itself; `edge_sigma_px`: deviation of the lens at the array's worst corner, orientation removed.
     """
 
     area: float
@@ -92,8 +92,8 @@ def coverage_findings(coverage: Coverage) -> list[str]:
     findings = []
     if coverage.facing_deg < 20.0:
         findings.append(
-            f"lens: the board faced nearly the same way in all views (within {coverage.facing_deg:.0f} degrees), so that "
-            "focal length and distance are hard to tell apart; add views tilted by 20 to 35 degrees, each way"
+            f"lens: the board faced nearly the same way in all views (within {coverage.facing_deg:.0f} degrees), so "
+            "that focal length and distance are hard to tell apart; add views tilted by 20 to 35 degrees, each way"
         )
     if coverage.missing:
         findings.append(

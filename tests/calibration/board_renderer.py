@@ -1,7 +1,8 @@
 """A board recorder for tests, independent of the package's light model and of its synthesis.
 
 Light is sampled on a fine grid (squares are looked up, not integrated in closed form), blurred by a Gaussian and
-averaged over boxes; event pixels are ideal comparators with mismatched thresholds and noise, run over many blink cycles, so that counts are quantised and show hysteresis.
+averaged over boxes; event pixels are ideal comparators with mismatched thresholds and noise, run over many blink
+cycles, so that counts are quantised and show hysteresis.
 """
 
 from dataclasses import dataclass
