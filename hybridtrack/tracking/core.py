@@ -36,6 +36,7 @@ class Slots:
     reason: Array  # uint8
     missed: Array  # int64, frames in a row that did not show it
     smear: Array  # movement in the exposure of the own template, frame px
+    sharpened: Array  # bool, whether events took that smear out of it
     at_frame: Array  # float64 (M, 2), where it was in the last frame
 
 
@@ -101,7 +102,7 @@ def new_core(module: HybridModule, options: TrackerOptions, capacity: int) -> Co
     features = new_features(capacity, 2 * (int(radius) + 14) + 1)
     slots = Slots(
         np.full(capacity, -1, np.int64), np.zeros(capacity, np.uint8), np.zeros(capacity, np.uint8),
-        np.zeros(capacity, np.int64), np.zeros(capacity), np.zeros((capacity, 2)),
+        np.zeros(capacity, np.int64), np.zeros(capacity), np.zeros(capacity, bool), np.zeros((capacity, 2)),
     )
     return Core(module, options, features, slots, radius, new_pace(module, options, radius))
 

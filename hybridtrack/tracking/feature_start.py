@@ -7,7 +7,7 @@ from hybridtrack.tracking.core import Core
 from hybridtrack.tracking.detection import detect_corners
 from hybridtrack.tracking.event_follower import EventFollower
 from hybridtrack.tracking.feature_table import FORGOTTEN
-from hybridtrack.tracking.frame_step import FrameMatcher, pyramidal_flow
+from hybridtrack.tracking.frame_step import FrameMatcher, Views, pyramidal_flow
 from hybridtrack.tracking.light_levels import FrameClock
 from hybridtrack.tracking.log_light import LogLight
 from hybridtrack.tracking.points_file import Points
@@ -27,19 +27,23 @@ class FeatureStarter:
         self._waiting = np.ones(0 if points is None else len(points), bool)
         self._next_id = 0
 
-    def start(self, light: LogLight, sharp: Array, clock: FrameClock) -> list[int]:
+    def start(self, views: Views, clock: FrameClock) -> list[int]:
         """Start what the frame allows; return the new slots."""
         settled = self._settled()
         if self._points is not None:
-            started = self._start_points(light, sharp, clock)
+            started = self._start_points(views, clock)
         else:
-            started = self._start_corners(light, sharp, clock) if self._core.options.detect else []
+            started = self._start_corners(views, clock) if self._core.options.detect else []
         if started and self._follower is not None:
-            self._velocity_limits(started, sharp, clock)
+            self._velocity_limits(started, views.best, clock)
         if started and len(settled) >= FEW:
             self._velocity_of_neighbours(started, settled)
         elif started and self._follower is not None:
-            self._velocity_in_exposure(started, light, clock)
+            self._velocity_in_exposure(started, views.light, clock)
+        table = self._core.table
+        for slot in started:
+            smear_px = float(np.linalg.norm(table.state[slot, 2:4])) * clock.exposure_ns * 1e-9
+            self._matcher.take_own(slot, views, table.state[slot, :2], smear_px)
         return started
 
     def _settled(self) -> Array:
@@ -47,39 +51,39 @@ class FeatureStarter:
         active = self._core.active()
         return active[self._core.slots.reason[active] == ts.NONE]
 
-    def _start_corners(self, light: LogLight, sharp: Array, clock: FrameClock) -> list[int]:
+    def _start_corners(self, views: Views, clock: FrameClock) -> list[int]:
         core = self._core
         free = np.flatnonzero(core.table.active == 0)
         if len(free) < max(1, 0.05 * len(core.table.active)):
             return []
         taken = core.slots.at_frame[core.active()]
         margin = int(core.radius) + 2
-        if min(sharp.shape) <= 2 * margin + 2:
+        if min(views.best.shape) <= 2 * margin + 2:
             return []
-        corners = detect_corners(sharp, light.trust, taken, len(free), margin, core.options.corner_share)
+        corners = detect_corners(views.best, views.light.trust, taken, len(free), margin, core.options.corner_share)
         for slot, uv in zip(free, corners, strict=False):
-            self._fill(int(slot), self._next_id, uv, sharp, clock)
+            self._fill(int(slot), self._next_id, uv, clock)
             self._next_id += 1
         return [int(s) for s in free[: len(corners)]]
 
-    def _start_points(self, light: LogLight, sharp: Array, clock: FrameClock) -> list[int]:
+    def _start_points(self, views: Views, clock: FrameClock) -> list[int]:
         points, core = self._points, self._core
         assert points is not None
         uv = core.mode.frame_from_colour(points.uv)
         due = np.flatnonzero(self._waiting & (points.t_ns <= clock.middle_ns(uv[:, 1]) + SAME_INSTANT_NS))
         if not len(due):
             return []
-        moved = self._carry_to_frame(points.t_ns[due], uv[due], light, sharp, clock)
+        moved = self._carry_to_frame(points.t_ns[due], uv[due], views, clock)
         started = []
         for k, position in zip(due, moved, strict=True):
             self._waiting[k] = False
             if core.inside(position):
                 slot = int(np.flatnonzero(core.table.active == 0)[0])
-                self._fill(slot, int(points.id[k]), position, sharp, clock)
+                self._fill(slot, int(points.id[k]), position, clock)
                 started.append(slot)
         return started
 
-    def _carry_to_frame(self, t_ns: Array, uv: Array, light: LogLight, sharp: Array, clock: FrameClock) -> Array:
+    def _carry_to_frame(self, t_ns: Array, uv: Array, views: Views, clock: FrameClock) -> Array:
         """Where points seen at `t_ns` (N,) at `uv` (N, 2) are at their rows' middle of exposure in this frame.
 
         With events, a sharp picture at the points' instant leads to the sharp frame by Lucas-Kanade; without, or
@@ -93,12 +97,12 @@ class FeatureStarter:
         todo = np.flatnonzero((early > SAME_INSTANT_NS) & (early < reach))
         for instant in np.unique(t_ns[todo] // 100_000)[:64]:
             group = todo[t_ns[todo] // 100_000 == instant]
-            then = self._follower.sharp_at(light, clock, t_ns=int(np.mean(t_ns[group])))
-            found, good = pyramidal_flow(_eight_bit(then), _eight_bit(sharp), uv[group], uv[group], 1.0)
+            then = self._follower.sharp_at(views.light, clock, t_ns=int(np.mean(t_ns[group])))
+            found, good = pyramidal_flow(_eight_bit(then), _eight_bit(views.best), uv[group], uv[group], 1.0)
             moved[group[good]] = found[good]
         return moved
 
-    def _fill(self, slot: int, identity: int, uv: Array, sharp: Array, clock: FrameClock) -> None:
+    def _fill(self, slot: int, identity: int, uv: Array, clock: FrameClock) -> None:
         core, table, slots = self._core, self._core.table, self._core.slots
         table.active[slot] = 1
         table.t_ns[slot] = int(clock.middle_ns(uv[1]))
@@ -111,10 +115,8 @@ class FeatureStarter:
         table.history_t[slot] = FORGOTTEN
         table.recent_speed[slot] = 0.0
         table.history_next[slot] = 0
-        self._matcher.take_own(slot, sharp, uv)
         slots.id[slot], slots.state[slot], slots.reason[slot] = identity, ts.ALIVE, ts.STARTED
         slots.missed[slot], slots.at_frame[slot] = 0, uv
-        slots.smear[slot] = 0.0
         core.counters.started += 1
 
     def _set_velocity(self, slot: int, velocity: Array, sigma: float) -> None:

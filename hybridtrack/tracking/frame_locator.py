@@ -13,7 +13,7 @@ from hybridtrack.tracking import track_state as ts
 from hybridtrack.tracking.advance_kernels import observe_position, rewind, trajectory
 from hybridtrack.tracking.core import Core
 from hybridtrack.tracking.event_lag import LEAST_SPEED, EventLag
-from hybridtrack.tracking.frame_step import FrameMatcher, Match, pyramidal_flow
+from hybridtrack.tracking.frame_step import SHARP_PX, FrameMatcher, Match, pyramidal_flow
 from hybridtrack.tracking.light_levels import FrameClock
 from hybridtrack.tracking.log_light import LogLight
 
@@ -23,6 +23,7 @@ ALWAYS_AGREE_PX = 0.5
 FLOW_SIGMA_PX = 0.3  # deviation of pyramidal Lucas-Kanade from frame to frame
 FLOW_AGREES_PX = 1.5
 SMEAR_DIFFERENCE_PX = 0.35
+EVENT_DOUBT = 4.0  # by which the variance of a position carried by events is multiplied when a frame judges it
 TRAIL_SIGMA_PX = 1.0  # spread of features about their common lag, in position
 RENEW_AFTER_FRAMES = 3
 MISS_SIGMA_PX, MISS_SIGMA_PX_S = 1.0, 100.0  # doubt of position and velocity that a frame without the feature adds
@@ -109,7 +110,9 @@ class FrameLocator:
         return {int(s): f for s, f, g in zip(slots, found, good, strict=True) if g and self._core.inside(f)}
 
     def _match(self, e: Expectation, light: LogLight, start: Array) -> Match:
-        smeared = e.smear > 0.7 and e.smear - self._core.slots.smear[e.slot] > SMEAR_DIFFERENCE_PX
+        slots = self._core.slots
+        template_smear = 0.0 if slots.sharpened[e.slot] else slots.smear[e.slot]
+        smeared = e.smear > SHARP_PX and e.smear - template_smear > SMEAR_DIFFERENCE_PX
         return self._matcher.match(e.slot, light, start, e.path if smeared else None)
 
     def _believable(self, match: Match, least: float) -> bool:
@@ -166,7 +169,8 @@ class FrameLocator:
     def _accept(self, e: Expectation, match: Match, state: int, reason: int) -> None:
         """Join a match to the filter."""
         table = self._core.table
-        table.cov[e.slot, :2, :2] += table.static_cov[e.slot]
+        # Events of one interval share the errors of the levels that they started from.
+        table.cov[e.slot, :2, :2] = EVENT_DOUBT * table.cov[e.slot, :2, :2] + table.static_cov[e.slot]
         observe_position(table.rows[e.slot], *match.position, *match.cov)
         # The template's own noise is in every frame's match and does not average out.
         floor = 0.5 * match.cov

@@ -7,18 +7,19 @@ import numpy as np
 
 from hybridtrack.tracking.advance_kernels import trajectory
 from hybridtrack.tracking.alignment_kernels import align, cut_patch, smear, with_slopes
-from hybridtrack.tracking.feature_table import Features
+from hybridtrack.tracking.core import Core
 from hybridtrack.tracking.light_levels import FrameClock
 from hybridtrack.tracking.log_light import LogLight
-from hybridtrack.tracking.options import TrackerOptions
 
 Array = np.ndarray
 PYRAMID_WINDOW, PYRAMID_LEVELS = 21, 4
 SHAPE_SIGMA = 0.02  # expected change of a patch's shape from frame to frame
+SHAPE_SIGMA_SMEARED = 0.005  # the same in a smeared frame, which tells little of it
 NOISE_FACTOR = 2.5  # neighbours in a picture share noise and misfit, which the normal equations take as independent
+SMEAR_NOISE = 0.5  # added share of that for each px of smear, along which misfit repeats
 ALIGNMENT_FLOOR_PX = 0.01
 SHARP_PX = 0.7  # movement within the exposure that the templates need not model
-LARGEST_SMEAR_PX = 24.0
+SHARPEN_FROM_PX = 3.0
 
 
 @dataclass(frozen=True)
@@ -56,12 +57,25 @@ def pyramidal_flow(before: Array, after: Array, points: Array, guess: Array, gat
     return found.reshape(-1, 2).astype(float), good
 
 
+@dataclass(frozen=True)
+class Views:
+    """One frame as it is, and made sharp by events (H, W), None without events."""
+
+    light: LogLight
+    sharp: Array | None
+
+    @property
+    def best(self) -> Array:
+        """The sharp picture where there is one."""
+        return self.light.log_light if self.sharp is None else self.sharp
+
+
 class FrameMatcher:
     """Aligns features' own templates to one frame, smeared by their movement during its exposure."""
 
-    def __init__(self, features: Features, options: TrackerOptions, radius: float) -> None:
-        self._features, self._options, self._radius = features, options, radius
-        size = features.own.shape[1]
+    def __init__(self, core: Core) -> None:
+        self._features, self._slots, self._radius = core.features, core.slots, core.radius
+        size = core.features.own.shape[1]
         self._smeared = np.zeros((size, size), np.float32)
         self._template = np.zeros((size, size, 3), np.float32)
         self._out = np.zeros(7)
@@ -86,12 +100,13 @@ class FrameMatcher:
         if path is not None:
             values = self._smear(slot, path)
         with_slopes(values, self._template)
-        shape_sigma = SHAPE_SIGMA if path is None else 0.0
+        shape_sigma = SHAPE_SIGMA if path is None else SHAPE_SIGMA_SMEARED
         converged = align(
             light.log_light, light.trust, self._template, table.own_offset[slot], self._radius, position, shape,
             shape_sigma, 15, self._out,
         )
-        cov = self._out[:3] * NOISE_FACTOR + np.array([1.0, 0.0, 1.0]) * ALIGNMENT_FLOOR_PX**2
+        factor = NOISE_FACTOR * (1.0 if path is None else 1.0 + SMEAR_NOISE * self.smear_px(path))
+        cov = self._out[:3] * factor + np.array([1.0, 0.0, 1.0]) * ALIGNMENT_FLOOR_PX**2
         return Match(position, cov, shape, float(self._out[3]), float(self._out[4]), bool(converged))
 
     def _smear(self, slot: int, path: Array) -> Array:
@@ -102,8 +117,14 @@ class FrameMatcher:
         smear(self._features.own[slot], shifts, self._smeared)
         return self._smeared
 
-    def take_own(self, slot: int, picture: Array, position: Array) -> None:
-        """Make the picture around `position` the feature's own template."""
+    def take_own(self, slot: int, views: Views, position: Array, smear_px: float) -> None:
+        """Make the frame around `position`, seen while the feature moved by `smear_px`, its own template.
+
+        Little smear is left in: events of few thresholds blur more than they sharpen.
+        """
+        sharpen = views.sharp is not None and smear_px >= SHARPEN_FROM_PX
+        picture = views.sharp if sharpen and views.sharp is not None else views.light.log_light
+        self._slots.smear[slot], self._slots.sharpened[slot] = smear_px, sharpen
         features, table = self._features, self._features.table
         table.own_offset[slot] = cut_patch(picture, position[0], position[1], features.own[slot])
         table.warp[slot] = np.eye(2)

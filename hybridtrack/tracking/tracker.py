@@ -16,7 +16,7 @@ from hybridtrack.tracking.core import Core, Counters, new_core
 from hybridtrack.tracking.event_follower import EventFollower
 from hybridtrack.tracking.feature_start import FeatureStarter
 from hybridtrack.tracking.frame_locator import Expectation, FrameLocator
-from hybridtrack.tracking.frame_step import FrameMatcher, eight_bit, static_covariance
+from hybridtrack.tracking.frame_step import FrameMatcher, Views, eight_bit, static_covariance
 from hybridtrack.tracking.light_levels import FrameClock, check_for_events, frame_clock
 from hybridtrack.tracking.log_light import LogLightReader
 from hybridtrack.tracking.options import TrackerOptions
@@ -46,7 +46,7 @@ class Tracker:
         capacity = self.options.max_features if points is None else max(len(points), 1)
         self._core: Core = new_core(module, self.options, capacity)
         self._reader = LogLightReader(module)
-        self._matcher = FrameMatcher(self._core.features, self.options, self._core.radius)
+        self._matcher = FrameMatcher(self._core)
         self._follower = EventFollower(self._core) if self.options.mode != "frames" else None
         self._locator = FrameLocator(self._core, self._matcher, self._follower.lag if self._follower else None)
         self._starter = FeatureStarter(self._core, self._matcher, self._follower, points)
@@ -77,19 +77,20 @@ class Tracker:
         """
         core, light = self._core, self._reader.read(image)
         clock = frame_clock(core.module, t_start_ns, exposure_ns)
-        sharp, bracket, last = light.log_light, None, None
+        sharp, bracket, last = None, None, None
         if self._follower is not None:
             bracket, last = self._follower.bracket(clock)
             sharp = self._follower.sharpen(light, bracket)
+        views = Views(light, sharp)
         picture = eight_bit(image, core.mode.white_dn)
         expected = self._locator.locate(light, clock, picture)
         ended = self._judge(expected)
-        started = self._starter.start(light, sharp, clock)
+        started = self._starter.start(views, clock)
         lines = self._lines([e.slot for e in expected], started)
         for slot in ended:
             core.release(slot)
-        self._renew(expected, sharp, clock)
-        self._prepare(sharp, clock)
+        self._renew(expected, views)
+        self._prepare(views.best, clock)
         self._locator.remember(picture)
         if self._follower is not None and bracket is not None and last is not None:
             self._follower.restart(light, clock, bracket, last)
@@ -137,7 +138,7 @@ class Tracker:
         lines.source[len(located) :] = ts.FROM_FRAME
         return lines
 
-    def _renew(self, expected: list[Expectation], sharp: Array, clock: FrameClock) -> None:
+    def _renew(self, expected: list[Expectation], views: Views) -> None:
         """Take new own templates: where the frame is sharper than they are, or where they no longer fit."""
         core = self._core
         for e in expected:
@@ -148,8 +149,7 @@ class Tracker:
                 e.smear < SHARPER * slots.smear[e.slot]
             )
             if sharper or (self.options.mode != "events" and self._locator.needs_renewal(e.slot)):
-                self._matcher.take_own(e.slot, sharp, core.table.state[e.slot, :2])
-                slots.smear[e.slot] = e.smear
+                self._matcher.take_own(e.slot, views, core.table.state[e.slot, :2], e.smear)
                 slots.missed[e.slot] = 0
 
     def _prepare(self, sharp: Array, clock: FrameClock) -> None:
