@@ -14,6 +14,7 @@ Array = np.ndarray
 KNOTS = 14
 # Counts are whole numbers behind their mean: no smooth curve follows their steps more closely than this.
 _LEAST_DEVIATION = 0.1
+_GROSS = 5.0
 
 
 @dataclass(frozen=True)
@@ -80,7 +81,7 @@ class CountNoise:
 
 
 def fit_noise(residual: Array, count: Array, slope_px: Array) -> CountNoise:
-    """Fit the three terms to squared residuals, gross ones cut.
+    """Fit the three terms to squared residuals, gross ones left out.
 
     Pixels away from edges repeat almost exactly from cycle to cycle, pixels on edges do not: what counts as gross
     follows the terms, not the mean.
@@ -93,8 +94,8 @@ def fit_noise(residual: Array, count: Array, slope_px: Array) -> CountNoise:
         terms[2] = float(np.median(square[edge]) / 0.455 / np.median(slope_px[edge] ** 2))
     for _ in range(8):
         variance = design @ terms
-        cut, weight = np.minimum(square, 20.0 * variance), 1.0 / variance**2
+        weight = np.where(square < _GROSS**2 * variance, 1.0 / variance**2, 0.0)
         # Squared residuals scatter in proportion to their mean, hence the weights.
-        terms, _ = nnls((design * weight[:, None]).T @ design, (design * weight[:, None]).T @ cut)
+        terms, _ = nnls((design * weight[:, None]).T @ design, (design * weight[:, None]).T @ square)
         terms[0] = max(terms[0], _LEAST_DEVIATION**2)
     return CountNoise(*(float(t) for t in terms))

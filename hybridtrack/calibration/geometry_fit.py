@@ -1,0 +1,74 @@
+"""Boards, lens and event map of a recording's views, in one call.
+
+Where frames omit clear sites from their bins, the place of a frame pixel's light depends on the clear site, which only
+the event map finds: a data sheet that has it wrong puts corners off by up to a tenth of a pixel. The search is then
+repeated under the site found, until it stands.
+"""
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+from hybridtrack.calibration.corners import find_boards
+from hybridtrack.calibration.event_map_fit import fit_event_map
+from hybridtrack.calibration.lens_fit import fit_lens
+from hybridtrack.calibration.view_data import BoardSearch, EventMapFit, LensFit, ViewImages
+from hybridtrack.errors import BoardNotFoundError
+from hybridtrack.module import HybridModule, Target
+
+Progress = Callable[[str, float], None]
+
+_ROUNDS = 3
+_LEAST_VIEWS = 3
+
+
+@dataclass(frozen=True)
+class Geometry:
+    """Boards found, the lens and poses they give, and the event map; `findings` of all three."""
+
+    search: BoardSearch
+    lens_fit: LensFit
+    map_fit: EventMapFit
+
+    @property
+    def findings(self) -> list[str]:
+        """What search, lens and map have to say, in this order."""
+        return [*self.search.findings, *self.lens_fit.findings, *self.map_fit.findings]
+
+
+def _require_boards(search: BoardSearch, views: int) -> None:
+    if len(search.boards) < _LEAST_VIEWS:
+        first = f" ({search.findings[0]})" if search.findings else ""
+        raise BoardNotFoundError(
+            f"the board must be found in at least {_LEAST_VIEWS} views, and was in {len(search.boards)} of {views}"
+            f"{first}"
+        )
+
+
+def fit_geometry(
+    views: list[ViewImages],
+    target: Target,
+    nominal: HybridModule,
+    lens_model: str | None = None,
+    progress: Progress | None = None,
+) -> Geometry:
+    """Find boards, lens and event map. Raises BoardNotFoundError, DegenerateDataError, OptionError.
+
+    Of `nominal` sizes, cluster pitch and frame mode are believed; mirroring and clear site are found.
+    """
+    tell = progress or (lambda stage, fraction: None)
+    believed = nominal
+    for _ in range(_ROUNDS):
+        tell("corners", 0.0)
+        search = find_boards(views, target, believed)
+        _require_boards(search, len(views))
+        tell("lens", 0.5)
+        lens_fit = fit_lens(search.boards, target, believed, lens_model)
+        tell("event map", 0.6)
+        map_fit = fit_event_map(views, search.boards, lens_fit, target, believed)
+        site_matters = nominal.frame_mode.clear_in_frame == "omitted" and nominal.frame_mode.binning > 1
+        if not site_matters or map_fit.clear_site == believed.cluster.clear_site:
+            break
+        cluster = believed.cluster.model_copy(update={"clear_site": map_fit.clear_site, "filters": None})
+        believed = believed.model_copy(update={"cluster": cluster})
+    tell("event map", 1.0)
+    return Geometry(search, lens_fit, map_fit)

@@ -1,0 +1,36 @@
+"""Boards, lens and map in one call."""
+
+from dataclasses import replace
+
+import numpy as np
+import pytest
+from rendered_boards import counterphase_set
+
+from hybridtrack.calibration.geometry_fit import fit_geometry
+from hybridtrack.errors import BoardNotFoundError
+
+
+def test_search_is_repeated_under_the_clear_site_found():
+    """With clear sites omitted from bins, a wrong data sheet ends at the same lens and map as a right one."""
+    rendered = counterphase_set()
+    stages = []
+    wrong = fit_geometry(
+        rendered.views, rendered.scene.target, rendered.layout.module(known=False), "k1k2p",
+        lambda stage, fraction: stages.append(stage),
+    )  # fmt: skip
+    right = fit_geometry(rendered.views, rendered.scene.target, rendered.layout.module(), "k1k2p")
+    assert stages.count("corners") == 2
+    np.testing.assert_allclose(wrong.lens_fit.lens.parameters, right.lens_fit.lens.parameters, rtol=1e-9)
+    np.testing.assert_allclose(
+        wrong.map_fit.colour_from_event.matrix, right.map_fit.colour_from_event.matrix, atol=1e-9
+    )
+
+
+def test_a_board_never_in_view_is_refused():
+    """One sentence that says how many views showed it, and why not."""
+    rendered = counterphase_set()
+    rng = np.random.default_rng(0)
+    noise = [rng.normal(size=v.bright_dn.shape) for v in rendered.views]
+    empty = [replace(v, bright_dn=20 + n, dark_dn=20 - n) for v, n in zip(rendered.views, noise, strict=True)]
+    with pytest.raises(BoardNotFoundError, match="in at least 3 views, and was in 0 of 4"):
+        fit_geometry(empty, rendered.scene.target, rendered.layout.module())
