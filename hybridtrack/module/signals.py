@@ -66,7 +66,7 @@ class Timing(Part):
     row_skew_ns: float | None = None
     reference_light_dn: float | None = None
 
-    def exposure_start_ns(self, t_start_ns: Array, rows_read_before: Array) -> Array:
+    def exposure_start_ns(self, t_start_ns: Array | float, rows_read_before: Array | float) -> Array:
         """Start of exposure on the event clock, float64 ns, of rows read `rows_read_before` after the first.
 
         The two arguments broadcast. Unknown terms count as zero.
@@ -75,7 +75,7 @@ class Timing(Part):
         drift = (self.frame_drift_ppm or 0.0) * 1e-6 * (stamp - (self.drift_epoch_ns or 0))
         return stamp + (self.frame_offset_ns or 0.0) + drift + np.asarray(rows_read_before) * (self.line_time_ns or 0.0)
 
-    def true_exposure_ns(self, exposure_ns: Array) -> Array:
+    def true_exposure_ns(self, exposure_ns: Array | float) -> Array:
         """True exposure from the stamped one, float64 ns."""
         return np.asarray(exposure_ns, dtype=float) + (self.exposure_correction_ns or 0.0)
 

@@ -29,14 +29,22 @@ GONE = ("lost", "out_of_view")
 class TrackTable(Protocol):
     """The columns of a tracks file that odometry reads; N samples sorted by time, then id."""
 
-    id: Array
-    t_ns: Array
-    uv: Array
-    cov: Array
-    state: Array
-    source: Array
-    states: tuple[str, ...]
-    sources: tuple[str, ...]
+    @property
+    def id(self) -> Array: ...
+    @property
+    def t_ns(self) -> Array: ...
+    @property
+    def uv(self) -> Array: ...
+    @property
+    def cov(self) -> Array: ...
+    @property
+    def state(self) -> Array: ...
+    @property
+    def source(self) -> Array: ...
+    @property
+    def states(self) -> tuple[str, ...]: ...
+    @property
+    def sources(self) -> tuple[str, ...]: ...
 
 
 @dataclass(frozen=True, eq=False)

@@ -12,7 +12,6 @@ from typing import Any
 
 import matplotlib
 from cycler import cycler
-from matplotlib.axes import Axes
 from matplotlib.figure import Figure as Canvas
 
 from hybridtrack.report.page import Figure
@@ -67,7 +66,7 @@ def _to_svg(canvas: Canvas, name: str) -> str:
 class Drawing:
     """A figure being drawn: `axes` is one Axes or the array that matplotlib's `subplots` returns."""
 
-    def __init__(self, canvas: Canvas, axes: Axes) -> None:
+    def __init__(self, canvas: Canvas, axes: Any) -> None:
         self.canvas, self.axes = canvas, axes
         self.figure: Figure | None = None
 

@@ -101,8 +101,9 @@ class BoardSetup:
     off_latency_ns: float
 
 
-def draw_blink(recipe: BoardRecipe, target: Target, dark_dn: float, span_ns: tuple[float, float],
-               random: np.random.Generator) -> Blink:
+def draw_blink(
+    recipe: BoardRecipe, target: Target, dark_dn: float, span_ns: tuple[float, float], random: np.random.Generator
+) -> Blink:
     """The target's light with its clock's error and a random phase."""
     levels = target.levels or [recipe.light.log_step]
     blink_hz = target.blink_hz * (1.0 + recipe.blink_error * random.uniform(-1, 1))
@@ -145,9 +146,16 @@ def set_up(recipe: BoardRecipe, seed: int) -> BoardSetup:
     random = np.random.default_rng([seed, 20])
     square = (target.square_xy_m[0] * recipe.square_scale[0], target.square_xy_m[1] * recipe.square_scale[1])
     dark_dn = light.bright_dn * float(np.exp(-max(target.levels or [light.log_step])))
-    scene = BoardScene(target, square, dark_dn, light.mount_dn, light.background_dn,
-                       background_waves(light.background_contrast, random), recipe.optics.psf_px,
-                       recipe.optics.vignetting)
+    scene = BoardScene(
+        target,
+        square,
+        dark_dn,
+        light.mount_dn,
+        light.background_dn,
+        background_waves(light.background_contrast, random),
+        recipe.optics.psf_px,
+        recipe.optics.vignetting,
+    )
     size = (true.colour_array.width, true.colour_array.height)
     views = choose_views(recipe.views, board_outline_m(target, square), true.lens_model(), size, random)
     check_square_size(target, square, true, views)
@@ -156,15 +164,20 @@ def set_up(recipe: BoardRecipe, seed: int) -> BoardSetup:
     flicker = np.array([2e-9 * np.pi * light.flicker_hz, light.flicker_depth, random.uniform(0, 2 * np.pi)])
     on_delay, off_delay = first_event_delays(true, recipe.pixels, blink, dark_dn, seed)
     timing = true.timing.model_copy(  # type: ignore[union-attr]
-        update={"event_latency_ns": on_delay + recipe.readout.row_ns, "reference_light_dn": light.bright_dn})
+        update={"event_latency_ns": on_delay + recipe.readout.row_ns, "reference_light_dn": light.bright_dn}
+    )
     true = true.model_copy(update={"timing": timing})
     return BoardSetup(nominal, true, target, scene, blink, motion, flicker, off_delay + recipe.readout.row_ns)
 
 
 def recorded_settings(recipe: BoardRecipe) -> dict[str, Any]:
     """What the module would say of its own settings."""
-    return {"frame_rate_hz": recipe.frames.rate_hz, "exposure_ms": recipe.frames.exposure_ms, "gain": 1.0,
-            "synthetic": True}
+    return {
+        "frame_rate_hz": recipe.frames.rate_hz,
+        "exposure_ms": recipe.frames.exposure_ms,
+        "gain": 1.0,
+        "synthetic": True,
+    }
 
 
 def write_truth(writer: RecordingWriter, setup: BoardSetup, pixels: EventPixels) -> None:
@@ -173,17 +186,27 @@ def write_truth(writer: RecordingWriter, setup: BoardSetup, pixels: EventPixels)
     times = np.unique(np.concatenate([np.append(np.arange(s.t0_ns, s.t1_ns, POSE_STEP_NS), s.t1_ns) for s in segments]))
     blink, scene = setup.blink, setup.scene
     extras: dict[str, Any] = {
-        "blink_hz": blink.blink_hz, "duty": blink.duty, "flip_epoch_ns": blink.epoch_ns,
-        "rise_ns": blink.rise_ns, "fall_ns": blink.fall_ns,
-        "dark_dn": scene.dark_dn, "bright_dn": scene.dark_dn + np.array(blink.steps_dn),
+        "blink_hz": blink.blink_hz,
+        "duty": blink.duty,
+        "flip_epoch_ns": blink.epoch_ns,
+        "rise_ns": blink.rise_ns,
+        "fall_ns": blink.fall_ns,
+        "dark_dn": scene.dark_dn,
+        "bright_dn": scene.dark_dn + np.array(blink.steps_dn),
         "view_t": np.array([[s.t0_ns, s.t1_ns] for s in segments if not s.is_move]).astype(np.int64),
         "square_m": np.array(scene.square_m),
-        "on_threshold": pixels.on_threshold, "off_threshold": pixels.off_threshold,
-        "background_hz": pixels.background_hz, "off_latency_ns": setup.off_latency_ns,
+        "on_threshold": pixels.on_threshold,
+        "off_threshold": pixels.off_threshold,
+        "background_hz": pixels.background_hz,
+        "off_latency_ns": setup.off_latency_ns,
     }
     poses = se3.to_position_quaternion(setup.motion.poses(times))
-    writer.set_truth(np.rint(times).astype(np.int64), poses, setup.true,
-                     **{name: np.asarray(value) for name, value in extras.items()})
+    writer.set_truth(
+        np.rint(times).astype(np.int64),
+        poses,
+        setup.true,
+        **{name: np.asarray(value) for name, value in extras.items()},
+    )
 
 
 def generate_board(recipe: BoardRecipe, out: Path | str, seed: int = 0, progress: Progress | None = None) -> int:
@@ -195,13 +218,27 @@ def generate_board(recipe: BoardRecipe, out: Path | str, seed: int = 0, progress
     with RecordingWriter(out, setup.nominal, recorded_settings(recipe)) as writer:
         sink = EventSink(writer, RowScanReadout(pixels.shape, recipe.readout))
         optics = BoardOptics.of_event_pixels(setup.true, setup.scene)
-        expose_events(setup.motion, setup.blink, setup.flicker, 1e9 * setup.target.scanout_s, optics, pixels, sink,
-                      lambda part: tell("events", part))
+        expose_events(
+            setup.motion,
+            setup.blink,
+            setup.flicker,
+            1e9 * setup.target.scanout_s,
+            optics,
+            pixels,
+            sink,
+            lambda part: tell("events", part),
+        )
         clock = FrameClock.of_recipe(recipe.frames, setup.true)
-        frames = BoardFrames(setup.true, BoardOptics.of_colour_pixels(setup.true, setup.scene),
-                             BoardOptics.of_frame_pixels(setup.true, setup.scene),
-                             FrameSensor(setup.true, recipe.sensor, seed), setup.motion, setup.blink, setup.flicker,
-                             1e9 * setup.target.scanout_s)
+        frames = BoardFrames(
+            setup.true,
+            BoardOptics.of_colour_pixels(setup.true, setup.scene),
+            BoardOptics.of_frame_pixels(setup.true, setup.scene),
+            FrameSensor(setup.true, recipe.sensor, seed),
+            setup.motion,
+            setup.blink,
+            setup.flicker,
+            1e9 * setup.target.scanout_s,
+        )
         record_frames(frames, clock, writer, lambda part: tell("frames", part))
         write_truth(writer, setup, pixels)
     tell("done", 1.0)

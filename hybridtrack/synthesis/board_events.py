@@ -54,8 +54,16 @@ def sample_times_ns(blink: Blink, t0_ns: float, t1_ns: float, step_ns: float) ->
     return np.append(times, t1_ns)
 
 
-def expose_events(motion: BoardMotion, blink: Blink, flicker: Array, scanout_ns: float, optics: BoardOptics,
-                  pixels: EventPixels, sink: EventSink, progress: Callable[[float], None]) -> None:
+def expose_events(
+    motion: BoardMotion,
+    blink: Blink,
+    flicker: Array,
+    scanout_ns: float,
+    optics: BoardOptics,
+    pixels: EventPixels,
+    sink: EventSink,
+    progress: Callable[[float], None],
+) -> None:
     """Run the event pixels through the whole recording into `sink`."""
     step_ns = largest_step_ns(flicker, scanout_ns)
     focal_px = pixels.module.lens_model().fx
@@ -64,8 +72,9 @@ def expose_events(motion: BoardMotion, blink: Blink, flicker: Array, scanout_ns:
 
     def expose(t: Array, weight: Array, here: Array, there: Array) -> None:
         light = np.empty((len(t), pixels.count), np.float32)
-        light_over_time(t, weight, here, there, scanout_ns, pulse_a, pulse_b, blink.amplitude_dn, blink.first_cycle,
-                        flicker, light)
+        light_over_time(
+            t, weight, here, there, scanout_ns, pulse_a, pulse_b, blink.amplitude_dn, blink.first_cycle, flicker, light
+        )
         sink.take(pixels.expose(t, light), t[-1])
 
     for index, segment in enumerate(motion.segments):

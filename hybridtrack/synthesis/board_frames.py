@@ -85,8 +85,20 @@ class BoardFrames:
 
     def _add(self, starts: Array, duration_ns: float, share: float, pictures: Array, out: Array) -> None:
         pulse_a, pulse_b = self.blink.pulses
-        add_exposure(starts, duration_ns, share, pictures, self.scanout_ns, pulse_a, pulse_b, self.blink.amplitude_dn,
-                     self.blink.before_dn, self.blink.first_cycle, self.flicker, out)
+        add_exposure(
+            starts,
+            duration_ns,
+            share,
+            pictures,
+            self.scanout_ns,
+            pulse_a,
+            pulse_b,
+            self.blink.amplitude_dn,
+            self.blink.before_dn,
+            self.blink.first_cycle,
+            self.flicker,
+            out,
+        )
 
     def is_still(self, t0_ns: float, t1_ns: float) -> bool:
         """Whether one picture of the view holds from t0 to t1."""
@@ -126,8 +138,9 @@ class BoardFrames:
         return out
 
 
-def record_frames(frames: BoardFrames, clock: FrameClock, writer: RecordingWriter,
-                  progress: Callable[[float], None]) -> None:
+def record_frames(
+    frames: BoardFrames, clock: FrameClock, writer: RecordingWriter, progress: Callable[[float], None]
+) -> None:
     """Write every frame whose rows all expose inside what is recorded."""
     segments = frames.motion.segments
     stamps = clock.stamps_ns(segments[-1].t1_ns)
@@ -139,8 +152,9 @@ def record_frames(frames: BoardFrames, clock: FrameClock, writer: RecordingWrite
             images, times, numbers = zip(*held, strict=True)
             count = len(held)
             exposures = np.full(count, clock.exposure_ns, np.int64)
-            writer.append_frames(np.stack(images), np.array(times, np.int64), exposures, np.array(numbers, np.uint64),
-                                 np.ones(count))
+            writer.append_frames(
+                np.stack(images), np.array(times, np.int64), exposures, np.array(numbers, np.uint64), np.ones(count)
+            )
             held.clear()
 
     for number, stamp in enumerate(stamps):

@@ -153,8 +153,23 @@ def picture_board(rays, rays_u, rays_v, gain, poses, pose_rows, width, square, s
     classes; `levels` (5,) DN of classes when not lit; `waves` (W, 4); `sweep` (3,): part of its way as 1, x, y.
     """
     for r in numba.prange(pose_rows.shape[0]):
-        picture_row(r * width, width, rays, rays_u, rays_v, gain, poses, pose_rows[r], square, sets, sigma, levels,
-                    waves, sweep, out)
+        picture_row(
+            r * width,
+            width,
+            rays,
+            rays_u,
+            rays_v,
+            gain,
+            poses,
+            pose_rows[r],
+            square,
+            sets,
+            sigma,
+            levels,
+            waves,
+            sweep,
+            out,
+        )
 
 
 @kernel
@@ -214,7 +229,8 @@ def light_over_time(t, weight, here, there, scanout, pulse_a, pulse_b, amplitude
         ambient = np.float32(1.0)
         if flicker[FLICKER_DEPTH] > 0.0:
             ambient = np.float32(
-                1.0 + flicker[FLICKER_DEPTH] * math.sin(flicker[FLICKER_RATE] * t[k] + flicker[FLICKER_PHASE]))
+                1.0 + flicker[FLICKER_DEPTH] * math.sin(flicker[FLICKER_RATE] * t[k] + flicker[FLICKER_PHASE])
+            )
         a = np.float32(pulse_value(t[k], pulse_a, amplitude, first_cycle))
         b = np.float32(pulse_value(t[k], pulse_b, amplitude, first_cycle))
         for n in range(out.shape[1]):
@@ -230,8 +246,20 @@ def light_over_time(t, weight, here, there, scanout, pulse_a, pulse_b, amplitude
 
 
 @kernel(parallel=True)
-def add_exposure(start, duration, share, pictures, scanout, pulse_a, pulse_b, amplitude, before, first_cycle, flicker,  # type: ignore[no-untyped-def]
-                 out):
+def add_exposure(
+    start,
+    duration,
+    share,
+    pictures,
+    scanout,
+    pulse_a,
+    pulse_b,
+    amplitude,
+    before,
+    first_cycle,
+    flicker,  # type: ignore[no-untyped-def]
+    out,
+):
     """Add the light of rows that expose from `start` (rows,) for `duration` to `out` (rows, columns), times `share`.
 
     `pictures` (PICTURES, rows, columns). The blink is integrated exactly.
@@ -244,9 +272,16 @@ def add_exposure(start, duration, share, pictures, scanout, pulse_a, pulse_b, am
         for column in range(columns):
             if scanout > 0.0 or column == 0:
                 delay = scanout * pictures[SWEEP, row, column] if scanout > 0.0 else 0.0
-                a = share * (pulse_integral(t1 - delay, pulse_a, amplitude, before, first_cycle)
-                             - pulse_integral(t0 - delay, pulse_a, amplitude, before, first_cycle))
-                b = share * (pulse_integral(t1 - delay, pulse_b, amplitude, before, first_cycle)
-                             - pulse_integral(t0 - delay, pulse_b, amplitude, before, first_cycle))
-            out[row, column] += (ambient * pictures[STILL, row, column] + a * pictures[COVER_A, row, column]
-                                 + b * pictures[COVER_B, row, column])
+                a = share * (
+                    pulse_integral(t1 - delay, pulse_a, amplitude, before, first_cycle)
+                    - pulse_integral(t0 - delay, pulse_a, amplitude, before, first_cycle)
+                )
+                b = share * (
+                    pulse_integral(t1 - delay, pulse_b, amplitude, before, first_cycle)
+                    - pulse_integral(t0 - delay, pulse_b, amplitude, before, first_cycle)
+                )
+            out[row, column] += (
+                ambient * pictures[STILL, row, column]
+                + a * pictures[COVER_A, row, column]
+                + b * pictures[COVER_B, row, column]
+            )

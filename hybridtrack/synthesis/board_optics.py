@@ -66,8 +66,9 @@ def background_waves(contrast: float, random: np.random.Generator, count: int = 
 class BoardOptics:
     """Renders pictures of a board at a grid of positions on the colour array."""
 
-    def __init__(self, module: HybridModule, scene: BoardScene, positions: Array, px_per_step: Array,
-                 aperture_px: float = 1.0) -> None:
+    def __init__(
+        self, module: HybridModule, scene: BoardScene, positions: Array, px_per_step: Array, aperture_px: float = 1.0
+    ) -> None:
         """`positions` (rows, columns, 2) colour px; `px_per_step` (2, 2): change of position per column and row;
         `aperture_px` is the side of each pixel's square."""
         self.scene, self.shape = scene, positions.shape[:2]
@@ -114,6 +115,20 @@ class BoardOptics:
         levels = np.array([scene.dark_dn] * 3 + [scene.mount_dn, scene.background_dn])
         out = np.empty((kernels.PICTURES, rows * columns), np.float32)
         poses = np.ascontiguousarray(np.asarray(world_from_camera, float).reshape(-1, 4, 4)[:, :3])
-        picture_board(self._rays, self._rays_u, self._rays_v, self._gain, poses, which, columns,
-                      np.array(scene.square_m), scene.classes, self.sigma_px, levels, scene.waves, scene.sweep, out)
+        picture_board(
+            self._rays,
+            self._rays_u,
+            self._rays_v,
+            self._gain,
+            poses,
+            which,
+            columns,
+            np.array(scene.square_m),
+            scene.classes,
+            self.sigma_px,
+            levels,
+            scene.waves,
+            scene.sweep,
+            out,
+        )
         return out.reshape(kernels.PICTURES, rows, columns)

@@ -114,8 +114,9 @@ def look_at(direction: Array) -> Array:
     return np.eye(3) if sine < 1e-12 else so3.exp(axis / sine * np.arctan2(sine, direction[2]))
 
 
-def choose_views(recipe: ViewRecipe, outline: Array, lens: Lens, size_px: tuple[int, int],
-                 random: np.random.Generator) -> Array:
+def choose_views(
+    recipe: ViewRecipe, outline: Array, lens: Lens, size_px: tuple[int, int], random: np.random.Generator
+) -> Array:
     """Poses (V, 4, 4): tilts about directions spread round, rolls, distances, and places over the whole picture.
 
     Tilt is the angle between board and sensor; before a fisheye lens, between board and line of sight.
@@ -168,8 +169,9 @@ def timeline(recipe: ViewRecipe) -> list[Segment]:
 class BoardMotion:
     """The camera's pose at any time. A move is a smooth blend (minimum jerk); sway is a sum of slow sines."""
 
-    def __init__(self, recipe: ViewRecipe, views: Array, focal_px: float, event_px: float,
-                 random: np.random.Generator) -> None:
+    def __init__(
+        self, recipe: ViewRecipe, views: Array, focal_px: float, event_px: float, random: np.random.Generator
+    ) -> None:
         """`views` (V, 4, 4); `event_px` colour px of one event pixel."""
         self.recipe, self.views, self.segments = recipe, views, timeline(recipe)
         self._starts = np.array([segment.t0_ns for segment in self.segments])

@@ -96,7 +96,9 @@ class EventPixels:
         self._pixel = np.stack([column.ravel() for column in columns], axis=1)
         self._constants = np.zeros(kernels.CONSTANTS_SIZE)
         self._constants[kernels.TAU_REFERENCE], self._constants[kernels.LIGHT_REFERENCE] = (
-            physics.tau_ns, physics.reference_light_dn)
+            physics.tau_ns,
+            physics.reference_light_dn,
+        )
         self._constants[kernels.TAU_MIN], self._constants[kernels.TAU_MAX] = physics.tau_min_ns, physics.tau_max_ns
         self._constants[kernels.REFRACTORY] = contrast.refractory_ns or 0.0
         self._constants[kernels.NOISE_WIDTH] = contrast.noise_width or 0.0
@@ -152,8 +154,22 @@ class EventPixels:
         parts = []
         while np.any(todo):
             keys = np.empty((chunks, self._capacity), np.uint64)
-            expose_pixels(t, light, self._last_ns is None, self._state, self._random, self._pixel, self._alive,
-                          self._constants, CHUNK_PIXELS, todo, keys, counts, base, self._shift)
+            expose_pixels(
+                t,
+                light,
+                self._last_ns is None,
+                self._state,
+                self._random,
+                self._pixel,
+                self._alive,
+                self._constants,
+                CHUNK_PIXELS,
+                todo,
+                keys,
+                counts,
+                base,
+                self._shift,
+            )
             fits = todo & (counts <= self._capacity)
             parts += [keys[chunk, : counts[chunk]] for chunk in np.flatnonzero(fits)]
             todo &= ~fits
@@ -163,7 +179,8 @@ class EventPixels:
     def _sorted_events(self, keys: Array, base: int) -> Events:
         keys.sort()
         size = len(keys)
-        events = Events(np.empty(size, np.int64), np.empty(size, np.uint16), np.empty(size, np.uint16),
-                        np.empty(size, np.uint8))
+        events = Events(
+            np.empty(size, np.int64), np.empty(size, np.uint16), np.empty(size, np.uint16), np.empty(size, np.uint8)
+        )
         unpack(keys, base, self._shift, self.shape[1], events.t, events.x, events.y, events.on)
         return events

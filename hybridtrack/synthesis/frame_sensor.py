@@ -171,8 +171,15 @@ class FrameSensor:
             raise ShapeError(f"Expected light of the frame's shape {mode.shape}, got {light.shape}.")
         noisy = np.empty(mode.shape)
         stream = np.random.default_rng([self.seed, 3, number]).integers(0, 2**63)
-        add_noise(np.ascontiguousarray(light, dtype=float), self._gain, physics.electrons_per_dn, physics.read_noise_e,
-                  min(physics.full_well_e, 1e18), np.uint64(stream), noisy)
+        add_noise(
+            np.ascontiguousarray(light, dtype=float),
+            self._gain,
+            physics.electrons_per_dn,
+            physics.read_noise_e,
+            min(physics.full_well_e, 1e18),
+            np.uint64(stream),
+            noisy,
+        )
         if mode.response == "gamma":
             span = mode.white_dn - mode.black_dn
             noisy = span * np.clip(noisy / span, 0.0, None) ** (1.0 / GAMMA)

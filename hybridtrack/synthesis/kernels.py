@@ -19,11 +19,20 @@ import numpy as np
 from hybridtrack.compiled import kernel
 
 # Columns of the float state of a pixel.
-(TIME, LIGHT, LEVEL, REFERENCE, READY, ON_NOISE, OFF_NOISE, NEXT_BACKGROUND, DIRECTION, EXTREME,
- STATE_SIZE) = range(11)
+(TIME, LIGHT, LEVEL, REFERENCE, READY, ON_NOISE, OFF_NOISE, NEXT_BACKGROUND, DIRECTION, EXTREME, STATE_SIZE) = range(11)
 # Entries of the constants that all pixels share.
-(TAU_REFERENCE, LIGHT_REFERENCE, TAU_MIN, TAU_MAX, REFRACTORY, NOISE_WIDTH, DELAY, DARK_LIGHT, RESETS,
- CONSTANTS_SIZE) = range(10)
+(
+    TAU_REFERENCE,
+    LIGHT_REFERENCE,
+    TAU_MIN,
+    TAU_MAX,
+    REFRACTORY,
+    NOISE_WIDTH,
+    DELAY,
+    DARK_LIGHT,
+    RESETS,
+    CONSTANTS_SIZE,
+) = range(10)
 
 LIGHT_FLOOR = 1e-4  # keeps the logarithm finite where a caller passes no light at all
 LOG_STEP = 0.1  # light that changes by more than this (natural log) inside a step is followed in sub-steps
@@ -230,8 +239,9 @@ def step(n, t1, light, state, random, pixel, constants, keys, count, base, shift
         now = before + (light - before) * part / parts
         q_next = q_end if part == parts else math.log(now)
         tau = time_constant(now - 0.5 * (light - before) / parts, constants)
-        count = follow(n, ta, tb, q, (q_next - q) / (tb - ta), tau, state, random, pixel, constants, keys, count, base,
-                       shift)
+        count = follow(
+            n, ta, tb, q, (q_next - q) / (tb - ta), tau, state, random, pixel, constants, keys, count, base, shift
+        )
         q = q_next
     state[n, TIME] = t1
     return count
@@ -344,8 +354,9 @@ def expose_pixels(t, light, start, state, random, pixel, alive, constants, size,
     for chunk in numba.prange(keys.shape[0]):
         if todo[chunk]:
             last = min((chunk + 1) * size, state.shape[0])
-            counts[chunk] = expose_chunk(chunk * size, last, t, light, start, state, random, pixel, alive, constants,
-                                         keys[chunk], base, shift)
+            counts[chunk] = expose_chunk(
+                chunk * size, last, t, light, start, state, random, pixel, alive, constants, keys[chunk], base, shift
+            )
 
 
 @kernel

@@ -22,8 +22,9 @@ GRID = (64, 40)
 CYCLES, SETTLING = 14, 4
 
 
-def first_event_delays(module: HybridModule, physics: PixelPhysics, blink: Blink, dark_dn: float,
-                       seed: int) -> tuple[float, float]:
+def first_event_delays(
+    module: HybridModule, physics: PixelPhysics, blink: Blink, dark_dn: float, seed: int
+) -> tuple[float, float]:
     """Mean delay in ns of the first ON event after a bright flip, and of the first OFF event after a dark one.
 
     Simulates a small grid of the module's pixels, without defects and background. Raises OptionError where the step
@@ -37,8 +38,9 @@ def first_event_delays(module: HybridModule, physics: PixelPhysics, blink: Blink
     dark = bright + blink.duty * blink.period_ns
     t = np.stack([bright, bright + blink.rise_ns, dark, dark + blink.fall_ns], axis=1).ravel()
     light = np.tile([dark_dn, dark_dn + step, dark_dn + step, dark_dn], CYCLES)
-    events = pixels.expose(np.append(t, CYCLES * blink.period_ns),
-                           np.repeat(np.append(light, dark_dn)[:, None], pixels.count, axis=1))
+    events = pixels.expose(
+        np.append(t, CYCLES * blink.period_ns), np.repeat(np.append(light, dark_dn)[:, None], pixels.count, axis=1)
+    )
     pixel = events.y.astype(np.int64) * GRID[0] + events.x
     delays: tuple[list[Array], list[Array]] = ([], [])
     for on, flips, ramp, length in ((1, bright, blink.rise_ns, blink.duty), (0, dark, blink.fall_ns, 1 - blink.duty)):

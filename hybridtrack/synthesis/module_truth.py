@@ -93,7 +93,10 @@ def draw_map(draw: ModuleDraw, module: HybridModule, random: np.random.Generator
     radial = draw.radial_px / array.half_diagonal_px * random.choice([-1.0, 1.0])
     rows = tuple(tuple(float(value) for value in row) for row in matrix)
     return ColourFromEvent(
-        matrix=rows, centroid=tuple(centroid.tolist()), radial=radial, centre=tuple(middle.tolist())  # type: ignore[arg-type]
+        matrix=rows,
+        centroid=tuple(centroid.tolist()),
+        radial=radial,
+        centre=tuple(middle.tolist()),  # type: ignore[arg-type]
     )
 
 
@@ -164,12 +167,14 @@ def draw_module(nominal: HybridModule, draw: ModuleDraw, seed: int) -> HybridMod
     true = draw_layout(nominal, draw, random)
     array = nominal.colour_array
     lens = nominal.lens_model() if draw.lens == "nominal" else draw_lens(draw, array.width, array.height, random)
-    return true.model_copy(update={
-        "lens": lens_parameters(lens),
-        "colour_from_event": draw_map(draw, true, random),
-        "timing": draw_timing(draw, nominal.frame_mode.shutter == "rolling", random),
-        "contrast": draw_contrast(draw, random),
-        "defects": draw_defects(draw, nominal.event_grid.shape, random),
-        "findings": None,
-        "uncertainty": None,
-    })
+    return true.model_copy(
+        update={
+            "lens": lens_parameters(lens),
+            "colour_from_event": draw_map(draw, true, random),
+            "timing": draw_timing(draw, nominal.frame_mode.shutter == "rolling", random),
+            "contrast": draw_contrast(draw, random),
+            "defects": draw_defects(draw, nominal.event_grid.shape, random),
+            "findings": None,
+            "uncertainty": None,
+        }
+    )

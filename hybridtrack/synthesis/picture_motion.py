@@ -86,4 +86,3 @@ def picture_motion(
     median, upper, highest = np.nanquantile(speeds, [0.5, 0.9, 1.0], axis=1)
     steps = 0.5 * (upper[1:] + upper[:-1]) * np.diff(times) * 1e-9
     return PictureMotion(times, median, upper, highest, np.concatenate([[0.0], np.cumsum(steps)]))
-

@@ -148,9 +148,7 @@ def pixel_rays(lens: Lens, positions: FloatArray, aperture: Aperture, channels: 
 def maps_of(scene: Scene, world_from_camera: FloatArray) -> FloatArray:
     """Surface maps (T, Q, MAP_SIZE) of poses (T, 4, 4); see the kernels."""
     maps = np.empty((len(world_from_camera), scene.size, MAP_SIZE))
-    surface_maps(
-        scene.origins, scene.edges_u, scene.edges_v, scene.one_sided, scene.windows, world_from_camera, maps
-    )
+    surface_maps(scene.origins, scene.edges_u, scene.edges_v, scene.one_sided, scene.windows, world_from_camera, maps)
     return maps
 
 
@@ -225,9 +223,7 @@ class Hits:
     distance: FloatArray
 
 
-def cast(
-    scene: Scene, world_from_camera: FloatArray, directions: FloatArray, pose_of_ray: Array | None = None
-) -> Hits:
+def cast(scene: Scene, world_from_camera: FloatArray, directions: FloatArray, pose_of_ray: Array | None = None) -> Hits:
     """Meet rays of unit `directions` (N, 3), camera axes, from one pose (4, 4) or several (K, 4, 4).
 
     `pose_of_ray` (N,) names each ray's pose, in rising order; None: the one pose.

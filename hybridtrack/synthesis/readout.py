@@ -70,9 +70,21 @@ class RowScanReadout:
         out_t, out_index = np.empty(len(events)), np.empty(len(events), np.int64)
         physics = self.physics
         size, self._clock, self._pointer = read_rows(
-            events.t, events.x.astype(np.int64), events.y.astype(np.int64), until, self._clock, self._pointer,
-            self.shape, physics.event_ns, physics.row_ns, physics.while_waiting == "wait", physics.wait_max_ns, verdict,
-            out_t, out_index)
+            events.t,
+            events.x.astype(np.int64),
+            events.y.astype(np.int64),
+            until,
+            self._clock,
+            self._pointer,
+            self.shape,
+            physics.event_ns,
+            physics.row_ns,
+            physics.while_waiting == "wait",
+            physics.wait_max_ns,
+            verdict,
+            out_t,
+            out_index,
+        )
         self._note_losses(events.t[verdict == LOST])
         self._waiting = events[verdict == WAITS]
         read = events[out_index[:size]]

@@ -99,8 +99,12 @@ def video_module(size: tuple[int, int], options: VideoEventOptions, name: str) -
             frame_offset_ns=0.0, frame_drift_ppm=0.0, drift_epoch_ns=0, line_time_ns=0.0, exposure_correction_ns=0.0
         ),
         contrast=Contrast(
-            on_threshold=options.threshold, off_threshold=options.threshold, on_spread=spread, off_spread=spread,
-            noise_width=options.noise_width, refractory_ns=options.refractory_ns,
+            on_threshold=options.threshold,
+            off_threshold=options.threshold,
+            on_spread=spread,
+            off_spread=spread,
+            noise_width=options.noise_width,
+            refractory_ns=options.refractory_ns,
         ),
         findings=["events are simulated from a video; frames are taken as instants"],
     )

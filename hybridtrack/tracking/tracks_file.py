@@ -1,8 +1,9 @@
 """Tracks, and their HDF5 file `*.tracks.h5`: layout `hybridtrack-tracks`, version 1."""
 
 import json
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, fields, replace
 from pathlib import Path
+from typing import Any
 
 import h5py
 import numpy as np
@@ -60,8 +61,8 @@ class Tracks:
 
     def __getitem__(self, selection: slice | Array) -> "Tracks":
         """Select lines by slice, mask or index array."""
-        columns = (getattr(self, name)[selection] for name in _array_names())
-        return Tracks(*columns, self.states, self.reasons, self.sources)
+        columns: dict[str, Any] = {name: getattr(self, name)[selection] for name in _array_names()}
+        return replace(self, **columns)
 
     @staticmethod
     def empty() -> "Tracks":
@@ -75,8 +76,8 @@ class Tracks:
         if not parts:
             return Tracks.empty()
         first = parts[0]
-        columns = (np.concatenate([getattr(part, name) for part in parts]) for name in _array_names())
-        return Tracks(*columns, first.states, first.reasons, first.sources)
+        columns: dict[str, Any] = {n: np.concatenate([getattr(part, n) for part in parts]) for n in _array_names()}
+        return replace(first, **columns)
 
     def in_order(self) -> "Tracks":
         """Sorted by time, then id; of lines with one time and id the last one given is kept."""
@@ -104,8 +105,13 @@ def _array_names() -> tuple[str, ...]:
 def write_tracks(path: Path | str, tracks: Tracks) -> None:
     """Write tracks sorted by time, then id, atomically."""
     ordered = tracks.in_order()
-    columns = dict(zip(COLUMNS, (ordered.id, ordered.t_ns, *ordered.uv.T, *ordered.cov.T, ordered.state,
-                                 ordered.reason, ordered.source), strict=True))
+    columns = dict(
+        zip(
+            COLUMNS,
+            (ordered.id, ordered.t_ns, *ordered.uv.T, *ordered.cov.T, ordered.state, ordered.reason, ordered.source),
+            strict=True,
+        )
+    )
     with replacing(path) as temporary, h5py.File(temporary, "w") as handle:
         handle.attrs["format"], handle.attrs["version"] = LAYOUT, 1
         for name in ("states", "reasons", "sources"):
@@ -140,9 +146,14 @@ def read_tracks(path: Path | str) -> Tracks:
         if len(read[column]) and read[column].max() >= len(allowed):
             raise FileFormatError(f"{file}: /tracks/{column} must index {len(allowed)} names, got {read[column].max()}")
     return Tracks(
-        read["id"], read["t"], np.stack([read["u"], read["v"]], axis=1),
+        read["id"],
+        read["t"],
+        np.stack([read["u"], read["v"]], axis=1),
         np.stack([read["cov_uu"], read["cov_uv"], read["cov_vv"]], axis=1),
-        read["state"], read["reason"], read["source"], *names,
+        read["state"],
+        read["reason"],
+        read["source"],
+        *names,
     )
 
 

@@ -15,8 +15,14 @@ from tests.synthesis.modules import small_module
 
 def board_target(**fields: Any) -> Target:
     """A shuttered 8 x 5 board with three squares that stay dark; `fields` override."""
-    known = {"kind": "shuttered_checker", "columns": 8, "rows": 5, "square_m": 0.03, "blink_hz": 61.0,
-             "steady_dark": [(4, 2), (7, 3), (1, 1)]}
+    known = {
+        "kind": "shuttered_checker",
+        "columns": 8,
+        "rows": 5,
+        "square_m": 0.03,
+        "blink_hz": 61.0,
+        "steady_dark": [(4, 2), (7, 3), (1, 1)],
+    }
     return Target(**{**known, **fields})
 
 
@@ -46,8 +52,10 @@ def board_recipe(
         "views": {"count": 3, "dwell_s": 0.15, "fill": (0.8, 0.95)},
         "frames": {"rate_hz": 120.0, "exposure_ms": 3.0},
     }
-    sources = {"module": ModuleSource(file=folder / "small.module.json"),
-               "target": TargetSource(file=folder / "small.target.json")}
+    sources = {
+        "module": ModuleSource(file=folder / "small.module.json"),
+        "target": TargetSource(file=folder / "small.target.json"),
+    }
     return BoardRecipe.model_validate({**known, **sources, **parts})
 
 

@@ -20,8 +20,14 @@ def small_module(
 ) -> HybridModule:
     """A 4x4-cluster module without mismatch or noise; `contrast` and `parts` override."""
     cluster, grid = Cluster(width=4, height=4, clear_site=(2, 1)), EventGrid(width=columns, height=rows)
-    thresholds: dict[str, Any] = {"on_threshold": 0.25, "off_threshold": 0.25, "on_spread": 0.0, "off_spread": 0.0,
-                                  "noise_width": 0.0, "refractory_ns": 0.0}
+    thresholds: dict[str, Any] = {
+        "on_threshold": 0.25,
+        "off_threshold": 0.25,
+        "on_spread": 0.0,
+        "off_spread": 0.0,
+        "noise_width": 0.0,
+        "refractory_ns": 0.0,
+    }
     fields: dict[str, Any] = {
         "name": "small",
         "colour_array": ColourArray(width=4 * columns, height=4 * rows),

@@ -13,8 +13,15 @@ from hybridtrack.synthesis.board_kernels import flicker_integral, pulse_integral
 
 def make(**fields: object) -> Blink:
     """A blink of 50 Hz with slow edges; `fields` override."""
-    known = {"blink_hz": 50.0, "duty": 0.4, "epoch_ns": 3e6, "steps_dn": (80.0,), "rise_ns": 1e6, "fall_ns": 2e6,
-             "span_ns": (0.0, 1e9)}
+    known = {
+        "blink_hz": 50.0,
+        "duty": 0.4,
+        "epoch_ns": 3e6,
+        "steps_dn": (80.0,),
+        "rise_ns": 1e6,
+        "fall_ns": 2e6,
+        "span_ns": (0.0, 1e9),
+    }
     return Blink(**{**known, **fields})  # type: ignore[arg-type]
 
 

@@ -63,8 +63,11 @@ def test_one_seed_one_recording(made: tuple[Path, Truth], tmp_path: Path) -> Non
 @pytest.mark.parametrize("layout", ["binned", "omitted", "single"])
 def test_truth_corners_land_on_the_corners_of_the_picture(layout: str, tmp_path: Path) -> None:
     """Corners projected by true pose and lens are the checker corners of a noise-free frame, to 0.05 frame px."""
-    mode = {"binned": frame_mode(), "omitted": frame_mode(clear_in_frame="omitted"),
-            "single": frame_mode(binning=1, width=320, height=200)}[layout]
+    mode = {
+        "binned": frame_mode(),
+        "omitted": frame_mode(clear_in_frame="omitted"),
+        "single": frame_mode(binning=1, width=320, height=200),
+    }[layout]
     plain = small_module(80, 50).model_copy(update={"frame_mode": mode, "contrast": None, "colour_from_event": None})
     recipe = board_recipe(tmp_path, module=plain, target=board_target(steady_dark=[]), optics={"vignetting": 0.0})
     setup = set_up(recipe, 5)
@@ -80,8 +83,11 @@ def test_truth_corners_land_on_the_corners_of_the_picture(layout: str, tmp_path:
         criteria = (cv2.TERM_CRITERIA_EPS + cv2.TERM_CRITERIA_MAX_ITER, 60, 1e-4)
         found = cv2.cornerSubPix(light, start[:, None].copy(), (side, side), (-1, -1), criteria)[:, 0]
         # The frame's own pixels sit where the module says, which matters where clear sites are omitted.
-        offset = np.mean(setup.true.frame_pixel_centres() - mode.colour_from_frame(
-            np.stack(np.meshgrid(np.arange(mode.width), np.arange(mode.height)), -1)), axis=(0, 1))
+        offset = np.mean(
+            setup.true.frame_pixel_centres()
+            - mode.colour_from_frame(np.stack(np.meshgrid(np.arange(mode.width), np.arange(mode.height)), -1)),
+            axis=(0, 1),
+        )
         error = mode.colour_from_frame(found) + offset - uv
         assert np.median(np.abs(error)) < 0.05 * mode.binning
         assert np.abs(np.mean(error, axis=0)).max() < 0.05
@@ -162,14 +168,22 @@ def test_frames_show_the_flips_where_truth_says(made: tuple[Path, Truth]) -> Non
     assert np.sqrt(np.mean(np.concatenate(residuals) ** 2)) < 1.2
 
 
-@pytest.mark.parametrize("change", [
-    {"views": {"count": 2, "dwell_s": 0.06, "sway_event_px": 1.5, "between": "move", "between_s": 0.08}},
-    {"views": {"count": 2, "dwell_s": 0.06, "between": "cut"}, "light": {"flicker_depth": 0.2}},
-    {"pixels": {"reference": "resets", "leak_hz": 0.2}, "readout": {"while_waiting": "lose", "resolution_ns": 1000},
-     "views": {"count": 1, "dwell_s": 0.1}},
-    {"truth": {"lens": "fisheye", "mirror_x": True, "off_lattice_px": 0.05, "radial_px": 0.1, "centre_px": 4.0},
-     "views": {"count": 1, "dwell_s": 0.1}},
-])
+@pytest.mark.parametrize(
+    "change",
+    [
+        {"views": {"count": 2, "dwell_s": 0.06, "sway_event_px": 1.5, "between": "move", "between_s": 0.08}},
+        {"views": {"count": 2, "dwell_s": 0.06, "between": "cut"}, "light": {"flicker_depth": 0.2}},
+        {
+            "pixels": {"reference": "resets", "leak_hz": 0.2},
+            "readout": {"while_waiting": "lose", "resolution_ns": 1000},
+            "views": {"count": 1, "dwell_s": 0.1},
+        },
+        {
+            "truth": {"lens": "fisheye", "mirror_x": True, "off_lattice_px": 0.05, "radial_px": 0.1, "centre_px": 4.0},
+            "views": {"count": 1, "dwell_s": 0.1},
+        },
+    ],
+)
 def test_variants_of_a_recipe_run(change: dict, tmp_path: Path) -> None:
     """Moves, cuts, flicker, another pixel model and another lens all give recordings that read back in order."""
     count = generate_board(board_recipe(tmp_path, **change), tmp_path / "v.h5", seed=1)
@@ -181,17 +195,22 @@ def test_variants_of_a_recipe_run(change: dict, tmp_path: Path) -> None:
     assert truth.pose_t_ns[-1] >= recording.frames.t_start_ns[-1]
 
 
-@pytest.mark.parametrize("mode", [
-    {"binning": 1, "width": 320, "height": 200, "mosaic": "RGGB", "clear_in_frame": "filled"},
-    {"crop": (16, 8), "width": 140, "height": 90, "row_order": -1, "clear_in_frame": "omitted"},
-    {"black_dn": 64.0, "white_dn": 1023.0, "response": "gamma", "shutter": "global"},
-])
+@pytest.mark.parametrize(
+    "mode",
+    [
+        {"binning": 1, "width": 320, "height": 200, "mosaic": "RGGB", "clear_in_frame": "filled"},
+        {"crop": (16, 8), "width": 140, "height": 90, "row_order": -1, "clear_in_frame": "omitted"},
+        {"black_dn": 64.0, "white_dn": 1023.0, "response": "gamma", "shutter": "global"},
+    ],
+)
 def test_frame_modes_run(mode: dict, tmp_path: Path) -> None:
     """Mosaic, crop, row order, gamma and sixteen bits come out as the module says."""
-    plain = small_module(80, 50).model_copy(update={"contrast": None, "colour_from_event": None,
-                                                    "frame_mode": frame_mode(**mode)})
-    recipe = board_recipe(tmp_path, module=plain, views={"count": 1, "dwell_s": 0.1},
-                          frames={"rate_hz": 100.0, "exposure_ms": 3.0})
+    plain = small_module(80, 50).model_copy(
+        update={"contrast": None, "colour_from_event": None, "frame_mode": frame_mode(**mode)}
+    )
+    recipe = board_recipe(
+        tmp_path, module=plain, views={"count": 1, "dwell_s": 0.1}, frames={"rate_hz": 100.0, "exposure_ms": 3.0}
+    )
     generate_board(recipe, tmp_path / "m.h5", seed=2)
     with Recording.open(tmp_path / "m.h5") as recording:
         assert recording.frames.shape == plain.frame_mode.shape

@@ -14,8 +14,9 @@ from hybridtrack.synthesis.frame_sensor import FrameSensor
 from hybridtrack.synthesis.recipe_parts import FrameRecipe
 from tests.synthesis.boards import board_scene, frame_mode, lens_module
 
-TIMING = Timing(frame_offset_ns=700e3, frame_drift_ppm=15.0, drift_epoch_ns=0, line_time_ns=30e3,
-                exposure_correction_ns=-20e3)
+TIMING = Timing(
+    frame_offset_ns=700e3, frame_drift_ppm=15.0, drift_epoch_ns=0, line_time_ns=30e3, exposure_correction_ns=-20e3
+)
 BLINK = Blink(blink_hz=61.0, duty=0.5, epoch_ns=1.3e6, steps_dn=(90.0,), span_ns=(-1e9, 4e9))
 
 
@@ -31,8 +32,16 @@ def frames_of(module: HybridModule, blink: Blink = BLINK, scanout_ns: float = 0.
     random = np.random.default_rng(2)
     poses = choose_views(recipe, board_outline_m(scene.target, scene.square_m), module.lens_model(), (320, 200), random)
     motion = BoardMotion(recipe, poses, module.lens_model().fx, 4.0, random)
-    return BoardFrames(module, BoardOptics.of_colour_pixels(module, scene), BoardOptics.of_frame_pixels(module, scene),
-                       FrameSensor(module), motion, blink, np.array([6e-7, 0.0, 0.0]), scanout_ns)
+    return BoardFrames(
+        module,
+        BoardOptics.of_colour_pixels(module, scene),
+        BoardOptics.of_frame_pixels(module, scene),
+        FrameSensor(module),
+        motion,
+        blink,
+        np.array([6e-7, 0.0, 0.0]),
+        scanout_ns,
+    )
 
 
 def clock_of(module: HybridModule) -> FrameClock:

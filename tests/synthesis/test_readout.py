@@ -57,8 +57,12 @@ def test_nothing_is_lost_or_read_early(seed: int, count: int, parts: int) -> Non
     """While waiting is allowed every event comes out once, late, in order, in however many calls it is read."""
     random = np.random.default_rng(seed)
     t = np.sort(random.integers(0, 20_000, count)).astype(np.int64)
-    raw = Events(t, random.integers(0, 6, count).astype(np.uint16), random.integers(0, 4, count).astype(np.uint16),
-                 random.integers(0, 2, count).astype(np.uint8))
+    raw = Events(
+        t,
+        random.integers(0, 6, count).astype(np.uint16),
+        random.integers(0, 4, count).astype(np.uint16),
+        random.integers(0, 2, count).astype(np.uint8),
+    )
     whole = read_all(RowScanReadout((4, 6)), raw)
     readout, out, edges = RowScanReadout((4, 6)), [], np.linspace(0, 20_000, parts + 1)
     for low, high in itertools.pairwise(edges):

@@ -36,24 +36,31 @@ def test_every_recipe_in_the_house_can_be_read(path: Path) -> None:
 
 def test_files_count_from_the_recipe_and_overrides_lie_over_them(tmp_path: Path) -> None:
     """Relative files are found beside the recipe; overrides replace single values of a table."""
-    recipe = load_recipe(written(tmp_path, HEAD.replace(
-        'file = "m.json"\n', 'file = "m.json"\noverrides = { frame_mode = { row_order = -1 } }\n')))
+    recipe = load_recipe(
+        written(
+            tmp_path,
+            HEAD.replace('file = "m.json"\n', 'file = "m.json"\noverrides = { frame_mode = { row_order = -1 } }\n'),
+        )
+    )
     assert isinstance(recipe, BoardRecipe)
     module = recipe.module.load()
     assert module.frame_mode.row_order == -1
     assert module.frame_mode.binning == 2
 
 
-@pytest.mark.parametrize(("text", "message"), [
-    ("kind = 3\n", r"field 'kind': expected one of board, greenhouse, got 3"),
-    ("kind = \n", "expected TOML text, got a syntax error"),
-    ('kind = "board"\n', "field 'module' is required and missing"),
-    (HEAD + "[views]\ncount = 0\n", r"field 'views.count': .*greater than or equal to 1, got 0"),
-    (HEAD + "[views]\ncounts = 4\n", r"field 'views.counts': Extra inputs are not permitted, got 4"),
-    (HEAD + "[pixels]\ntau_ns = -3.0\n", r"field 'pixels': tau_ns must be positive, got -3"),
-    (HEAD + "[pixels]\ntau = 3.0\n", r"field 'pixels.tau': .*, got 3"),
-    (HEAD + "[readout]\nwhile_waiting = 'sit'\n", "field 'readout.while_waiting'"),
-])
+@pytest.mark.parametrize(
+    ("text", "message"),
+    [
+        ("kind = 3\n", r"field 'kind': expected one of board, greenhouse, got 3"),
+        ("kind = \n", "expected TOML text, got a syntax error"),
+        ('kind = "board"\n', "field 'module' is required and missing"),
+        (HEAD + "[views]\ncount = 0\n", r"field 'views.count': .*greater than or equal to 1, got 0"),
+        (HEAD + "[views]\ncounts = 4\n", r"field 'views.counts': Extra inputs are not permitted, got 4"),
+        (HEAD + "[pixels]\ntau_ns = -3.0\n", r"field 'pixels': tau_ns must be positive, got -3"),
+        (HEAD + "[pixels]\ntau = 3.0\n", r"field 'pixels.tau': .*, got 3"),
+        (HEAD + "[readout]\nwhile_waiting = 'sit'\n", "field 'readout.while_waiting'"),
+    ],
+)
 def test_bad_recipes_are_refused_with_field_and_value(text: str, message: str, tmp_path: Path) -> None:
     """The message names the field, the requirement and what was there."""
     with pytest.raises(FileFormatError, match=message):
