@@ -6,10 +6,13 @@ light), the shape A of its warp W(x) = p + A (x - o) and an event pixel that loo
     m(t) = T(o + A^-1 (q - p(t))) + b,   p(t - a) = p - a v                                   (1)
 
 Every pixel is a level crossing: at the stamp of its last event, age a, its log light was L. The residual L - m(t - a)
-has derivatives (grad, -a grad, -1) with respect to (p, v, b), where grad = A^-T slope of T (2). A pixel that stayed silent says only
-that m has not left [L - theta_off, L + theta_on] (3). Gauss-Newton on these with the constant-velocity
-prediction as prior is an iterated extended Kalman filter (Bell and Cathey 1993) on the brightness model of Gehrig et al. 2018.
+has derivatives (grad, -a grad, -1) with respect to (p, v, b), where grad = A^-T slope of T (2). A pixel that stayed
+silent says only that m has not left [L - theta_off, L + theta_on] (3). Gauss-Newton on these with the
+constant-velocity prediction as prior is an iterated extended Kalman filter (Bell and Cathey 1993) on the brightness
+model of Gehrig et al. 2018.
 """
+
+from typing import Any
 
 import numpy as np
 
@@ -17,7 +20,7 @@ from hybridtrack.compiled import kernel
 from hybridtrack.tracking.feature_table import FORGOTTEN, HISTORY, STATE_SIZE, Pace
 
 Array = np.ndarray
-Record = np.record
+Record = Any  # one record of FEATURE or PIXEL, whose fields no type checker knows
 Table = np.recarray
 
 
@@ -68,7 +71,10 @@ def sample(template: Array, s_u: float, s_v: float, out: Array) -> bool:
     w00, w01, w10, w11 = (1 - a) * (1 - b), (1 - a) * b, a * (1 - b), a * b
     for k in range(3):
         out[k] = (
-            w00 * template[i, j, k] + w01 * template[i, j + 1, k] + w10 * template[i + 1, j, k] + w11 * template[i + 1, j + 1, k]
+            w00 * template[i, j, k]
+            + w01 * template[i, j + 1, k]
+            + w10 * template[i + 1, j, k]
+            + w11 * template[i + 1, j + 1, k]
         )
     return True
 
@@ -300,8 +306,20 @@ def suitable_tick(table: Table, pace: Pace) -> int:
 
 @kernel
 def advance(
-    t: Array, x: Array, y: Array, on: Array, until_ns: int, ramp_ns: int, levels: Table, table: Table, work: Array,
-    pace: Pace, clock: Array, out_slot: Array, out_ns: Array, out: Array,
+    t: Array,
+    x: Array,
+    y: Array,
+    on: Array,
+    until_ns: int,
+    ramp_ns: int,
+    levels: Table,
+    table: Table,
+    work: Array,
+    pace: Pace,
+    clock: Array,
+    out_slot: Array,
+    out_ns: Array,
+    out: Array,
 ) -> tuple[int, int]:
     """Run over events (N,) and bring features up to `until_ns`, tick by tick.
 

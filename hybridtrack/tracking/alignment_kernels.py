@@ -157,16 +157,25 @@ def position_covariance(h: Array, a: Array, sigma: float, with_shape: bool, out:
     c00, c01, c11 = right[0, 0], 0.5 * (right[0, 1] + right[1, 0]), right[1, 1]
     s = sigma * sigma
     out[0] = s * (a[0, 0] ** 2 * c00 + 2.0 * a[0, 0] * a[0, 1] * c01 + a[0, 1] ** 2 * c11)
-    out[1] = s * (
-        a[0, 0] * a[1, 0] * c00 + (a[0, 0] * a[1, 1] + a[0, 1] * a[1, 0]) * c01 + a[0, 1] * a[1, 1] * c11
-    )
+    out[1] = s * (a[0, 0] * a[1, 0] * c00 + (a[0, 0] * a[1, 1] + a[0, 1] * a[1, 0]) * c01 + a[0, 1] * a[1, 1] * c11)
     out[2] = s * (a[1, 0] ** 2 * c00 + 2.0 * a[1, 0] * a[1, 1] * c01 + a[1, 1] ** 2 * c11)
 
 
 @kernel
 def gather(
-    picture: Array, trust: Array, template: Array, offset: Array, radius: float, p: Array, a: Array, gain: float,
-    sigma: float, h: Array, g: Array, wu: Array, wv: Array,
+    picture: Array,
+    trust: Array,
+    template: Array,
+    offset: Array,
+    radius: float,
+    p: Array,
+    a: Array,
+    gain: float,
+    sigma: float,
+    h: Array,
+    g: Array,
+    wu: Array,
+    wv: Array,
 ) -> Array:
     """One iteration's normal equations `h` (7, 7), `g` (7,), robust by Cauchy weights.
 
@@ -251,10 +260,18 @@ def compose(p: Array, a: Array, step: Array) -> None:
 
 @kernel
 def align(
-    picture: Array, trust: Array, template: Array, offset: Array, radius: float, p: Array, a: Array,
-    shape_sigma: float, iterations: int, out: Array,
+    picture: Array,
+    trust: Array,
+    template: Array,
+    offset: Array,
+    radius: float,
+    p: Array,
+    a: Array,
+    shape_sigma: float,
+    iterations: int,
+    out: Array,
 ) -> bool:
-    """Align one template (S, S, 3) to a picture (H, W) of log light, from the warp in `p` (2,) and `a` (2, 2), in place.
+    """Align one template (S, S, 3) to log light (H, W), from the warp in `p` (2,) and `a` (2, 2), in place.
 
     `trust` (H, W) weighs pixels; `shape_sigma` is the shape's expected change since `a`, 0: keep it. Writes to `out`:
     covariance uu, uv, vv of p (px^2, residual as measured, neighbours taken as independent), correlation, share of

@@ -82,9 +82,13 @@ class Core:
         state = np.where(inside, self.slots.state[slot], OUT_OF_VIEW)
         reason = np.where(inside, self.slots.reason[slot], LEFT_PICTURE)
         return Tracks(
-            self.slots.id[slot], np.asarray(t_ns, np.int64), self.mode.colour_from_frame(uv),
+            self.slots.id[slot],
+            np.asarray(t_ns, np.int64),
+            self.mode.colour_from_frame(uv),
             (np.asarray(cov) * self.mode.binning**2).astype(np.float32),
-            state.astype(np.uint8), reason.astype(np.uint8), np.full(len(slot), source, np.uint8),
+            state.astype(np.uint8),
+            reason.astype(np.uint8),
+            np.full(len(slot), source, np.uint8),
         )
 
     def release(self, slot: int) -> None:
@@ -101,8 +105,13 @@ def new_core(module: HybridModule, options: TrackerOptions, capacity: int) -> Co
     radius = float(max(options.patch_radius, int(np.ceil(4.5 * pitch)) if with_events else 0))
     features = new_features(capacity, 2 * (int(radius) + 14) + 1)
     slots = Slots(
-        np.full(capacity, -1, np.int64), np.zeros(capacity, np.uint8), np.zeros(capacity, np.uint8),
-        np.zeros(capacity, np.int64), np.zeros(capacity), np.zeros(capacity, bool), np.zeros((capacity, 2)),
+        np.full(capacity, -1, np.int64),
+        np.zeros(capacity, np.uint8),
+        np.zeros(capacity, np.uint8),
+        np.zeros(capacity, np.int64),
+        np.zeros(capacity),
+        np.zeros(capacity, bool),
+        np.zeros((capacity, 2)),
     )
     return Core(module, options, features, slots, radius, new_pace(module, options, radius))
 
@@ -113,13 +122,34 @@ def new_pace(module: HybridModule, options: TrackerOptions, radius: float) -> Pa
     parts = int(np.ceil(longest / 1e6))
     base = longest // parts
     affine = event_from_frame(module)
+    (x_u, x_v, x_0), (y_u, y_v, y_0) = affine.tolist()
     reach = np.ceil(np.abs(affine[:, :2]).sum(axis=1) * radius).astype(np.int64) + map_slack(module, affine)
     return Pace(
-        radius, *affine.ravel().tolist(), *reach.tolist(), acceleration_share=60.0, acceleration_floor=1000.0,
-        acceleration_time_s=0.01, speed_memory_s=0.1, gain_rate=0.5, level_discount=0.5, slack=1.2, slack_fresh=1.6,
+        radius=radius,
+        x_u=x_u,
+        x_v=x_v,
+        x_0=x_0,
+        y_u=y_u,
+        y_v=y_v,
+        y_0=y_0,
+        reach_x=int(reach[0]),
+        reach_y=int(reach[1]),
+        acceleration_share=60.0,
+        acceleration_floor=1000.0,
+        acceleration_time_s=0.01,
+        speed_memory_s=0.1,
+        gain_rate=0.5,
+        level_discount=0.5,
+        slack=1.2,
+        slack_fresh=1.6,
         output_ns=base * parts,
-        history_ns=LONGEST_EXPOSURE_NS // 150, base_ns=base, shortest_ns=int(1e9 / options.fastest_rate_hz), step_px=1.0,
-        surprise=9.0, lag_ns=0, measuring=0,
+        history_ns=LONGEST_EXPOSURE_NS // 150,
+        base_ns=base,
+        shortest_ns=int(1e9 / options.fastest_rate_hz),
+        step_px=1.0,
+        surprise=9.0,
+        lag_ns=0,
+        measuring=0,
     )
 
 

@@ -94,8 +94,20 @@ class EventFollower:
         slot, when, rows = np.zeros(room, np.int64), np.zeros(room, np.int64), np.zeros((room, 5))
         pace = core.pace._replace(measuring=int(self._measuring), lag_ns=self.lag.ns)
         written, used = advance(
-            events.t, events.x, events.y, events.on, until, self._ramp_ns(), self.levels, core.table.records, core.features.work,
-            pace, self._clock, slot, when, rows,
+            events.t,
+            events.x,
+            events.y,
+            events.on,
+            until,
+            self._ramp_ns(),
+            self.levels,
+            core.table.records,
+            core.features.work,
+            pace,
+            self._clock,
+            slot,
+            when,
+            rows,
         )
         core.counters.events_used += used if record else 0
         return core.lines(slot[:written], when[:written], rows[:written, :2], rows[:written, 2:], ts.FROM_EVENTS)
@@ -107,13 +119,15 @@ class EventFollower:
 
     def bracket(self, clock: FrameClock, instant_ns: Array | None = None) -> tuple[Array, Array]:
         """The double integral's correction on the event grid and each pixel's last event, see `SharpPictures`."""
-        bracket, last = self._pictures.correction(self.exposure_events(clock), clock, instant_ns, self._ramp_ns(), self.lag.ns)
+        bracket, last = self._pictures.correction(
+            self.exposure_events(clock), clock, instant_ns, self._ramp_ns(), self.lag.ns
+        )
         if self._gaps.overlaps(*clock.span_ns):
             bracket = np.zeros_like(bracket)
         return bracket, last
 
     def activity(self, clock: FrameClock, uv: Array, radius: float) -> tuple[Array, Array]:
-        """Events in the rows' exposures within `radius` of frame positions (N, 2), and how many event pixels look there."""
+        """Events in the rows' exposures within `radius` of frame positions (N, 2), and the event pixels there."""
         events = self._buffer.since(clock.span_ns[0])
         start = clock.start_ns(self.levels.v[events.y, events.x])
         events = events[(events.t >= start) & (events.t < start + clock.exposure_ns)]

@@ -11,8 +11,8 @@ BIN_NS = 1_000_000
 class EventGaps:
     """Keeps the intervals; finds flashes as a mean change of log light over the array of more than `log_step` in 1 ms.
 
-    Movement makes as many events of one sign as of the other and lamps at mains rates change by less, so that the mean over
-    all pixels tells a flash apart.
+    Movement makes as many events of one sign as of the other and lamps at mains rates change by less, so that the
+    mean over all pixels tells a flash apart.
     """
 
     def __init__(self, log_step: float, theta_on: Array, theta_off: Array) -> None:

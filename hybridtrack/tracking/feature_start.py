@@ -22,7 +22,9 @@ FEW = 3
 class FeatureStarter:
     """Fills slots."""
 
-    def __init__(self, core: Core, matcher: FrameMatcher, follower: EventFollower | None, points: Points | None) -> None:
+    def __init__(
+        self, core: Core, matcher: FrameMatcher, follower: EventFollower | None, points: Points | None
+    ) -> None:
         self._core, self._matcher, self._follower, self._points = core, matcher, follower, points
         self._waiting = np.ones(0 if points is None else len(points), bool)
         self._next_id = 0
@@ -162,7 +164,7 @@ class FeatureStarter:
         good &= activity >= max(0.3, float(np.median(activity)))
         if good.sum() < FEW:
             return
-        # With few events in the exposure the two pictures differ less than they should: only the liveliest patches count.
+        # With few events in the exposure the two pictures differ less than they should: only lively patches count.
         velocities = (found[good] - uv[good]) / (0.9 * clock.exposure_ns * 1e-9)
         middle = np.median(velocities, axis=0)
         spread = float(np.median(np.linalg.norm(velocities - middle, axis=1)))

@@ -1,7 +1,7 @@
 """Find every feature in a new frame, decide whether to believe it, and join it to the filter.
 
-Two ways lead to a feature: its own template, aligned from where the filter expects it (hybrid mode) or from where pyramidal
-Lucas-Kanade found it (frames mode); and, where that fails, Lucas-Kanade from the frame before, started from the
+Two ways lead to a feature: its own template, aligned from where the filter expects it (hybrid mode) or from where
+pyramidal Lucas-Kanade found it (frames mode); and, where that fails, Lucas-Kanade from the frame before, started from the
 prediction and from rest. What the filter expects and what the frame shows are joined by covariance if they agree.
 """
 
@@ -182,7 +182,9 @@ class FrameLocator:
 
     def _miss(self, e: Expectation, light: LogLight) -> None:
         """The frame does not show the feature where it could be."""
-        u, v = (round(float(c)) for c in np.clip(e.position, 0, [self._core.mode.width - 1, self._core.mode.height - 1]))
+        u, v = (
+            round(float(c)) for c in np.clip(e.position, 0, [self._core.mode.width - 1, self._core.mode.height - 1])
+        )
         self._core.slots.missed[e.slot] += 1
         cov = self._core.table.cov[e.slot]
         for k in range(2):
@@ -200,7 +202,9 @@ class FrameLocator:
 
     def needs_renewal(self, slot: int) -> bool:
         """Whether Lucas-Kanade holds a feature that no longer looks like its own template."""
-        return self._core.slots.reason[slot] == ts.FRAME_UNMATCHED and self._core.slots.missed[slot] >= RENEW_AFTER_FRAMES
+        return (
+            self._core.slots.reason[slot] == ts.FRAME_UNMATCHED and self._core.slots.missed[slot] >= RENEW_AFTER_FRAMES
+        )
 
 
 def _flow_match(position: Array) -> Match:

@@ -1,6 +1,7 @@
 """What one frame says about each feature: where it is, and with what template to go on."""
 
 from dataclasses import dataclass
+from typing import Any
 
 import cv2
 import numpy as np
@@ -45,13 +46,14 @@ def pyramidal_flow(before: Array, after: Array, points: Array, guess: Array, gat
     backward agree within `gate_px` (N,)."""
     if not len(points):
         return np.empty((0, 2)), np.empty(0, bool)
-    window = {"winSize": (PYRAMID_WINDOW, PYRAMID_WINDOW), "maxLevel": PYRAMID_LEVELS - 1}
-    flags = cv2.OPTFLOW_USE_INITIAL_FLOW
+    flow: Any = cv2.calcOpticalFlowPyrLK  # its stub allows no array of points
+    size, top, flags = (PYRAMID_WINDOW, PYRAMID_WINDOW), PYRAMID_LEVELS - 1, cv2.OPTFLOW_USE_INITIAL_FLOW
+    first = guess.astype(np.float32).reshape(-1, 1, 2)
     start = points.astype(np.float32).reshape(-1, 1, 2)
-    found, ok, _ = cv2.calcOpticalFlowPyrLK(before, after, start, guess.astype(np.float32).reshape(-1, 1, 2), **window, flags=flags)
+    found, ok, _ = flow(before, after, start, first, winSize=size, maxLevel=top, flags=flags)
     # The way back starts from the same displacement, so that both ways search the same distance.
     back_guess = found - (guess - points).astype(np.float32).reshape(-1, 1, 2)
-    back, ok_back, _ = cv2.calcOpticalFlowPyrLK(after, before, found, back_guess, **window, flags=flags)
+    back, ok_back, _ = flow(after, before, found, back_guess, winSize=size, maxLevel=top, flags=flags)
     error = np.linalg.norm((back - start).reshape(-1, 2), axis=1)
     good = (ok.ravel() > 0) & (ok_back.ravel() > 0) & (error <= gate_px)
     return found.reshape(-1, 2).astype(float), good
@@ -102,8 +104,16 @@ class FrameMatcher:
         with_slopes(values, self._template)
         shape_sigma = SHAPE_SIGMA if path is None else SHAPE_SIGMA_SMEARED
         converged = align(
-            light.log_light, light.trust, self._template, table.own_offset[slot], self._radius, position, shape,
-            shape_sigma, 15, self._out,
+            light.log_light,
+            light.trust,
+            self._template,
+            table.own_offset[slot],
+            self._radius,
+            position,
+            shape,
+            shape_sigma,
+            15,
+            self._out,
         )
         factor = NOISE_FACTOR * (1.0 if path is None else 1.0 + SMEAR_NOISE * self.smear_px(path))
         cov = self._out[:3] * factor + np.array([1.0, 0.0, 1.0]) * ALIGNMENT_FLOOR_PX**2
@@ -153,10 +163,12 @@ class FrameMatcher:
 def static_covariance(work: Array, shape: Array, radius: float, pixels_per_px2: float, level_sigma: float) -> Array:
     """Position error (2, 2), frame px^2, from errors of the levels that stay while the patch is followed.
 
-    Normal equations of a translation over the event pixels under the template (S, S, 3), each level off by `level_sigma`.
+    Normal equations of a translation over the event pixels under the template (S, S, 3), levels off by `level_sigma`.
     """
     middle, reach = work.shape[0] // 2, int(radius)
-    inner = work[middle - reach : middle + reach + 1, middle - reach : middle + reach + 1, 1:].reshape(-1, 2).astype(float)
+    inner = (
+        work[middle - reach : middle + reach + 1, middle - reach : middle + reach + 1, 1:].reshape(-1, 2).astype(float)
+    )
     inner = (inner - inner.mean(axis=0)) @ np.linalg.inv(shape)
     information = inner.T @ inner * pixels_per_px2 + 1e-6 * np.eye(2)
     return level_sigma**2 * np.linalg.inv(information)

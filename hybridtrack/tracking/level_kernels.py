@@ -13,7 +13,6 @@ from hybridtrack.tracking.feature_table import NEVER
 Array = np.ndarray
 
 
-
 @kernel
 def ramp_level(t: int, t_a: int, level_a: float, t_b: int, level_b: float, ramp_ns: int) -> float:
     """Log light at `t` between an event at `t_a` and the next at `t_b`."""
@@ -35,9 +34,7 @@ def mean_exp(level_a: float, level_b: float) -> float:
 
 
 @kernel
-def ramp_integral(
-    t0: int, t1: int, t_a: int, level_a: float, t_b: int, level_b: float, ramp_ns: int
-) -> float:
+def ramp_integral(t0: int, t1: int, t_a: int, level_a: float, t_b: int, level_b: float, ramp_ns: int) -> float:
     """Integral of exp(level) in ns over [t0, t1] cut to the segment between two events of a pixel."""
     low, high = max(t0, t_a), min(t1, t_b)
     if high <= low:
@@ -51,13 +48,22 @@ def ramp_integral(
 
 @kernel
 def integrate_exposures(
-    t: Array, x: Array, y: Array, on: Array, theta_on: Array, theta_off: Array, lag_ns: int,
-    start_ns: Array, exposure_ns: int, instant_ns: Array, ramp_ns: int,
+    t: Array,
+    x: Array,
+    y: Array,
+    on: Array,
+    theta_on: Array,
+    theta_off: Array,
+    lag_ns: int,
+    start_ns: Array,
+    exposure_ns: int,
+    instant_ns: Array,
+    ramp_ns: int,
 ) -> tuple[Array, Array, Array]:
     """The double integral of events over each pixel's own exposure (Pan et al. 2019).
 
-    Events (N,) in order; stamped `lag_ns` after their light; thresholds, exposure starts and instants on the grid (rows, columns). Returns on the grid:
-    `correction` = log(mean over the exposure of exp(level)) - level at the instant, to be taken from the log of a
+    Events (N,) in order, stamped `lag_ns` after their light; thresholds, exposure starts and instants on the grid
+    (rows, columns). Returns on the grid: `correction` = log(mean over the exposure of exp(level)) - level at the instant, to be taken from the log of a
     blurred picture to have the sharp one at the instant; `count` of events inside the exposure; `last_ns` light time
     of the last event at or before the instant (NEVER where none).
     """

@@ -48,17 +48,21 @@ class FrameClock:
     @property
     def span_ns(self) -> tuple[int, int]:
         """First start and last end of exposure over all rows."""
-        return int(self.first_start_ns), int(self.first_start_ns + self.line_time_ns * (self.height - 1)) + self.exposure_ns
+        return int(self.first_start_ns), int(
+            self.first_start_ns + self.line_time_ns * (self.height - 1)
+        ) + self.exposure_ns
 
 
 def frame_clock(module: HybridModule, t_start_ns: int, exposure_ns: int) -> FrameClock:
     """The rows' exposures of a frame stamped `t_start_ns` (frame clock). Raises NotCalibratedError without clocks."""
     timing, mode = module.known_timing(), module.frame_mode
-    exposure = int(round(float(timing.true_exposure_ns(exposure_ns))))
+    exposure = round(float(timing.true_exposure_ns(np.array(exposure_ns))))
     if exposure <= 0:
         raise DegenerateDataError(f"a frame's exposure must be positive, got {exposure} ns")
     line = float(timing.line_time_ns or 0.0) if mode.shutter == "rolling" else 0.0
-    return FrameClock(float(timing.exposure_start_ns(t_start_ns, 0)), line, exposure, mode.height, mode.row_order)
+    return FrameClock(
+        float(timing.exposure_start_ns(np.array(t_start_ns), np.array(0))), line, exposure, mode.height, mode.row_order
+    )
 
 
 def check_for_events(module: HybridModule) -> None:
@@ -110,14 +114,25 @@ class SharpPictures:
         self.frame_uv = np.stack([levels.u, levels.v], axis=-1)
         self._theta_on, self._theta_off = (np.ascontiguousarray(theta) for theta in (levels.theta_on, levels.theta_off))
 
-    def correction(self, events: Events, clock: FrameClock, instant_ns: Array | None, ramp_ns: int, lag_ns: int) -> tuple[Array, Array]:
-        """The double integral's bracket (rows, columns) at the rows' middles, or at `instant_ns` (rows, columns); and each
-        pixel's last event before that."""
+    def correction(
+        self, events: Events, clock: FrameClock, instant_ns: Array | None, ramp_ns: int, lag_ns: int
+    ) -> tuple[Array, Array]:
+        """The double integral's bracket (rows, columns) at the rows' middles, or at `instant_ns` (rows, columns); and
+        each pixel's last event before that."""
         start = clock.start_ns(self.frame_uv[..., 1])
         instant = start + clock.exposure_ns // 2 if instant_ns is None else instant_ns
         bracket, count, last = integrate_exposures(
-            events.t, events.x, events.y, events.on, self._theta_on, self._theta_off, lag_ns,
-            start, clock.exposure_ns, instant, ramp_ns,
+            events.t,
+            events.x,
+            events.y,
+            events.on,
+            self._theta_on,
+            self._theta_off,
+            lag_ns,
+            start,
+            clock.exposure_ns,
+            instant,
+            ramp_ns,
         )
         if instant_ns is None:
             # One event in an exposure is as likely noise as movement, and moves the mean less than its own error.
@@ -135,9 +150,7 @@ class SharpPictures:
         )
         return light.log_light - spread
 
-    def set_levels(
-        self, light: LogLight, clock: FrameClock, bracket: Array, last_ns: Array, lag_ns: int
-    ) -> None:
+    def set_levels(self, light: LogLight, clock: FrameClock, bracket: Array, last_ns: Array, lag_ns: int) -> None:
         """Set every pixel's level to the sharp picture at its row's middle of exposure, events being `lag_ns` late."""
         levels, (u, v) = self._levels, np.moveaxis(self.frame_uv.astype(np.float32), -1, 0)
         blurred = cv2.remap(light.log_light, u, v, cv2.INTER_CUBIC, borderMode=cv2.BORDER_REPLICATE)

@@ -25,7 +25,7 @@ class LogLight:
 
 
 class LogLightReader:
-    """Turns the pictures of one module into log light. Options of the frame mode: levels, response, mosaic, clear sites."""
+    """Turns the pictures of one module into log light, by its levels, response, mosaic and clear sites."""
 
     def __init__(self, module: HybridModule) -> None:
         self._mode = module.frame_mode
@@ -58,7 +58,7 @@ class LogLightReader:
         if light.ndim == 3:
             light = light @ np.array([0.25, 0.5, 0.25], np.float32)
         elif mode.mosaic != "none":
-            # Each output is one quarter red, one half green, one quarter blue at any phase of a 2x2 mosaic, without a shift.
+            # Each output is one quarter red, one half green, one quarter blue at any phase of a 2x2 mosaic.
             light = cv2.sepFilter2D(light, -1, np.array([0.25, 0.5, 0.25]), np.array([0.25, 0.5, 0.25]))
         return light
 

@@ -28,7 +28,8 @@ def check_recording(recording: Recording, module: HybridModule, options: Tracker
     if recording.frames.shape[:2] != mode.shape:
         height, width = recording.frames.shape[:2]
         raise ModuleMismatchError(
-            f"{recording.path}: frames must be {mode.width}x{mode.height} px as module '{module.name}' says, got {width}x{height}"
+            f"{recording.path}: frames must be {mode.width}x{mode.height} px as module '{module.name}' says, "
+            f"got {width}x{height}"
         )
     if options.mode != "frames":
         recording.require_events()

@@ -89,7 +89,9 @@ def write_overlay(
     first = overlay_picture(recording, module, tracks, 0)
     with replacing(target) as temporary:
         film_path = temporary.with_suffix(".mp4")
-        film = cv2.VideoWriter(str(film_path), cv2.VideoWriter.fourcc(*"mp4v"), min(1e9 / spacing, 60.0), first.shape[1::-1])
+        film = cv2.VideoWriter(
+            str(film_path), cv2.VideoWriter.fourcc(*"mp4v"), min(1e9 / spacing, 60.0), first.shape[1::-1]
+        )
         if not film.isOpened():
             raise OptionError(f"{target}: films can't be written here; ask for a .png")
         try:

@@ -15,7 +15,7 @@ HEADER = ["id", "t_ns", "u", "v"]
 
 @dataclass(frozen=True)
 class Points:
-    """Points to follow: `id` int64 (N,), unique; `t_ns` int64 (N,) event clock; `uv` float64 (N, 2) raw colour-array px."""
+    """Points to follow: `id` int64 (N,), unique; `t_ns` int64 (N,) event clock; `uv` float64 (N, 2) raw colour px."""
 
     id: Array
     t_ns: Array
@@ -25,7 +25,8 @@ class Points:
         count = len(self.id)
         if np.shape(self.t_ns) != (count,) or np.shape(self.uv) != (count, 2):
             raise ShapeError(
-                f"Expected `t_ns` of shape ({count},) and `uv` of shape ({count}, 2), got {np.shape(self.t_ns)} and {np.shape(self.uv)}."
+                f"Expected `t_ns` of shape ({count},) and `uv` of shape ({count}, 2), "
+                f"got {np.shape(self.t_ns)} and {np.shape(self.uv)}."
             )
         if len(np.unique(self.id)) != count:
             raise ShapeError("Expected every point's id once, got one twice.")
@@ -52,7 +53,8 @@ def read_points(path: Path | str) -> Points:
         except (UnicodeDecodeError, csv.Error) as error:
             raise FileFormatError(f"{file}: expected CSV text, got {error}") from None
     if not rows or [name.strip() for name in rows[0]] != HEADER:
-        raise FileFormatError(f"{file}: expected the header '{','.join(HEADER)}', got {','.join(rows[0]) if rows else 'nothing'!r:.60}")
+        received = ",".join(rows[0]) if rows else ""
+        raise FileFormatError(f"{file}: expected the header '{','.join(HEADER)}', got {received!r:.60}")
     identities, times, positions = [], [], []
     for number, row in enumerate(rows[1:], start=2):
         try:
@@ -61,7 +63,9 @@ def read_points(path: Path | str) -> Points:
             times.append(int(time))
             positions.append((float(u), float(v)))
         except ValueError:
-            raise FileFormatError(f"{file}: line {number} must be two integers and two numbers, got {','.join(row)!r:.60}") from None
+            received = ",".join(row)
+            wanted = f"{file}: line {number} must be two integers and two numbers"
+            raise FileFormatError(f"{wanted}, got {received!r:.60}") from None
         if not np.all(np.isfinite(positions[-1])):
             raise FileFormatError(f"{file}: line {number}: u and v must be finite, got {u}, {v}")
         if identities[-1] < 0:

@@ -71,7 +71,7 @@ class Tracker:
             self._follower.add_gap(t0_ns, t1_ns)
 
     def push_frame(self, image: Array, t_start_ns: int, exposure_ns: int) -> Tracks:
-        """Take a frame (H, W) or (H, W, 3), stamped on the frame clock, after the events of its exposure; return its lines.
+        """Take a frame (H, W) or (H, W, 3), stamped on the frame clock, after its exposure's events; return its lines.
 
         Raises ModuleMismatchError for a picture of another size.
         """
@@ -145,8 +145,10 @@ class Tracker:
             if not core.table.active[e.slot]:
                 continue
             slots = core.slots
-            sharper = slots.state[e.slot] == ts.ALIVE and slots.smear[e.slot] > 1.0 and (
-                e.smear < SHARPER * slots.smear[e.slot]
+            sharper = (
+                slots.state[e.slot] == ts.ALIVE
+                and slots.smear[e.slot] > 1.0
+                and (e.smear < SHARPER * slots.smear[e.slot])
             )
             if sharper or (self.options.mode != "events" and self._locator.needs_renewal(e.slot)):
                 self._matcher.take_own(e.slot, views, core.table.state[e.slot, :2], e.smear)

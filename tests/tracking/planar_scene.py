@@ -1,8 +1,8 @@
 """A small scene that the package's own synthesis has no part in: a photograph sliding before an ideal module.
 
 Light is a photograph of scikit-image, in colour-array px, moved by `motion(t_s) -> (2,)` px and turned and scaled by
-`shape(t_s) -> (2, 2)` about the array's middle. Frames average 2 x 2 (or so) colour pixels over each row's exposure; event pixels are ideal
-comparators behind a one-pixel aperture, with a given mismatch of thresholds.
+`shape(t_s) -> (2, 2)` about the array's middle. Frames average their bins over each row's exposure; event pixels are
+ideal comparators behind a one-pixel aperture, with a given mismatch of thresholds.
 """
 
 from collections.abc import Callable
@@ -98,7 +98,9 @@ class PlanarScene:
         """Light at colour positions (..., 2) at one instant."""
         where = (uv - self._middle - self.motion(t_s)) @ np.linalg.inv(self.shape(t_s)).T + 768.0
         mapped = where.astype(np.float32)
-        return cv2.remap(self.texture, mapped[..., 0], mapped[..., 1], cv2.INTER_CUBIC, borderMode=cv2.BORDER_WRAP) * self.light(t_s)
+        return cv2.remap(
+            self.texture, mapped[..., 0], mapped[..., 1], cv2.INTER_CUBIC, borderMode=cv2.BORDER_WRAP
+        ) * self.light(t_s)
 
     def _log_light(self, t_s: float) -> Array:
         return np.log(np.maximum(self._sample(self._positions, t_s), 0.004)).astype(np.float64)
@@ -106,7 +108,9 @@ class PlanarScene:
     def where(self, uv0: Array, t_ns: Array) -> Array:
         """Position (N, 2) at `t_ns` (N,) of the points of the photograph that were at `uv0` (N, 2) at time zero."""
         start = (uv0 - self._middle - self.motion(0.0)) @ np.linalg.inv(self.shape(0.0)).T
-        moved = [self.shape(t * 1e-9) @ s + self._middle + self.motion(t * 1e-9) for s, t in zip(start, t_ns, strict=True)]
+        moved = [
+            self.shape(t * 1e-9) @ s + self._middle + self.motion(t * 1e-9) for s, t in zip(start, t_ns, strict=True)
+        ]
         return np.array(moved)
 
     def events(self, t0_ns: int, t1_ns: int, step_ns: int = 100_000) -> Events:
@@ -120,7 +124,9 @@ class PlanarScene:
             before = after
         every = np.concatenate(parts)
         every = every[np.argsort(every[:, 0], kind="stable")]
-        return Events(every[:, 0], *(every[:, k].astype(kind) for k, kind in ((1, np.uint16), (2, np.uint16), (3, np.uint8))))
+        return Events(
+            every[:, 0], *(every[:, k].astype(kind) for k, kind in ((1, np.uint16), (2, np.uint16), (3, np.uint8)))
+        )
 
     def frame(self, t_start_ns: int, exposure_ns: int, parts: int = 16) -> Array:
         """One frame, blurred over the exposure, rows one after the other."""
@@ -140,5 +146,7 @@ class PlanarScene:
                 out[first : first + block] += seen.reshape(-1, b, width, b).mean(axis=(1, 3)) / parts
         scale = (mode.white_dn - mode.black_dn) / WHITE_LIGHT
         electrons = 20.0  # per DN
-        dn = self._rng.poisson(out * scale * electrons) / electrons + self.read_noise_dn * self._rng.standard_normal(out.shape)
+        dn = self._rng.poisson(out * scale * electrons) / electrons + self.read_noise_dn * self._rng.standard_normal(
+            out.shape
+        )
         return np.clip(np.rint(dn + mode.black_dn), 0, 255).astype(np.uint8)
