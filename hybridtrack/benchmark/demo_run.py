@@ -24,14 +24,17 @@ class DemoResult:
     calibration: CalibrationResult
     score: CalibrationScore
     hybrid: LapRun
-    frames: LapRun
+    frames: LapRun | None
     true_module: HybridModule
     truth: Truth
     seconds: dict[str, float]
 
 
-def run_demo(sequences: Path, folder: Path, seed: int, progress: Progress) -> DemoResult:
-    """Run everything into `folder`: recordings, calibrated module, tracks, trajectory and map."""
+def run_demo(sequences: Path, folder: Path, seed: int, frames_too: bool, progress: Progress) -> DemoResult:
+    """Run everything into `folder`: recordings, calibrated module, tracks, trajectory and map.
+
+    `frames_too` runs the lap a second time on frames alone, to compare.
+    """
     folder.mkdir(parents=True, exist_ok=True)
     marks = [time.perf_counter()]
     recordings = make_recordings(sequences, folder, seed, progress, "greenhouse_demo")
@@ -43,11 +46,11 @@ def run_demo(sequences: Path, folder: Path, seed: int, progress: Progress) -> De
     write_tracks(folder / "run.tracks.h5", hybrid.tracks)
     write_outputs(hybrid.odometry, folder)
     marks.append(time.perf_counter())
-    frames = run_lap(recordings, calibration, "frames", progress)
+    frames = run_lap(recordings, calibration, "frames", progress) if frames_too else None
     marks.append(time.perf_counter())
     truth = read_truth(recordings.lap)
     true_module = read_truth(recordings.board).module
     assert true_module is not None
     stages = ("synthesis", "calibration", "hybrid tracks and path", "frames alone")
-    seconds = {stage: marks[k + 1] - marks[k] for k, stage in enumerate(stages)}
+    seconds = {stage: marks[k + 1] - marks[k] for k, stage in enumerate(stages) if k < 3 or frames_too}
     return DemoResult(recordings, calibration, score, hybrid, frames, true_module, truth, seconds)

@@ -11,6 +11,7 @@ from hybridtrack.cli.console import console, print_table, report_written, shown_
 def demo_command(
     out: Annotated[Path, typer.Option(help="Folder for the recordings, results and report.html.")] = Path("demo"),
     seed: Annotated[int, typer.Option(help="One seed, one demo.")] = 2026,
+    frames_too: Annotated[bool, typer.Option("--frames-too", help="Also run the lap on frames alone.")] = False,
 ) -> None:
     """Make a board recording and a greenhouse lap, calibrate, track, find the path, and score it all.
 
@@ -23,7 +24,7 @@ def demo_command(
     from hybridtrack.report.page import write_page
 
     with shown_progress() as progress:
-        result = run_demo(example_folder("sequences"), out, seed, progress)
+        result = run_demo(example_folder("sequences"), out, seed, frames_too, progress)
         progress("drawing the page", 0.0)
         write_page(demo_page(result), out / "report.html")
     print_table(error_table(result), "Calibration against truth")

@@ -51,8 +51,8 @@ class EventTableOptions:
 def decimal_text_to_ns(text: Array, unit_ns: int) -> Array:
     """Convert decimal numbers as text (N,) to int64 ns exactly, beyond what a float64 can hold.
 
-    >>> decimal_text_to_ns(np.array(["1700000000.123456789", "-0.5"]), 1_000_000_000)
-    array([1700000000123456789,         -500000000])
+    >>> decimal_text_to_ns(np.array(["1700000000.123456789", "-0.5"]), 1_000_000_000).tolist()
+    [1700000000123456789, -500000000]
     """
     digits = len(str(unit_ns)) - 1
     if any("e" in item or "E" in item for item in text[:1]):

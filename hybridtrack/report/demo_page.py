@@ -3,6 +3,7 @@
 import numpy as np
 
 from hybridtrack.benchmark.demo_run import DemoResult
+from hybridtrack.benchmark.lap import LapRun
 from hybridtrack.benchmark.metrics import map_displacement, moved_poses
 from hybridtrack.module import HybridModule
 from hybridtrack.recording import Recording
@@ -79,11 +80,17 @@ def error_table(result: DemoResult) -> Table:
     return Table(("quantity", "estimate", "truth", "error", "stated deviation", "error in deviations"), tuple(rows))
 
 
+def _runs(result: DemoResult) -> list[tuple[LapRun, str, str, str]]:
+    """Each run with its name, line style and colour."""
+    runs = [(result.hybrid, "hybrid", "-", SERIES[1])]
+    return runs if result.frames is None else [*runs, (result.frames, "frames alone", ":", SERIES[0])]
+
+
 def truth_path_figure(result: DemoResult) -> Figure:
     """Estimated paths laid on the true one by a similarity, from above and from the side."""
     true = result.truth.world_from_camera[:, :3, 3]
     caption = (
-        "The trolley's path: truth in ink, hybrid in colour over it, frames alone dotted. Estimates are laid on "
+        "The trolley's path: truth in ink, the estimate in colour over it. Estimates are laid on "
         "the truth by the one similarity that a single camera leaves open."
     )
     spans = np.argsort(-np.ptp(true, axis=0))
@@ -91,10 +98,7 @@ def truth_path_figure(result: DemoResult) -> Figure:
     with drawing("truth-path", caption, wide=True, columns=2, height_in=3.2) as sheet:
         for axes, (across, down) in zip(sheet.axes, ((first, second), (first, third)), strict=True):
             axes.plot(true[:, across], true[:, down], color=INK, lw=2.4, alpha=0.35, label="truth")
-            for run, name, style, colour in (
-                (result.hybrid, "hybrid", "-", SERIES[1]),
-                (result.frames, "frames alone", ":", SERIES[0]),
-            ):
+            for run, name, style, colour in _runs(result):
                 found = run.odometry.trajectory.found
                 moved = moved_poses(run.error.similarity, run.odometry.trajectory.world_from_camera[found])[:, :3, 3]
                 axes.plot(moved[:, across], moved[:, down], style, color=colour, lw=1.3, label=name)
@@ -107,21 +111,21 @@ def truth_path_figure(result: DemoResult) -> Figure:
 def path_error_figure(result: DemoResult) -> Figure:
     """Distance from the truth over time."""
     with drawing("path-error", "Distance of the estimated path from the truth over the lap.") as sheet:
-        for run, name, colour in ((result.hybrid, "hybrid", SERIES[1]), (result.frames, "frames alone", SERIES[0])):
+        for run, name, style, colour in _runs(result):
             distance = np.linalg.norm(run.error.errors[:, :3], axis=1)
-            sheet.axes.plot(np.linspace(0, 1, len(distance)), 1e3 * distance, color=colour, label=name)
+            sheet.axes.plot(np.linspace(0, 1, len(distance)), 1e3 * distance, ls=style, color=colour, label=name)
         sheet.axes.set(xlabel="share of the lap", ylabel="mm", ylim=(0, None))
         sheet.axes.legend()
     return finished(sheet)
 
 
 def path_table(result: DemoResult) -> Table:
-    """Both modes side by side."""
+    """What the lap came to, a line a mode."""
     rows = []
-    for run, name in ((result.hybrid, "hybrid"), (result.frames, "frames alone")):
+    for run, name, _, _ in _runs(result):
         lives, summary = lives_of(run.tracks), run.odometry.summary
         rows.append((
-            name, f"{run.error.percent:.2f} %", f"{1e3 * run.error.rms_m:.0f} mm", f"{run.error.turn_rms_deg:.2f}°",
+            name, f"{run.error.percent:.3f} %", f"{1e3 * run.error.rms_m:.2f} mm", f"{run.error.turn_rms_deg:.2f}°",
             str(summary["loops_used"]), str(summary["health"].get("lost", 0)), f"{np.median(lives.seconds):.2f} s",
             f"{len(run.tracks):,}",
         ))  # fmt: skip
