@@ -246,7 +246,7 @@ def light_over_time(t, weight, here, there, scanout, pulse_a, pulse_b, amplitude
 
 
 @kernel(parallel=True)
-def add_exposure(
+def add_exposure(  # type: ignore[no-untyped-def]
     start,
     duration,
     share,
@@ -257,7 +257,7 @@ def add_exposure(
     amplitude,
     before,
     first_cycle,
-    flicker,  # type: ignore[no-untyped-def]
+    flicker,
     out,
 ):
     """Add the light of rows that expose from `start` (rows,) for `duration` to `out` (rows, columns), times `share`.

@@ -91,12 +91,8 @@ def draw_map(draw: ModuleDraw, module: HybridModule, random: np.random.Generator
     matrix = (np.eye(2) + skew) @ matrix
     matrix[:, 2] -= skew @ middle
     radial = draw.radial_px / array.half_diagonal_px * random.choice([-1.0, 1.0])
-    rows = tuple(tuple(float(value) for value in row) for row in matrix)
-    return ColourFromEvent(
-        matrix=rows,
-        centroid=tuple(centroid.tolist()),
-        radial=radial,
-        centre=tuple(middle.tolist()),  # type: ignore[arg-type]
+    return ColourFromEvent.model_validate(
+        {"matrix": matrix.tolist(), "centroid": centroid.tolist(), "radial": radial, "centre": middle.tolist()}
     )
 
 
