@@ -11,7 +11,8 @@ from rich.table import Table as TerminalTable
 
 from hybridtrack.report.page import Table
 
-console = Console(highlight=False)
+# A log or a pipe has no width of its own: tables must not be cut there.
+console = Console(highlight=False, width=None if sys.stdout.isatty() else 180)
 ProgressCallback = Callable[[str, float], None]
 
 
