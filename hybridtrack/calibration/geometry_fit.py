@@ -1,14 +1,14 @@
 """Boards, lens and event map of a recording's views, in one call.
 
-Where frames omit clear sites from their bins, the place of a frame pixel's light depends on the clear site, which only
-the event map finds: a data sheet that has it wrong puts corners off by up to a tenth of a pixel. The search is then
-repeated under the site found, until it stands.
+Where frames omit clear sites from their bins, or fill them, the place of a frame pixel's light depends on the clear
+site, which only the event map finds: a data sheet that has it wrong puts corners off by up to a tenth of a pixel. The
+corners are then fitted again under the site found, until it stands.
 """
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
-from hybridtrack.calibration.corners import find_boards
+from hybridtrack.calibration.corners import find_boards, refine_boards
 from hybridtrack.calibration.event_map_fit import fit_event_map
 from hybridtrack.calibration.lens_fit import fit_lens
 from hybridtrack.calibration.view_data import BoardSearch, EventMapFit, LensFit, ViewImages
@@ -56,19 +56,26 @@ def fit_geometry(
     Of `nominal` sizes, cluster pitch and frame mode are believed; mirroring and clear site are found.
     """
     tell = progress or (lambda stage, fraction: None)
+    tell("corners", 0.0)
+    search = find_boards(views, target, nominal)
+    _require_boards(search, len(views))
+    tell("lens", 0.4)
+    lens_fit = fit_lens(search.boards, target, nominal, lens_model)
+    tell("event map", 0.5)
+    map_fit = fit_event_map(views, search.boards, lens_fit, target, nominal)
     believed = nominal
     for _ in range(_ROUNDS):
-        tell("corners", 0.0)
-        search = find_boards(views, target, believed)
-        _require_boards(search, len(views))
-        tell("lens", 0.5)
-        lens_fit = fit_lens(search.boards, target, believed, lens_model)
-        tell("event map", 0.6)
-        map_fit = fit_event_map(views, search.boards, lens_fit, target, believed)
-        site_matters = nominal.frame_mode.clear_in_frame == "omitted" and nominal.frame_mode.binning > 1
-        if not site_matters or map_fit.clear_site == believed.cluster.clear_site:
+        if nominal.frame_mode.clear_in_frame == "included" or map_fit.clear_site == believed.cluster.clear_site:
             break
+        tell("corners", 0.6)
         cluster = believed.cluster.model_copy(update={"clear_site": map_fit.clear_site, "filters": None})
         believed = believed.model_copy(update={"cluster": cluster})
+        boards = refine_boards(views, search.boards, lens_fit, target, believed)
+        search = BoardSearch(boards, search.findings)
+        refitted = fit_lens(boards, target, believed, lens_fit.model)
+        # How the model was chosen is still worth saying.
+        chosen = [finding for finding in lens_fit.findings if finding.startswith("lens: model ")]
+        lens_fit = replace(refitted, findings=chosen + refitted.findings)
+        map_fit = fit_event_map(views, boards, lens_fit, target, believed)
     tell("event map", 1.0)
     return Geometry(search, lens_fit, map_fit)

@@ -126,7 +126,7 @@ def fit_view_points(
         candidates = fit_candidates(scaled, size, sigma)
         chosen = choose(candidates)
         findings.append(_model_finding(chosen, candidates))
-        solution = chosen.solution
+        solution, model = chosen.solution, chosen.name
     else:
         solution = fit_model(model, views, size, sigma)
         if not solution.scene.lens.is_monotonic_over(*size):
@@ -155,7 +155,7 @@ def fit_view_points(
         residual_view=np.repeat(np.asarray(view_numbers), [len(r) for r in residuals]),
         residual_uv=np.concatenate([p.uv[u] for p, u in zip(views, solution.used, strict=True)]),
         parameters=tuple(names), covariance=joint[:lens_size, :lens_size], condition=solution.condition,
-        findings=findings, joint_covariance=joint,
+        findings=findings, joint_covariance=joint, model=model,
     )  # fmt: skip
 
 

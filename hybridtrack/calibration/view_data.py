@@ -89,6 +89,7 @@ class LensFit:
     `residuals_px` (M, 2) with `residual_view` (M,) and `residual_uv` (M, 2): all corners. `parameters`, `covariance`:
     the lens block, poses and nuisance marginalised. `condition`: of the column-scaled Jacobian. `joint_covariance`
     (P + 6V square): the lens block, then each view's pose twist (right side, translation and rotation vector).
+    `model`: name of the lens model's free terms, one of `lens_choice.MODELS`.
     """
 
     lens: Lens
@@ -102,6 +103,7 @@ class LensFit:
     condition: float
     findings: list[str] = field(default_factory=list)
     joint_covariance: Array = field(default_factory=lambda: np.zeros((0, 0)))
+    model: str = ""
 
     @property
     def rms_px(self) -> float:

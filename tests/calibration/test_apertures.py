@@ -35,3 +35,13 @@ def test_binning_by_one_keeps_a_filled_clear_site_in_place():
     mode = FrameMode(width=8, height=8, binning=1, clear_in_frame="omitted")
     aperture = frame_aperture(mode, CLUSTER)
     np.testing.assert_allclose(aperture.weights @ aperture.nodes, 0.0, atol=1e-12)
+
+
+def test_a_filled_site_looks_at_the_four_beside_it():
+    """A quarter of its share each; the bin's second moment grows, its mean does not move."""
+    mode = FrameMode(width=8, height=8, binning=1, clear_in_frame="filled")
+    aperture = frame_aperture(mode, CLUSTER)
+    weights = aperture.weights[aperture.kind[1, 2]]
+    for offset, share in (((0, 0), 0.0), ((1, 0), 0.25), ((0, -1), 0.25), ((1, 1), 0.0)):
+        near = np.all(np.abs(aperture.nodes - offset) < 0.5, axis=1)
+        assert weights[near].sum() == pytest.approx(share)
