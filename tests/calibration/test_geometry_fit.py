@@ -11,7 +11,7 @@ from hybridtrack.errors import BoardNotFoundError
 
 
 def test_search_is_repeated_under_the_clear_site_found():
-    """With clear sites omitted from bins, a wrong data sheet ends at the lens and map of a right one, to a fraction of their deviations."""
+    """With clear sites omitted from bins, a wrong data sheet ends at the lens and map of a right one."""
     rendered = counterphase_set()
     stages = []
     wrong = fit_geometry(
