@@ -1,8 +1,8 @@
 """Bundle adjustment over chosen poses and points (Triggs et al. 2000), Levenberg-Marquardt on the Schur complement.
 
 Residuals and Jacobians are those of `observations` and `motion`: linear in the ray, at the ray's own time with the
-frame's twist held. The cost is Huber's in standard deviations. Where only one pose is held, the pose farthest from it keeps
-its distance: the scale is not observed, and twists that are held must keep theirs.
+frame's twist held. The cost is Huber's in standard deviations. Where only one pose is held, the pose farthest from it
+keeps its distance: the scale is not observed, and twists that are held must keep theirs.
 
 Covariance: the inverse of the reduced system under seven constraints that fix the gauge. They ask that a similarity
 aligning the positions of the poses with the truth (Umeyama 1991) would be the identity to first order, so that the

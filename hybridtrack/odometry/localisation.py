@@ -61,8 +61,8 @@ class Approach:
 class _Equations:
     """Normal equations of one pose over its rays, each at its own time.
 
-    The twist is fixed, or follows from the pose: then it changes by xi / dt when the pose moves by xi, and the pose at a
-    ray's time moves by (1 + dt_ray / dt) xi to first order in the motion between frames.
+    The twist is fixed, or follows from the pose: then it changes by xi / dt when the pose moves by xi, and the pose at
+    a ray's time moves by (1 + dt_ray / dt) xi to first order in the motion between frames.
     """
 
     def __init__(self, view: View, points: Array, motion: Approach | Array) -> None:

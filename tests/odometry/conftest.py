@@ -147,6 +147,10 @@ class SyntheticLap:
         """What odometry takes in."""
         return gather_views(self.tracks, self.times, self.lens, floor_px)
 
+    def points_of(self, view: View) -> Array:
+        """True positions (N, 3) of what a view's rays look at."""
+        return self.points[[self.point_of_track[track] for track in view.ids.tolist()]]
+
     def look(self, frame: int) -> Place | None:
         """Features of one frame: every point in view, its look and position a little off."""
         rng = np.random.default_rng((self.options.seed, frame))

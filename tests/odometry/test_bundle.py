@@ -21,7 +21,7 @@ Array = np.ndarray
 
 
 def make_bundle(seed: int, noise: float = 0.0, poses: int = 6, points: int = 60) -> tuple[Bundle, Array, Array]:
-    """A bundle at its true poses and points, rays with noise in standard deviations of 1 mrad, at times of their own."""
+    """A bundle at its true poses and points, rays with noise in deviations of 1 mrad, at times of their own."""
     rng = np.random.default_rng(seed)
     true = se3.exp(np.concatenate([rng.normal(0, 0.4, (poses, 3)), rng.normal(0, 0.1, (poses, 3))], axis=1))
     cloud = rng.uniform(-1, 1, (points, 3)) + [0.0, 0.0, 4.0]
@@ -104,12 +104,29 @@ def test_second_derivatives_agree_with_differences_of_residuals() -> None:
 
 
 def test_exact_without_noise() -> None:
-    """From poses and points 2 cm off, the true ones come back to rounding, up to the scale that nothing holds."""
+    """From poses and points 2 cm off, with the first and last pose held, the true ones come back to rounding."""
     bundle, true, cloud = make_bundle(5)
+    bundle.held[-1] = True
     result = adjust(disturbed(bundle, 6), iterations=60, relative_decrease=0.0)
+    assert result.sigmas.max() < 1e-6
+    np.testing.assert_allclose(result.points, cloud, atol=1e-8)
+    np.testing.assert_allclose(result.poses, true, atol=1e-9)
+
+
+def test_a_free_scale_keeps_its_unit() -> None:
+    """With one pose held, the pose farthest from it keeps its distance; all else follows in that unit, exactly."""
+    bundle, true, cloud = make_bundle(5)
+    still = replace(bundle, own_motion=np.tile(np.eye(4), (len(bundle.rays), 1, 1)))
+    local = se3.transform(se3.inverse(true)[bundle.pose_of], cloud[bundle.point_of][:, None])[:, 0]
+    rays = local / np.linalg.norm(local, axis=1, keepdims=True)
+    whitening = np.ascontiguousarray(np.swapaxes(np.linalg.svd(rays[:, :, None])[0][:, :, 1:], 1, 2) / 1e-3)
+    start = disturbed(replace(still, rays=rays, whitening=whitening), 6)
+    result = adjust(start, iterations=60, relative_decrease=0.0)
     assert result.sigmas.max() < 1e-6
     aligned = similarity(result.points, cloud)
     np.testing.assert_allclose(se3.affine_transform(aligned, result.points), cloud, atol=1e-8)
+    lengths = [np.linalg.norm(poses[:, :3, 3] - poses[0, :3, 3], axis=1) for poses in (start.poses, result.poses)]
+    np.testing.assert_allclose(lengths[1][np.argmax(lengths[0])], lengths[0].max(), rtol=1e-6)
 
 
 def test_held_poses_do_not_move() -> None:
