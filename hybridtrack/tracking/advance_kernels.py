@@ -275,6 +275,13 @@ def write_line(feature: Record, out: Array, line: int) -> None:
 
 
 @kernel
+def in_picture(feature: Record, pace: Pace) -> bool:
+    """Whether a feature lies within the picture."""
+    u, v = feature.state[0], feature.state[1]
+    return u > -0.5 and v > -0.5 and u < pace.width - 0.5 and v < pace.height - 0.5
+
+
+@kernel
 def apply_event(pixel: Record, t_ns: int, on: int, ramp_ns: int, pace: Pace) -> None:
     """Move one pixel's level by an event after the last frame's instant."""
     light_ns = t_ns - pace.lag_ns
@@ -325,8 +332,8 @@ def advance(
 
     `levels` (rows, columns) of PIXEL, `table` (M,) of FEATURE, `work` their templates. `clock` int64 (2,) holds the
     next tick and the time between ticks, which is chosen anew every `base_ns`. At multiples of `output_ns` each
-    feature's slot, time and row (u, v, cov uu, uv, vv) go to the `out` arrays. Returns how many rows were written and
-    how many events were used.
+    feature's slot, time and row (u, v, cov uu, uv, vv) go to the `out` arrays, and one that has left the picture is no
+    longer active. Returns how many rows were written and how many events were used.
     """
     written, used, k, count = 0, 0, 0, len(t)
     jac, sampled = np.zeros(STATE_SIZE), np.zeros(3)
@@ -353,6 +360,8 @@ def advance(
                 out_slot[written], out_ns[written] = f, now
                 write_line(feature, out, written)
                 written += 1
+                if not in_picture(feature, pace):
+                    feature.active = 0  # that line was its last
         if now % pace.base_ns == 0:
             clock[1] = suitable_tick(table, pace)
         clock[0] = min(now + clock[1], (now // pace.base_ns + 1) * pace.base_ns)

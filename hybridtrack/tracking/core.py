@@ -125,6 +125,8 @@ def new_pace(module: HybridModule, options: TrackerOptions, radius: float) -> Pa
     (x_u, x_v, x_0), (y_u, y_v, y_0) = affine.tolist()
     reach = np.ceil(np.abs(affine[:, :2]).sum(axis=1) * radius).astype(np.int64) + map_slack(module, affine)
     return Pace(
+        width=module.frame_mode.width,
+        height=module.frame_mode.height,
         radius=radius,
         x_u=x_u,
         x_v=x_v,

@@ -16,6 +16,7 @@ from hybridtrack.tracking.tracks_file import Tracks
 
 Array = np.ndarray
 RAMP_PX = 3.0  # movement, frame px, within which light goes from one event to the next
+SHORTEST_RAMP_NS, LONGEST_RAMP_NS = 300_000, 30_000_000
 BEFORE_EXPOSURE_NS = 40_000_000  # events kept before an exposure, for the last one of each pixel
 
 
@@ -31,6 +32,7 @@ class EventFollower:
         self._latency_ns = int(core.module.known_timing().event_latency_ns or 0)
         self.lag = EventLag()
         self._measuring = False
+        self._ramp_ns = LONGEST_RAMP_NS
         self._now_ns: int | None = None
         self._clock = np.zeros(2, np.int64)
 
@@ -57,12 +59,13 @@ class EventFollower:
         self._core.counters.flashes = self._gaps.flashes
         begin = int(events.t[0]) if self._now_ns is None else self._now_ns
         self._now_ns = int(events.t[-1])
-        stop = self._gaps.first_in(begin, self._now_ns) if self._measuring else None
-        if stop is None:
+        gap = self._gaps.first_in(begin, self._now_ns) if self._measuring else None
+        if gap is None:
             return self._run(events, record=True)
+        stop, by_flash = gap
         split = int(np.searchsorted(events.t, stop))
         before = self._run(events[:split], record=True) if split else Tracks.empty()
-        self._stop_measuring()
+        self._stop_measuring(by_flash)
         return Tracks.joined([before, self._run(events[split:], record=True)]) if split < len(events) else before
 
     def _check(self, events: Events) -> None:
@@ -74,14 +77,11 @@ class EventFollower:
                 f"events must lie on the module's {columns}x{rows} grid, got ({events.x.max()}, {events.y.max()})"
             )
 
-    def _stop_measuring(self) -> None:
+    def _stop_measuring(self, by_flash: bool) -> None:
         self._measuring = False
         active = self._core.active()
         self._core.slots.state[active] = ts.WEAK
-        self._core.slots.reason[active] = ts.FLASH if self._gaps.flashes else ts.EVENTS_LOST
-
-    def _ramp_ns(self) -> int:
-        return int(np.clip(RAMP_PX / max(self._core.typical_speed(), 1.0) * 1e9, 300_000, 30_000_000))
+        self._core.slots.reason[active] = ts.FLASH if by_flash else ts.EVENTS_LOST
 
     def _run(self, events: Events, record: bool) -> Tracks:
         """Run the kernel up to the last of these events."""
@@ -99,7 +99,7 @@ class EventFollower:
             events.y,
             events.on,
             until,
-            self._ramp_ns(),
+            self._ramp_ns,
             self.levels,
             core.table.records,
             core.features.work,
@@ -110,7 +110,11 @@ class EventFollower:
             rows,
         )
         core.counters.events_used += used if record else 0
-        return core.lines(slot[:written], when[:written], rows[:written, :2], rows[:written, 2:], ts.FROM_EVENTS)
+        lines = core.lines(slot[:written], when[:written], rows[:written, :2], rows[:written, 2:], ts.FROM_EVENTS)
+        for gone in np.flatnonzero((core.table.active == 0) & (core.slots.id >= 0)):
+            core.release(int(gone))
+            core.counters.out_of_view += 1
+        return lines
 
     def exposure_events(self, clock: FrameClock) -> Events:
         """Buffered events of a frame's exposure, and some before; older ones are dropped."""
@@ -120,7 +124,7 @@ class EventFollower:
     def bracket(self, clock: FrameClock, instant_ns: Array | None = None) -> tuple[Array, Array]:
         """The double integral's correction on the event grid and each pixel's last event, see `SharpPictures`."""
         bracket, last = self._pictures.correction(
-            self.exposure_events(clock), clock, instant_ns, self._ramp_ns(), self.lag.ns
+            self.exposure_events(clock), clock, instant_ns, self._ramp_ns, self.lag.ns
         )
         if self._gaps.overlaps(*clock.span_ns):
             bracket = np.zeros_like(bracket)
@@ -154,6 +158,11 @@ class EventFollower:
     def sharpen(self, light: LogLight, bracket: Array) -> Array:
         """Sharp log light (H, W) of a frame."""
         return self._pictures.at_frame_pixels(light, bracket)
+
+    def pace_ramps(self) -> None:
+        """Set how long light takes from one event to the next, by how fast the features are."""
+        ramp_ns = RAMP_PX / max(self._core.typical_speed(), 1.0) * 1e9
+        self._ramp_ns = int(np.clip(ramp_ns, SHORTEST_RAMP_NS, LONGEST_RAMP_NS))
 
     def restart(self, light: LogLight, clock: FrameClock, bracket: Array, last_ns: Array) -> None:
         """Set the levels by a frame, and run the events since its first row's middle again over the features as they

@@ -20,21 +20,23 @@ class EventGaps:
         self._on, self._off = float(np.mean(theta_on)), float(np.mean(theta_off))
         self._pixels = theta_on.size
         self._bin, self._sum = 0, 0.0
-        self.intervals: list[tuple[int, int]] = []
+        self.intervals: list[tuple[int, int, bool]] = []  # begin, end, whether a flash
         self.flashes = 0
 
-    def add(self, t0_ns: int, t1_ns: int) -> None:
+    def add(self, t0_ns: int, t1_ns: int, flash: bool = False) -> None:
         """Note an interval."""
-        self.intervals.append((int(t0_ns), int(t1_ns)))
+        self.intervals.append((int(t0_ns), int(t1_ns), flash))
 
     def overlaps(self, t0_ns: int, t1_ns: int) -> bool:
         """Whether any interval touches [t0, t1]."""
-        return any(begin <= t1_ns and end >= t0_ns for begin, end in self.intervals)
+        return any(begin <= t1_ns and end >= t0_ns for begin, end, _ in self.intervals)
 
-    def first_in(self, t0_ns: int, t1_ns: int) -> int | None:
-        """Where in [t0, t1] the first interval that touches it begins; None where none does."""
-        begins = [max(begin, t0_ns) for begin, end in self.intervals if begin <= t1_ns and end >= t0_ns]
-        return min(begins) if begins else None
+    def first_in(self, t0_ns: int, t1_ns: int) -> tuple[int, bool] | None:
+        """Where in [t0, t1] the first interval that touches it begins, and whether it is a flash; or None."""
+        touching = [
+            (max(begin, t0_ns), flash) for begin, end, flash in self.intervals if begin <= t1_ns and end >= t0_ns
+        ]
+        return min(touching) if touching else None
 
     def forget_before(self, t_ns: int) -> None:
         """Drop intervals that end before `t_ns`."""
@@ -53,9 +55,9 @@ class EventGaps:
         for index, total in zip(bins[starts].tolist(), sums.tolist(), strict=True):
             if abs(total) / self._pixels > self._log_step:
                 begin, end = index * BIN_NS, (index + 1) * BIN_NS
-                if self.intervals and self.intervals[-1][1] >= begin:
-                    self.intervals[-1] = (self.intervals[-1][0], max(end, self.intervals[-1][1]))
+                if self.intervals and self.intervals[-1][2] and self.intervals[-1][1] >= begin:
+                    self.intervals[-1] = (self.intervals[-1][0], end, True)
                 else:
-                    self.add(begin, end)
+                    self.add(begin, end, flash=True)
                     self.flashes += 1
         self._bin, self._sum = last, float(sums[-1])

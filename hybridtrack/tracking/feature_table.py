@@ -64,6 +64,8 @@ FEATURE = np.dtype(
 class Pace(NamedTuple):
     """Constants of the event filter; lengths in frame px."""
 
+    width: int  # of the picture
+    height: int
     radius: float  # half width of the patch, template px
     x_u: float  # event-grid position from frame px, to find the pixels of a patch: x = x_u u + x_v v + x_0
     x_v: float

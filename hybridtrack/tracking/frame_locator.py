@@ -1,8 +1,9 @@
 """Find every feature in a new frame, decide whether to believe it, and join it to the filter.
 
 Two ways lead to a feature: its own template, aligned from where the filter expects it (hybrid mode) or from where
-pyramidal Lucas-Kanade found it (frames mode); and, where that fails, Lucas-Kanade from the frame before, started from the
-prediction and from rest. What the filter expects and what the frame shows are joined by covariance if they agree.
+pyramidal Lucas-Kanade found it (frames mode); and, where that fails, Lucas-Kanade from the frame before, started
+from the prediction and from rest. What the filter expects and what the frame shows are joined by covariance if they
+agree.
 """
 
 from dataclasses import dataclass

@@ -63,9 +63,9 @@ def integrate_exposures(
     """The double integral of events over each pixel's own exposure (Pan et al. 2019).
 
     Events (N,) in order, stamped `lag_ns` after their light; thresholds, exposure starts and instants on the grid
-    (rows, columns). Returns on the grid: `correction` = log(mean over the exposure of exp(level)) - level at the instant, to be taken from the log of a
-    blurred picture to have the sharp one at the instant; `count` of events inside the exposure; `last_ns` light time
-    of the last event at or before the instant (NEVER where none).
+    (rows, columns). Returns on the grid: `correction` = log(mean over the exposure of exp(level)) - level at the
+    instant, to be taken from the log of a blurred picture to have the sharp one at the instant; `count` of events
+    inside the exposure; `last_ns` light time of the last event at or before the instant (NEVER where none).
     """
     rows, columns = start_ns.shape
     level = np.zeros((rows, columns))

@@ -59,7 +59,9 @@ class LogLightReader:
             light = light @ np.array([0.25, 0.5, 0.25], np.float32)
         elif mode.mosaic != "none":
             # Each output is one quarter red, one half green, one quarter blue at any phase of a 2x2 mosaic.
-            light = cv2.sepFilter2D(light, -1, np.array([0.25, 0.5, 0.25]), np.array([0.25, 0.5, 0.25]))
+            light = np.asarray(
+                cv2.sepFilter2D(light, -1, np.array([0.25, 0.5, 0.25]), np.array([0.25, 0.5, 0.25])), np.float32
+            )
         return light
 
     def read(self, image: Array) -> LogLight:

@@ -56,6 +56,11 @@ class Tracker:
         """What was done so far."""
         return self._core.counters
 
+    @property
+    def event_lag_ns(self) -> int:
+        """How late events were found to be beyond what the module says; 0 without events."""
+        return 0 if self._follower is None else self._follower.lag.ns
+
     def push_events(self, events: Events) -> Tracks:
         """Take events, none older than those before; return the lines between frames. Mode `frames` ignores them.
 
@@ -79,6 +84,7 @@ class Tracker:
         clock = frame_clock(core.module, t_start_ns, exposure_ns)
         sharp, bracket, last = None, None, None
         if self._follower is not None:
+            self._follower.pace_ramps()
             bracket, last = self._follower.bracket(clock)
             sharp = self._follower.sharpen(light, bracket)
         views = Views(light, sharp)

@@ -105,13 +105,13 @@ class PlanarScene:
     def _log_light(self, t_s: float) -> Array:
         return np.log(np.maximum(self._sample(self._positions, t_s), 0.004)).astype(np.float64)
 
-    def where(self, uv0: Array, t_ns: Array) -> Array:
-        """Position (N, 2) at `t_ns` (N,) of the points of the photograph that were at `uv0` (N, 2) at time zero."""
-        start = (uv0 - self._middle - self.motion(0.0)) @ np.linalg.inv(self.shape(0.0)).T
-        moved = [
-            self.shape(t * 1e-9) @ s + self._middle + self.motion(t * 1e-9) for s, t in zip(start, t_ns, strict=True)
-        ]
-        return np.array(moved)
+    def carried(self, uv: Array, from_ns: Array, to_ns: Array) -> Array:
+        """Position (N, 2) at `to_ns` (N,) of what of the photograph was at `uv` (N, 2) at `from_ns` (N,)."""
+        moved = np.empty((len(to_ns), 2))
+        for k, (place, t0, t1) in enumerate(zip(uv, from_ns * 1e-9, to_ns * 1e-9, strict=True)):
+            on_photograph = np.linalg.inv(self.shape(t0)) @ (place - self._middle - self.motion(t0))
+            moved[k] = self.shape(t1) @ on_photograph + self._middle + self.motion(t1)
+        return moved
 
     def events(self, t0_ns: int, t1_ns: int, step_ns: int = 100_000) -> Events:
         """Events of an interval; call in order of time."""
