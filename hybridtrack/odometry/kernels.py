@@ -8,8 +8,17 @@ Array = np.ndarray
 
 
 @kernel
-def _residual(turn: Array, centre: Array, point: Array, own_turn: Array, own_shift: Array, whitening: Array,
-              q: Array, n: Array, r: Array) -> float:
+def _residual(
+    turn: Array,
+    centre: Array,
+    point: Array,
+    own_turn: Array,
+    own_shift: Array,
+    whitening: Array,
+    q: Array,
+    n: Array,
+    r: Array,
+) -> float:
     """Fill q (frame axes), n (unit, at the ray's time) and r = whitening n; return the distance."""
     for i in range(3):
         q[i] = 0.0
@@ -30,8 +39,18 @@ def _residual(turn: Array, centre: Array, point: Array, own_turn: Array, own_shi
 
 
 @kernel
-def residual_norms(turns: Array, centres: Array, points: Array, pose_of: Array, point_of: Array, own_turns: Array,
-                   own_shifts: Array, rays: Array, whitening: Array, norms: Array) -> None:
+def residual_norms(
+    turns: Array,
+    centres: Array,
+    points: Array,
+    pose_of: Array,
+    point_of: Array,
+    own_turns: Array,
+    own_shifts: Array,
+    rays: Array,
+    whitening: Array,
+    norms: Array,
+) -> None:
     """Fill `norms` (M,) with |r| of every ray, infinite where the point lies behind it."""
     q, n, r = np.empty(3), np.empty(3), np.empty(2)
     for m in range(len(pose_of)):
@@ -42,9 +61,22 @@ def residual_norms(turns: Array, centres: Array, points: Array, pose_of: Array, 
 
 
 @kernel
-def normal_equations(turns: Array, centres: Array, points: Array, pose_of: Array, point_of: Array, own_turns: Array,
-                     own_shifts: Array, whitening: Array, weights: Array, H_pose: Array, g_pose: Array,
-                     H_point: Array, g_point: Array, H_cross: Array) -> None:
+def normal_equations(
+    turns: Array,
+    centres: Array,
+    points: Array,
+    pose_of: Array,
+    point_of: Array,
+    own_turns: Array,
+    own_shifts: Array,
+    whitening: Array,
+    weights: Array,
+    H_pose: Array,
+    g_pose: Array,
+    H_point: Array,
+    g_point: Array,
+    H_cross: Array,
+) -> None:
     """Add J'WJ and J'Wr of all rays: pose blocks (K, 6, 6), (K, 6), point blocks (P, 3, 3), (P, 3), cross (M, 6, 3)."""
     q, n, r = np.empty(3), np.empty(3), np.empty(2)
     A, B = np.empty((2, 3)), np.empty((2, 3))
@@ -79,8 +111,20 @@ def normal_equations(turns: Array, centres: Array, points: Array, pose_of: Array
 
 
 @kernel
-def pose_equations(turn: Array, centre: Array, points: Array, own_turns: Array, own_shifts: Array, rays: Array,
-                   whitening: Array, growth: Array, cauchy_width: float, H: Array, g: Array, norms: Array) -> None:
+def pose_equations(
+    turn: Array,
+    centre: Array,
+    points: Array,
+    own_turns: Array,
+    own_shifts: Array,
+    rays: Array,
+    whitening: Array,
+    growth: Array,
+    cauchy_width: float,
+    H: Array,
+    g: Array,
+    norms: Array,
+) -> None:
     """Fill H (6, 6), g (6,) of one pose over known points (N, 3) under Cauchy's cost, and |r| (N,) as `residual_norms`.
 
     `growth` (N,): how much further than the frame's pose the pose at the ray's time moves. A `cauchy_width` of zero
@@ -116,8 +160,9 @@ def pose_equations(turn: Array, centre: Array, points: Array, own_turns: Array, 
 
 
 @kernel
-def reduce_points(starts: Array, slot_of: Array, H_point_inverse: Array, g_point: Array, H_cross: Array, S: Array,
-                  g: Array) -> None:
+def reduce_points(
+    starts: Array, slot_of: Array, H_point_inverse: Array, g_point: Array, H_cross: Array, S: Array, g: Array
+) -> None:
     """Subtract the points' share from the reduced system S (6F, 6F), g (6F,).
 
     Rays are sorted by point, those of point p are `starts[p]` to `starts[p + 1]`; `slot_of` (M,) is the free pose of a
@@ -131,8 +176,11 @@ def reduce_points(starts: Array, slot_of: Array, H_point_inverse: Array, g_point
                 continue
             for i in range(6):
                 for j in range(3):
-                    Y[i, j] = (H_cross[a, i, 0] * H_point_inverse[p, 0, j] + H_cross[a, i, 1] * H_point_inverse[p, 1, j]
-                               + H_cross[a, i, 2] * H_point_inverse[p, 2, j])
+                    Y[i, j] = (
+                        H_cross[a, i, 0] * H_point_inverse[p, 0, j]
+                        + H_cross[a, i, 1] * H_point_inverse[p, 1, j]
+                        + H_cross[a, i, 2] * H_point_inverse[p, 2, j]
+                    )
                 g[6 * ka + i] -= Y[i, 0] * g_point[p, 0] + Y[i, 1] * g_point[p, 1] + Y[i, 2] * g_point[p, 2]
             for b in range(starts[p], starts[p + 1]):
                 kb = slot_of[b]
@@ -140,13 +188,21 @@ def reduce_points(starts: Array, slot_of: Array, H_point_inverse: Array, g_point
                     continue
                 for i in range(6):
                     for j in range(6):
-                        S[6 * ka + i, 6 * kb + j] -= (Y[i, 0] * H_cross[b, j, 0] + Y[i, 1] * H_cross[b, j, 1]
-                                                      + Y[i, 2] * H_cross[b, j, 2])
+                        S[6 * ka + i, 6 * kb + j] -= (
+                            Y[i, 0] * H_cross[b, j, 0] + Y[i, 1] * H_cross[b, j, 1] + Y[i, 2] * H_cross[b, j, 2]
+                        )
 
 
 @kernel
-def point_steps(starts: Array, slot_of: Array, H_point_inverse: Array, g_point: Array, H_cross: Array, step: Array,
-                point_step: Array) -> None:
+def point_steps(
+    starts: Array,
+    slot_of: Array,
+    H_point_inverse: Array,
+    g_point: Array,
+    H_cross: Array,
+    step: Array,
+    point_step: Array,
+) -> None:
     """Fill `point_step` (P, 3) from the pose step (F, 6)."""
     t = np.empty(3)
     for p in range(len(starts) - 1):
@@ -160,5 +216,6 @@ def point_steps(starts: Array, slot_of: Array, H_point_inverse: Array, g_point: 
                 for j in range(3):
                     t[j] += H_cross[a, i, j] * step[ka, i]
         for i in range(3):
-            point_step[p, i] = -(H_point_inverse[p, i, 0] * t[0] + H_point_inverse[p, i, 1] * t[1]
-                                 + H_point_inverse[p, i, 2] * t[2])
+            point_step[p, i] = -(
+                H_point_inverse[p, i, 0] * t[0] + H_point_inverse[p, i, 1] * t[1] + H_point_inverse[p, i, 2] * t[2]
+            )

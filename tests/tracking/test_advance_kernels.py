@@ -47,11 +47,11 @@ def core() -> Core:
     return core
 
 
-def prediction(core: Core, state: Array, u: float, v: float, age: float) -> float:
-    """The model m of the kernels' docstring, for the plane."""
-    away = np.array([u, v]) - state[:2] + age * state[2:4]
-    place = np.linalg.inv(core.table.work_warp[0]) @ away + core.table.work_offset[0]
-    return float(SLOPE @ place + state[4])
+def prediction(core: Core, state: Array, u: Array, v: Array, age: Array) -> Array:
+    """The model m of the kernels' docstring, for the plane, at pixels (...)."""
+    away = np.stack([u, v], axis=-1) - state[:2] + age[..., None] * state[2:4]
+    place = away @ np.linalg.inv(core.table.work_warp[0]).T + core.table.work_offset[0]
+    return place @ SLOPE + state[4]
 
 
 def levels_under(core: Core, seed: int = 0, noise: float = 0.01) -> np.recarray:
@@ -59,13 +59,10 @@ def levels_under(core: Core, seed: int = 0, noise: float = 0.01) -> np.recarray:
     levels = new_levels(core.module)
     random = np.random.default_rng(seed)
     levels.fresh[:] = 0
-    now, state = int(core.table.t_ns[0]), core.table.state[0].copy()
-    for r in range(levels.shape[0]):
-        for c in range(levels.shape[1]):
-            age = random.integers(0, 900_000)
-            levels.anchor_ns[r, c] = levels.last_ns[r, c] = now - age
-            level = prediction(core, state, levels.u[r, c], levels.v[r, c], age * 1e-9)
-            levels.level[r, c] = level + noise * random.standard_normal()
+    age = random.integers(0, 900_000, levels.shape)
+    levels.anchor_ns[:] = levels.last_ns[:] = int(core.table.t_ns[0]) - age
+    level = prediction(core, core.table.state[0].copy(), levels.u, levels.v, age * 1e-9)
+    levels.level[:] = level + noise * random.standard_normal(levels.shape)
     return levels
 
 
@@ -80,19 +77,14 @@ def test_jacobian_agrees_with_differences(core: Core) -> None:
     g, sigma = core.table.records["g"][0].copy(), core.table.level_sigma[0]
     state = core.table.state[0].copy()
 
+    # The taper counts at the state of the linearisation: it is a weight, not part of the residual.
+    age = (core.table.t_ns[0] - levels.anchor_ns) * 1e-9
+    away = np.stack([levels.u, levels.v], axis=-1) - state[:2] + age[..., None] * state[2:4]
+    reach = np.abs(away @ np.linalg.inv(core.table.work_warp[0]).T).max(axis=-1)
+    weight = np.where(reach <= core.pace.radius, np.minimum(1.0, core.pace.radius - reach), 0.0) / sigma**2
+
     def cost(moved: Array) -> float:
-        total = 0.0
-        for r in range(levels.shape[0]):
-            for c in range(levels.shape[1]):
-                u, v = levels.u[r, c], levels.v[r, c]
-                age = (core.table.t_ns[0] - levels.anchor_ns[r, c]) * 1e-9
-                # The taper counts at the state of the linearisation: it is a weight, not part of the residual.
-                place = np.linalg.inv(core.table.work_warp[0]) @ (np.array([u, v]) - state[:2] + age * state[2:4])
-                reach = np.abs(place).max()
-                if reach <= core.pace.radius:
-                    weight = min(1.0, core.pace.radius - reach) / sigma**2
-                    total += 0.5 * weight * (levels.level[r, c] - prediction(core, moved, u, v, age)) ** 2
-        return total
+        return 0.5 * float(np.sum(weight * (levels.level - prediction(core, moved, levels.u, levels.v, age)) ** 2))
 
     for k, step in enumerate([1e-3, 1e-3, 1.0, 1.0, 1e-3]):
         up, down = state.copy(), state.copy()
