@@ -71,6 +71,15 @@ def residual_sigmas(bundle: Bundle, poses: Array, points: Array) -> Array:
     return norms
 
 
+def ray_residuals(bundle: Bundle, poses: Array, points: Array) -> Array:
+    """Whitened residuals (M, 2) of all rays."""
+    a, b = _split(poses)
+    turned = np.einsum("nji,nj->ni", a[bundle.pose_of], points[bundle.point_of] - b[bundle.pose_of])
+    local = np.einsum("nij,nj->ni", bundle.own_motion[:, :3, :3], turned) + bundle.own_motion[:, :3, 3]
+    n = local / np.maximum(np.linalg.norm(local, axis=1, keepdims=True), 1e-12)
+    return np.einsum("nij,nj->ni", bundle.whitening, n)
+
+
 def _cost(sigmas: Array) -> float:
     """Huber's cost; a point behind a camera counts as a gross outlier."""
     s = np.minimum(sigmas, 1e6)

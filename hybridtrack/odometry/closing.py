@@ -26,6 +26,7 @@ SCALE_CREEP = 0.01  # deviation of the log scale from one keyframe to the next
 FLOOR_SHIFT_SHARE = 1e-3  # of the median step
 FLOOR_TURN_RAD = 3e-4
 TIES_AGREE = 0.15
+RAYS_A_LOOP = 100  # of the strongest features: a loop of hundreds would outweigh the tracks
 KEPT = ("kept", "down-weighted", "untested")
 
 
@@ -163,11 +164,13 @@ def add_loop_rays(world: SparseMap, book: PlaceBook, loop: Loop, first_id: int) 
     place_a, place_b = book.of(a), book.of(b)
     landmarks = book.landmarks(a)[loop.from_rows]
     known = np.isfinite(landmarks[:, 0])
-    rows_a, rows_b = loop.from_rows[known], loop.to_rows[known]
+    landmarks, rows_a, rows_b = landmarks[known], loop.from_rows[known], loop.to_rows[known]
+    strongest = np.argsort(rows_a, kind="stable")[:RAYS_A_LOOP]
+    landmarks, rows_a, rows_b = landmarks[strongest], rows_a[strongest], rows_b[strongest]
     if place_a is None or place_b is None or not len(rows_a):
         return first_id
     ids = first_id - np.arange(len(rows_a))
-    points = world.add_points(landmarks[known], ids, a.segment)
+    points = world.add_points(landmarks, ids, a.segment)
     _see(a, place_a.view.select(rows_a), ids, points)
     _see(b, place_b.view.select(rows_b), ids, points)
     for end, rows in ((a, rows_a), (b, rows_b)):

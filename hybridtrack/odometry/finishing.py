@@ -14,7 +14,7 @@ import numpy as np
 
 from hybridtrack.geometry import se3
 from hybridtrack.odometry.closing import Closing, close_loops, keyframe_graph, tie_segments
-from hybridtrack.odometry.global_bundle import Fit, adjust_whole, fit_of
+from hybridtrack.odometry.global_bundle import Fit, adjust_whole, balance_places, fit_of
 from hybridtrack.odometry.localisation import refine_pose
 from hybridtrack.odometry.motion import twists_along
 from hybridtrack.odometry.observations import NS
@@ -134,6 +134,8 @@ def finish(odometer: Odometer) -> Finished:
         findings += tie_segments(world, odometer.loops)
         closing = close_loops(world, odometer.book, odometer.loops, fits, options)
         adjust_whole(world, options)
+        balance_places(world)
+        adjust_whole(world, options, rounds=1)
     follow_keyframes(frames, world, poses_then)
     for _ in range(TWIST_ROUNDS):
         localise_all(frames, world, options)

@@ -1,7 +1,7 @@
 """Places seen again: candidates by matching descriptors, a similarity by geometry, and reasons to refuse.
 
-Candidates are earlier keyframes that share no track with the newest: every one is compared by its strongest features,
-the best few by all. The older keyframe's features have positions by its neighbours; the newest is localised against
+Candidates are earlier keyframes that share hardly a track with the newest: every one is compared by its strongest
+features, the best few by all. The older keyframe's features have positions by its neighbours; the newest is localised against
 them (random samples, then Gauss-Newton), and the ratio of distances on both sides gives the scale between them (the
 similarity of Strasdat et al. 2010). A look-alike is refused when too few features agree, too small a share of them, or
 a patch only.
@@ -16,7 +16,7 @@ from hybridtrack.geometry import se3, sim3
 from hybridtrack.odometry.localisation import PoseEstimate, refine_pose, search_pose
 from hybridtrack.odometry.observations import NS, View
 from hybridtrack.odometry.options import OdometryOptions
-from hybridtrack.odometry.places import Place, PlaceBook, matches
+from hybridtrack.odometry.places import EVERY, Place, PlaceBook, matches
 from hybridtrack.odometry.sparse_map import Keyframe, SparseMap
 
 Array = np.ndarray
@@ -138,10 +138,11 @@ def _covariance(estimate: PoseEstimate, distance: float, scale: float, scale_sig
 
 
 def old_keyframes(world: SparseMap, newest: Keyframe, options: OdometryOptions) -> list[Keyframe]:
-    """Keyframes that could close a loop with the newest: of long ago, and without a track in common."""
+    """Places that could close a loop with the newest: of long ago, and with few tracks in common if any."""
     latest = newest.view.t_ns - options.loop_min_gap_s / NS
-    near = world.covisibility.adj[newest.id]
-    return [k for k in world.keyframes[: newest.id] if k.view.t_ns <= latest and k.id not in near]
+    edges = world.covisibility.adj[newest.id]
+    near = {other for other in edges if edges[other]["shared"] >= options.loop_min_inliers}
+    return [k for k in world.keyframes[: newest.id : EVERY] if k.view.t_ns <= latest and k.id not in near]
 
 
 def find_loop(book: PlaceBook, world: SparseMap, newest: Keyframe, options: OdometryOptions) -> Loop | None:

@@ -13,13 +13,21 @@ Array = np.ndarray
 LOOK_BACK = 12
 
 
-def sightings_of(world: SparseMap, keyframe_ids: list[int], track_ids: Array) -> tuple[Sightings, Array]:
-    """All rays of the given keyframes that belong to given tracks (sorted) without a point, and those tracks (G,)."""
+def sightings_of(
+    world: SparseMap, keyframe_ids: list[int], track_ids: Array, trusted_from: dict[int, int] | None = None
+) -> tuple[Sightings, Array]:
+    """All rays of the given keyframes that belong to given tracks (sorted) without a point, and those tracks (G,).
+
+    `trusted_from`: the frame before which a track's rays do not count, where there is one.
+    """
+    since = trusted_from or {}
+    first_frame = np.array([since.get(track, 0) for track in track_ids.tolist()])
     columns = []
     for keyframe_id in keyframe_ids:
         keyframe = world.keyframes[keyframe_id]
-        rows = np.flatnonzero((keyframe.points < 0) & np.isin(keyframe.view.ids, track_ids))
         view = keyframe.view
+        rows = np.flatnonzero((keyframe.points < 0) & np.isin(view.ids, track_ids))
+        rows = rows[view.index >= first_frame[np.searchsorted(track_ids, view.ids[rows])]]
         poses = keyframe.poses_at(view.dt_s[rows])
         columns.append((view.ids[rows], poses[:, :3, 3], poses[:, :3, :3], view.rays[rows], view.whitening[rows]))
     ids, centres, turns, rays, whitening = (np.concatenate(parts) for parts in zip(*columns, strict=True))
@@ -28,16 +36,21 @@ def sightings_of(world: SparseMap, keyframe_ids: list[int], track_ids: Array) ->
     return Sightings(group, centres[order], turns[order], rays[order], whitening[order]), found
 
 
-def grow(world: SparseMap, newest: Keyframe, broken: set[int], options: OdometryOptions) -> int:
-    """Triangulate the newest keyframe's tracks that have no point, from keyframes of its segment; return how many."""
+def grow(world: SparseMap, newest: Keyframe, trusted_from: dict[int, int], options: OdometryOptions) -> int:
+    """Triangulate the newest keyframe's tracks that have no point, from keyframes of its segment; return how many.
+
+    `trusted_from` as in `sightings_of`.
+    """
     recent = [k.id for k in world.keyframes[-LOOK_BACK:] if k.segment == newest.segment]
     free = newest.view.ids[newest.points < 0]
-    wanted = np.array(sorted(set(free.tolist()) - broken), dtype=np.int64)
+    wanted = np.array(sorted(t for t in free.tolist() if trusted_from.get(t, 0) <= newest.view.index), dtype=np.int64)
     if not len(wanted) or len(recent) < 2:
         return 0
-    seen, tracks = sightings_of(world, recent, wanted)
+    seen, tracks = sightings_of(world, recent, wanted, trusted_from)
     result = triangulate(seen, np.deg2rad(options.triangulation_parallax_deg), options.inlier_sigma)
-    world.add_points(result.positions[result.accepted], tracks[result.accepted], newest.segment)
+    found = tracks[result.accepted]
+    since = np.array([trusted_from.get(track, 0) for track in found.tolist()])
+    world.add_points(result.positions[result.accepted], found, newest.segment, since)
     for keyframe_id in recent:
         world.count_shared(world.keyframes[keyframe_id])
     return int(np.count_nonzero(result.accepted))

@@ -8,7 +8,7 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from hybridtrack.geometry import se3
+from hybridtrack.geometry import se3, so3
 
 Array = np.ndarray
 
@@ -19,8 +19,23 @@ def twist_between(world_from_a: Array, world_from_b: Array, dt_s: float) -> Arra
 
 
 def camera_from_frame(twist: Array, dt_s: Array) -> Array:
-    """E^-1 (N, 4, 4): from camera axes at the frame's time to those at `dt_s` (N,) later; `twist` (6,) or (N, 6)."""
-    return np.asarray(se3.exp(-dt_s[:, None] * twist))
+    """E^-1 (N, 4, 4): from camera axes at the frame's time to those at `dt_s` (N,) later, along one twist (6,).
+
+    The exponential of `geometry.se3` with the axis, which all have in common, taken out.
+    """
+    rate = float(np.linalg.norm(twist[3:]))
+    axis = so3.hat(twist[3:] / rate) if rate > 0.0 else np.zeros((3, 3))
+    square = axis @ axis
+    angle = -rate * dt_s[:, None, None]
+    safe = np.where(angle == 0.0, 1.0, angle)
+    # 1 - cos a, without cancelling
+    versine = 2.0 * np.sin(0.5 * angle) ** 2
+    steps = np.zeros((len(dt_s), 4, 4))
+    steps[:, :3, :3] = np.eye(3) + np.sin(angle) * axis + versine * square
+    shape = np.eye(3) + versine / safe * axis + (angle - np.sin(angle)) / safe * square
+    steps[:, :3, 3] = -dt_s[:, None] * (shape @ twist[:3])
+    steps[:, 3, 3] = 1.0
+    return steps
 
 
 def twists_along(t_s: Array, poses: Sequence[Array | None], longest_gap_s: float) -> Array:

@@ -20,16 +20,18 @@ from hybridtrack.odometry.mapping import adjust_around, grow
 from hybridtrack.odometry.motion import twist_between
 from hybridtrack.odometry.observations import NS, View
 from hybridtrack.odometry.options import OdometryOptions
-from hybridtrack.odometry.places import Look, PlaceBook
-from hybridtrack.odometry.sparse_map import SparseMap
+from hybridtrack.odometry.places import EVERY, Look, PlaceBook
+from hybridtrack.odometry.sparse_map import Keyframe, SparseMap
 from hybridtrack.odometry.startup import start_map
 
 Array = np.ndarray
 
 STARTING, RUNNING, LOST = "starting", "running", "lost"
 STRIKES = 3
+NEVER = 1 << 62
 FRAMES_PER_SEARCH = 5
 KEPT_VIEWS = 400
+KEYFRAMES_BETWEEN_LOOPS = 4
 
 
 @dataclass(eq=False)
@@ -73,7 +75,7 @@ class Odometer:
         self.segments = 0
         self._waiting: list[View] = []
         self._strikes: Counter[int] = Counter()
-        self._broken: set[int] = set()
+        self._trusted_from: dict[int, int] = {}
         self._lost_since = 0
 
     def push(self, view: View) -> str:
@@ -121,7 +123,11 @@ class Odometer:
         for track, fits in zip(ids.tolist(), inliers.tolist(), strict=True):
             self._strikes[track] = 0 if fits else self._strikes[track] + 1
         out = [track for track in ids.tolist() if self._strikes[track] >= STRIKES]
-        self._broken.update(out)
+        for track in out:
+            # What it follows from here on may be a point too, but another one; the second time it is not believed.
+            again = track in self._trusted_from
+            self._trusted_from[track] = NEVER if again else self.frames[-1].view.index
+            self._strikes[track] = 0
         self.world.cut_tracks(np.array(out, dtype=np.int64), segment)
 
     def _insert(self, frame: FrameState) -> None:
@@ -129,15 +135,19 @@ class Odometer:
         assert frame.world_from_camera is not None
         assert frame.twist is not None
         newest = self.world.add_keyframe(frame.view, frame.world_from_camera, frame.twist, frame.segment)
-        bad = np.isin(frame.view.ids, list(self._broken))
-        newest.points[bad] = -1
-        grow(self.world, newest, self._broken, self.options)
+        grow(self.world, newest, self._trusted_from, self.options)
         adjust_around(self.world, newest, self.options)
         frame.world_from_camera = newest.world_from_camera
-        if self.book is not None:
-            loop = find_loop(self.book, self.world, newest, self.options)
-            if loop is not None:
-                self.loops.append(loop)
+        self._look_for_loop(newest)
+
+    def _look_for_loop(self, newest: Keyframe) -> None:
+        """Look whether the newest keyframe, if it is a place, was seen before; not right after the last loop."""
+        rested = not self.loops or newest.id - self.loops[-1].to_id >= KEYFRAMES_BETWEEN_LOOPS
+        if self.book is None or newest.id % EVERY or not rested:
+            return
+        loop = find_loop(self.book, self.world, newest, self.options)
+        if loop is not None:
+            self.loops.append(loop)
 
     def _wait(self, frame: FrameState) -> None:
         """While starting or lost: find the place again, or start a new segment."""
@@ -185,7 +195,7 @@ class Odometer:
         self.segments += 1
         self.world.adopt(fresh, segment)
         self._strikes.clear()
-        self._broken.clear()
+        self._trusted_from.clear()
         own = {k.view.index: k for k in self.world.keyframes if k.segment == segment}
         index_of = {f.view.index: f for f in self.frames[-len(self._waiting) - 1 :]}
         nearest = self.world.keyframes[-len(own)]
@@ -225,7 +235,7 @@ class Odometer:
         if self.book is None or (len(self.frames) - 1 - self._lost_since) % FRAMES_PER_SEARCH:
             return False
         place = self.book.look(frame.view.index)
-        among = [k for k in self.world.keyframes if k.segment == segment]
+        among = [k for k in self.world.keyframes[::EVERY] if k.segment == segment]
         seen = None if place is None else locate(self.book, place, None, among, self.options)
         return seen is not None and self._resume_at(frame, seen, segment)
 

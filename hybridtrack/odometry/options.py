@@ -24,7 +24,7 @@ class OdometryOptions:
     start_depth: float = 1.0
     seed: int = 1
     # observations
-    model_sigma_px: float = 0.3
+    model_sigma_px: float = 0.2
     # start-up
     start_min_tracks: int = 30
     start_parallax_deg: float = 2.0

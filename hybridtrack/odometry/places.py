@@ -22,7 +22,8 @@ SIGMA_PER_SIZE = 0.15  # localisation error of a blob in its own diameter; commo
 LANDMARK_PARALLAX_DEG = 1.5
 FLOW_FROM_S = 5e-4  # shorter times tell noise from motion badly
 FLOW_TRACKS = 5
-NEIGHBOURS = (1, -1, 2, -2)
+EVERY = 2  # keyframes of even number are places: half of them show all there is to see
+NEIGHBOURS = (2, -2, 4, -4)
 
 
 @dataclass(frozen=True, eq=False)
@@ -128,7 +129,7 @@ class PlaceBook:
         return self._look(frame)
 
     def neighbours(self, keyframe: Keyframe) -> list[Keyframe]:
-        """Keyframes beside this one in the same segment."""
+        """Places beside this one in the same segment."""
         numbers = [keyframe.id + step for step in NEIGHBOURS]
         found = [self._world.keyframes[i] for i in numbers if 0 <= i < len(self._world.keyframes)]
         return [other for other in found if other.segment == keyframe.segment]

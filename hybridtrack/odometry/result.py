@@ -17,9 +17,9 @@ Array = np.ndarray
 
 WEAK_SHARE = 0.5
 CONTAINS = (
-    "noise of independent rays: of the frame's own against the map, and of the nearest keyframe's in the joint "
-    "adjustment; for errors that remain after a similarity alignment of the positions. Not the lens, the clocks, nor "
-    "errors that one track repeats from frame to frame"
+    "noise of rays: of the frame's own against the map, and of the nearest keyframe's in the joint "
+    "adjustment, grown by how much the rays of one track repeat their errors; for errors that remain after a "
+    "similarity alignment of the positions. Not the lens, nor the clocks"
 )
 
 
@@ -149,6 +149,7 @@ def result_of(odometer: Odometer, finished: Finished) -> OdometryResult:
         "path_length": _path_length(trajectory),
         "scale": f"not observed; the median depth of the first map was set to {options.start_depth:g}",
         "residual_variance": [fit.variance for fit in finished.fits],
+        "track_repetition": [fit.repetition for fit in finished.fits],
         "covariance_contains": CONTAINS,
         "loops": [_loop_summary(verdict) for verdict in verdicts],
         "loops_used": sum(verdict.used for verdict in verdicts),

@@ -131,18 +131,25 @@ class SparseMap:
         edges = self.covisibility.adj[keyframe.id]
         return sorted(edges, key=lambda other: (-edges[other]["shared"], -other))[:at_most]
 
-    def add_points(self, positions: Array, track_ids: Array, segment: int) -> Array:
-        """Add points (G, 3) found by tracks (G,) of a segment, give them to its keyframes' rays, return their ids."""
+    def add_points(self, positions: Array, track_ids: Array, segment: int, first_frame: Array | None = None) -> Array:
+        """Add points (G, 3) found by tracks (G,) of a segment, give them to its keyframes' rays, return their ids.
+
+        `first_frame` (G,): rays of earlier frames are left alone.
+        """
         first = len(self.positions)
         new = np.arange(first, first + len(positions))
         self.positions = np.concatenate([self.positions, positions])
         self.alive = np.concatenate([self.alive, np.ones(len(positions), bool)])
         known = self._point_of_track.setdefault(segment, {})
         known.update(zip(track_ids.tolist(), new.tolist(), strict=True))
+        order = np.argsort(track_ids)
+        since = np.zeros(len(new)) if first_frame is None else first_frame
         for keyframe in self.keyframes:
             if keyframe.segment == segment:
                 rows = np.flatnonzero((keyframe.points < 0) & np.isin(keyframe.view.ids, track_ids))
-                keyframe.points[rows] = self.points_of(keyframe.view.ids[rows], segment)
+                found = order[np.searchsorted(track_ids, keyframe.view.ids[rows], sorter=order)]
+                in_time = keyframe.view.index >= since[found]
+                keyframe.points[rows[in_time]] = new[found[in_time]]
         return new
 
     def drop_points(self, points: Array) -> None:
@@ -182,6 +189,12 @@ class BundleIndex:
     keyframes: Array
     points: Array
     rows: Array
+
+
+def ray_ids(world: SparseMap, bundle: Bundle, index: BundleIndex) -> Array:
+    """Track id (M,) of every ray of a bundle; negative ones are features of places."""
+    keyframes = index.keyframes[bundle.pose_of].tolist()
+    return np.array([world.keyframes[k].view.ids[row] for k, row in zip(keyframes, index.rows.tolist(), strict=True)])
 
 
 def assemble(

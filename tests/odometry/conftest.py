@@ -27,6 +27,7 @@ class WorldOptions:
     frames: int = 180
     rate_hz: float = 60.0
     radius_m: float = 0.45
+    laps: float = 1.0
     height_m: float = 1.2
     relief_m: float = 0.5
     planar: bool = False
@@ -43,9 +44,9 @@ class WorldOptions:
 
 
 def pose_at(t_s: Array, options: WorldOptions) -> Array:
-    """True world_from_camera (N, 4, 4): a lap in the whole span, with sway on the cable."""
+    """True world_from_camera (N, 4, 4): `laps` laps in the whole span, with sway on the cable."""
     span = options.frames / options.rate_hz
-    phase = 2.0 * np.pi * t_s / span
+    phase = 2.0 * np.pi * options.laps * t_s / span
     lapping = options.path == "lap"
     x = options.radius_m * (np.cos(phase) if lapping else 2.0 * phase / np.pi)
     y = options.radius_m * np.sin(phase) if lapping else np.zeros_like(phase)

@@ -15,7 +15,6 @@ from hybridtrack.odometry.bundle import (
     pose_covariance,
     residual_sigmas,
 )
-from hybridtrack.odometry.motion import camera_from_frame
 
 Array = np.ndarray
 
@@ -27,7 +26,7 @@ def make_bundle(seed: int, noise: float = 0.0, poses: int = 6, points: int = 60)
     cloud = rng.uniform(-1, 1, (points, 3)) + [0.0, 0.0, 4.0]
     pose_of, point_of = np.tile(np.arange(poses), points), np.repeat(np.arange(points), poses)
     twist = rng.normal(0, 1.0, (len(pose_of), 6)) * [1, 1, 1, 0.5, 0.5, 0.5]
-    own = camera_from_frame(twist, rng.uniform(-3e-3, 3e-3, len(pose_of)))
+    own = se3.exp(rng.uniform(-3e-3, 3e-3, (len(pose_of), 1)) * twist)
     local = se3.transform(own @ se3.inverse(true)[pose_of], cloud[point_of][:, None, :])[:, 0]
     rays = local / np.linalg.norm(local, axis=1, keepdims=True)
     basis = np.linalg.svd(rays[:, :, None])[0][:, :, 1:]
