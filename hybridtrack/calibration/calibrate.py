@@ -15,29 +15,25 @@ import numpy as np
 
 from hybridtrack.calibration.blink import Blink, find_blink
 from hybridtrack.calibration.contrast import StepCounts, ThresholdFit, fit_thresholds
-from hybridtrack.calibration.corners import find_boards
 from hybridtrack.calibration.defects import find_defects, quiet_counts
 from hybridtrack.calibration.event_light import EventSteps, event_steps
-from hybridtrack.calibration.event_map_fit import fit_event_map
 from hybridtrack.calibration.first_fire import FirstFire, at_mean_first_event, measure_first_fire
 from hybridtrack.calibration.frame_views import FrameSettings, FrameViews, fit_frames
+from hybridtrack.calibration.geometry_fit import fit_geometry
 from hybridtrack.calibration.intervals import shortest_interval_ns
 from hybridtrack.calibration.joint import join_blocks
 from hybridtrack.calibration.kernels import OFF_BRIGHT, OFF_DARK, ON_BRIGHT, ON_DARK
-from hybridtrack.calibration.lens_fit import fit_lens
 from hybridtrack.calibration.onset import OnsetFit, fit_onsets
 from hybridtrack.calibration.settling import Settling, measure_settling
 from hybridtrack.calibration.timing_result import TimingResult, timing_result
 from hybridtrack.calibration.view_data import BoardCorners, EventMapFit, LensFit, ViewImages
 from hybridtrack.calibration.views import View, ViewFold, ViewOptions, find_views, fold_view
-from hybridtrack.errors import BoardNotFoundError, DegenerateDataError, ModuleMismatchError
+from hybridtrack.errors import DegenerateDataError, ModuleMismatchError
 from hybridtrack.module import Contrast, Defects, HybridModule, Target, lens_parameters
 from hybridtrack.recording import Recording
 
 Array = np.ndarray
 Progress = Callable[[str, float], None]
-
-LEAST_VIEWS = 3
 
 
 @dataclass(frozen=True)
@@ -145,15 +141,15 @@ def step_counts(folds: list[ViewFold], steps: list[EventSteps], share: float, he
         p = fold.planes
         on = np.where(set_a, p[ON_BRIGHT], p[ON_DARK])[known] / fold.cycles
         off = np.where(set_a, p[OFF_DARK], p[OFF_BRIGHT])[known] / fold.cycles
-        parts.append([np.flatnonzero(known.ravel()), np.full(len(on), view), share * step.log_step[known], on, off])
+        size = share * step.log_step[known]
+        parts.append([np.flatnonzero(known.ravel()), np.full(len(on), view), size, on, off, on >= 0])
         # Across edges the sign of the step says which flip is to bright.
         edge = np.isfinite(step.edge_step) & healthy & (np.abs(step.edge_step) > 0.3)
         rising = step.edge_step > 0
         on = np.where(rising, p[ON_BRIGHT], p[ON_DARK])[edge] / fold.cycles
         off = np.where(rising, p[OFF_DARK], p[OFF_BRIGHT])[edge] / fold.cycles
-        parts.append(
-            [np.flatnonzero(edge.ravel()), np.full(len(on), view), share * np.abs(step.edge_step)[edge], on, off]
-        )
+        size = share * np.abs(step.edge_step)[edge]
+        parts.append([np.flatnonzero(edge.ravel()), np.full(len(on), view), size, on, off, on < 0])
     return StepCounts(*(np.concatenate(column) for column in zip(*parts, strict=True)))
 
 
@@ -239,24 +235,16 @@ def calibrate(
     timing = timing_result(frames.clocks, onset, nominal.frame_mode, target, settings.nominal_offset_ns)
     findings += frames.findings + timing.findings
 
-    tell("corners", 0.45)
-    search = find_boards(images, target, nominal)
-    findings += search.findings
-    if len(search.boards) < LEAST_VIEWS:
-        raise BoardNotFoundError(
-            f"the board must be found in at least {LEAST_VIEWS} views, and was in {len(search.boards)} of {len(views)}"
-            + (f" ({search.findings[0]})" if search.findings else "")
-        )
-    tell("lens", 0.6)
-    lens_fit = fit_lens(search.boards, target, nominal, options.lens_model)
-    tell("event map", 0.65)
-    map_fit = fit_event_map(images, search.boards, lens_fit, target, nominal)
-    findings += lens_fit.findings + map_fit.findings
+    geometry = fit_geometry(
+        images, target, nominal, options.lens_model, lambda stage, fraction: tell(stage, 0.45 + 0.4 * fraction)
+    )
+    lens_fit, map_fit = geometry.lens_fit, geometry.map_fit
+    findings += geometry.findings
 
     tell("contrast", 0.85)
     module = geometry_module(nominal, lens_fit, map_fit)
     pose_of = dict(zip(lens_fit.views.tolist(), lens_fit.camera_from_board, strict=True))
-    board_of = {board.view: board for board in search.boards}
+    board_of = {board.view: board for board in geometry.search.boards}
     shown = [
         CalibratedView(
             image,

@@ -12,47 +12,36 @@ tenth. With r = N_on / N_off = b / a each pixel of each view gives
 
     a = S / (N_on + kappa (1 + r)),    b = r a.
 
-Another pixel forgets what came while it was dead after an event: its reference starts afresh from the present level.
-Its counts fall behind as S grows. N over S tells the two apart wherever steps of several sizes were seen, and
-thresholds then come from the smallest steps alone, with a deviation that says so.
+Other pixels remember otherwise; `pixel_model` tells them apart wherever steps of several sizes were seen.
 """
 
 from dataclasses import dataclass
 
 import numpy as np
 
+from hybridtrack.calibration.pixel_model import LEAST_COUNT, CountCurve, choose_model
+
 Array = np.ndarray
 
-KAPPA = 0.485
-KAPPA_SIGMA = 0.05
-LEAST_COUNT = 1.5  # events a flip below which hysteresis locks in and the mean count says little
 LEAST_PIXELS = 30
 
 
 @dataclass(frozen=True)
 class StepCounts:
     """Observations, one a pixel and view (M,): `pixel` (flat index), `view`, log step `step` as the comparator saw it,
-    and mean events a flip `on`, `off`."""
+    mean events a flip `on`, `off`, and whether it lies well `inside` a square, where the step needs no model of blur.
+    """
 
     pixel: Array
     view: Array
     step: Array
     on: Array
     off: Array
+    inside: Array
 
     def __getitem__(self, chosen: Array) -> "StepCounts":
         """The observations selected by a mask or index array."""
-        return StepCounts(*(getattr(self, name)[chosen] for name in ("pixel", "view", "step", "on", "off")))
-
-
-@dataclass(frozen=True)
-class CountCurve:
-    """Mean counts over the size of the step, for figures and for the choice of pixel model: all (B,)."""
-
-    step: Array
-    on: Array
-    off: Array
-    number: Array
+        return StepCounts(*(getattr(self, name)[chosen] for name in ("pixel", "view", "step", "on", "off", "inside")))
 
 
 @dataclass(frozen=True)
@@ -86,13 +75,6 @@ def count_curve(counts: StepCounts, bins: int = 16) -> CountCurve:
         if len(g) >= LEAST_PIXELS
     ]
     return CountCurve(*np.array(columns).reshape(-1, 4).T)
-
-
-def thresholds_by_steps(counts: StepCounts) -> tuple[Array, Array]:
-    """ON and OFF threshold (M,) from each observation, the reference taken to move in steps."""
-    ratio = counts.on / counts.off
-    on = counts.step / (counts.on + KAPPA * (1.0 + ratio))
-    return on, on * ratio
 
 
 def pixel_means(values: Array, pixel: Array, size: int) -> tuple[Array, float]:
@@ -139,38 +121,6 @@ def over_pixels(values: Array, counts: StepCounts, shape: tuple[int, int], relat
     return _OverPixels(median, float(np.hypot(statistical, relative * median)), spread, mean.reshape(shape))
 
 
-def falls_behind(curve: CountCurve, on: float, off: float) -> bool:
-    """Whether counts at the largest steps fall short of what thresholds from the smallest usable steps predict."""
-    usable = np.flatnonzero((curve.on > LEAST_COUNT) & (curve.off > LEAST_COUNT) & (curve.step < 4.0 * (on + off)))
-    if len(usable) < 2 or curve.step[-1] < 1.5 * curve.step[usable[0]]:
-        return False
-    small = usable[: max(1, len(usable) // 3)]
-    shortfalls = []
-    for name in ("on", "off"):
-        number, other = getattr(curve, name), getattr(curve, "off" if name == "on" else "on")
-        threshold = np.mean(curve.step[small] / (number[small] + KAPPA * (1.0 + number[small] / other[small])))
-        expected = curve.step[-1] / threshold - KAPPA * (1.0 + number[-1] / max(other[-1], 1e-9))
-        shortfalls.append(1.0 - number[-1] / max(expected, 1e-9))
-    return max(shortfalls) > 0.2
-
-
-def model_deviation(curve: CountCurve, on: float, off: float) -> tuple[float, str | None]:
-    """Relative deviation that the unknown pixel model leaves, and a finding where steps are too uniform to test it."""
-    hysteresis = KAPPA_SIGMA * (on + off) / float(np.median(curve.step))
-    usable = (curve.on > LEAST_COUNT) & (curve.off > LEAST_COUNT)
-    if np.count_nonzero(usable) < 3 or curve.step[usable].max() < 1.4 * curve.step[usable].min():
-        # A reference that leaps to the level reached leaves half a threshold of its own instead of both residuals.
-        between = 0.5 * KAPPA * (on + off) / float(np.median(curve.step))
-        return float(np.hypot(hysteresis, 0.6 * between)), (
-            "steps of light are too alike to tell the pixel's model from counts: thresholds rest on a reference that "
-            "moves by one threshold an event"
-        )
-    # How well one pair of thresholds explains all step sizes.
-    threshold = curve.step / (curve.on + KAPPA * (1.0 + curve.on / np.maximum(curve.off, 1e-9)))
-    scatter = float(np.std(threshold[usable]) / np.mean(threshold[usable]))
-    return float(np.hypot(hysteresis, 0.5 * scatter)), None
-
-
 def refused(shape: tuple[int, int], curve: CountCurve, reason: str) -> ThresholdFit:
     """No thresholds, and why."""
     nothing = np.full(shape, np.nan)
@@ -193,23 +143,13 @@ def fit_thresholds(counts: StepCounts, shape: tuple[int, int]) -> ThresholdFit:
             f"{LEAST_PIXELS} pixels inside squares with {LEAST_COUNT:g} events a flip are required, got "
             f"{len(good.step)}",
         )
-    on, off = thresholds_by_steps(good)
-    model, findings = "steps", []
-    if falls_behind(curve, float(np.median(on)), float(np.median(off))):
-        model = "resets"
+    choice = choose_model(curve, count_curve(usable[usable.inside]))
+    if choice.model == "resets":
         smallest = np.quantile(good.step, 0.02)
         good = good[good.step < max(1.6 * smallest, smallest + 0.3)]
-        on, off = thresholds_by_steps(good)
-        findings.append(
-            "counts fall behind as steps grow: the pixels lose what happens in their refractory time, and thresholds "
-            "are taken from the smallest steps alone"
-        )
-    relative, finding = model_deviation(curve, float(np.median(on)), float(np.median(off)))
-    if model == "resets":
-        relative = float(np.hypot(relative, 0.08))
-    if finding:
-        findings.append(finding)
-    up, down = (over_pixels(values, good, shape, relative) for values in (on, off))
+    on, off = good.step / (good.on + choice.on_left(good)), good.step / (good.off + choice.off_left(good))
+    up, down = (over_pixels(values, good, shape, choice.relative) for values in (on, off))
     return ThresholdFit(
-        up.median, down.median, up.sigma, down.sigma, up.spread, down.spread, up.map, down.map, model, curve, findings
-    )
+        up.median, down.median, up.sigma, down.sigma, up.spread, down.spread, up.map, down.map, choice.model, curve,
+        choice.findings,
+    )  # fmt: skip

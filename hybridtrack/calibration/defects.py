@@ -25,6 +25,7 @@ QUIET = (0.78, 0.97)  # part of the bright half in which nothing changes
 HOT_RATIO = 15.0
 HOT_LEAST_HZ = 3.0
 DEAD_FLIPS = 20
+EDGE_VIEWS = 3
 CLEAR_STEP = 0.9  # log step that any healthy pixel answers
 
 
@@ -80,15 +81,21 @@ def hot_pixels(quiet: QuietCounts) -> Array:
 
 
 def dead_pixels(folds: list[ViewFold], steps: list[EventSteps]) -> tuple[Array, Array]:
-    """Mask of dead pixels, and of those that could be judged (rows, columns): flips of a clear step met them often."""
+    """Mask of dead pixels, and of those that could be judged (rows, columns): flips of a clear step met them often.
+
+    Near an edge the step rests on a model of its blur: there a pixel is judged from several views only.
+    """
     shape = folds[0].planes.shape[1:]
-    flips, events = np.zeros(shape, int), np.zeros(shape, np.int64)
+    flips, edge_views, events = np.zeros(shape, int), np.zeros(shape, int), np.zeros(shape, np.int64)
+    inside_any = np.zeros(shape, bool)
     for fold, step in zip(folds, steps, strict=True):
         with np.errstate(invalid="ignore"):
-            covered = (step.log_step > CLEAR_STEP) | (np.abs(step.edge_step) > CLEAR_STEP)
-        flips += np.where(covered, 2 * fold.cycles, 0)
-        events += np.where(covered, fold.planes.sum(axis=0, dtype=np.int64), 0)
-    judged = flips >= DEAD_FLIPS
+            inside, edge = step.log_step > CLEAR_STEP, np.abs(step.edge_step) > CLEAR_STEP
+        flips += np.where(inside | edge, 2 * fold.cycles, 0)
+        events += np.where(inside | edge, fold.planes.sum(axis=0, dtype=np.int64), 0)
+        edge_views += edge
+        inside_any |= inside
+    judged = (flips >= DEAD_FLIPS) & (inside_any | (edge_views >= EDGE_VIEWS))
     return judged & (events <= 0.02 * flips), judged
 
 

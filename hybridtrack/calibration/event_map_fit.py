@@ -257,7 +257,7 @@ def map_covariance(normal: MapNormal, nuisance: Array) -> tuple[Array, Array, fl
     total = 0.0
     for v in range(views):
         pulled = T @ columns[v]
-        spread = T @ normal.information[v] @ T.T + pulled @ nuisance @ pulled.T
+        spread = T @ normal.spread[v] @ T.T + pulled @ nuisance @ pulled.T
         score = T @ normal.scores[v]
         total += float(score @ np.linalg.solve(0.5 * (spread + spread.T), score))
     degrees = MAP_TERMS * (views - 1)

@@ -67,14 +67,14 @@ class MapModel:
 
 @dataclass(frozen=True)
 class MapNormal:
-    """Normal equations. `matrix` (S, S), `right` (S,); by view `scores` (V, S), `information` (V, S, S) and
-    `nuisance` (V, S, 6 + P): cross terms with the view's pose twist and the lens. `gain_excess` (pixels,), and its
-    posterior variance."""
+    """Normal equations. `matrix` (S, S), `right` (S,); by view its pull `scores` (V, S), the covariance
+    `spread` (V, S, S) that noise alone gives it, and `nuisance` (V, S, 6 + P): cross terms with the view's pose twist
+    and the lens. `gain_excess` (pixels,), and its posterior variance."""
 
     matrix: Array
     right: Array
     scores: Array
-    information: Array
+    spread: Array
     nuisance: Array
     gain_excess: Array
     gain_variance: Array
@@ -146,19 +146,23 @@ def accumulate(
         power[steps.pixel] += toward * row.predicted
         excess[steps.pixel] += toward * row.residual
     shrunk = 1.0 / (power + 1.0 / model.gain_variance)
-    scores, information = np.zeros((views, size)), np.zeros((views, size, size))
+    gain_excess = excess * shrunk
+    scores, spread, total = np.zeros((views, size)), np.zeros((views, size, size)), np.zeros((size, size))
     nuisance = np.zeros((views, size, 0 if motions is None else motions[0].shape[-1]))
     for v, (steps, row) in enumerate(zip(all_steps, rows, strict=True)):
         own = row.design - (row.predicted * shrunk[steps.pixel])[:, None] * pull[steps.pixel]
         own *= row.weight[:, None]
-        scores[v] = own.T @ row.residual
-        information[v] = own.T @ row.design
+        total += own.T @ row.design
+        # A view's own pull, gains taken off: what they have in common between views cancels in the sum only.
+        left = row.residual - row.predicted * gain_excess[steps.pixel]
+        scores[v] = row.design.T @ (row.weight * left)
+        free = 1.0 - row.weight * row.predicted**2 * shrunk[steps.pixel]
+        spread[v] = row.design.T @ (row.design * (row.weight * free)[:, None])
         if motions is not None:
             slope = row.slope[:, None] * steps.d_uv
             # The board's picture moving one way is the pixel moving the other.
             nuisance[v] = -own.T @ np.einsum("nj,njk->nk", slope, motions[v])
-    return MapNormal(matrix + information.sum(0), right + scores.sum(0), scores, information, nuisance,
-                     excess * shrunk, shrunk)  # fmt: skip
+    return MapNormal(matrix + total, right + scores.sum(0), scores, spread, nuisance, gain_excess, shrunk)
 
 
 def left_over(steps: PixelSteps, v: int, model: MapModel, basis: MapBasis) -> tuple[Array, Array, Array]:

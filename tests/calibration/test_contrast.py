@@ -29,12 +29,9 @@ def cycle_counts(step, on, off, kind, cycles=40, seed=0):
                     break
                 count += fires
                 if kind == "leaps":
-                    reference = np.where(
-                        fires,
-                        reference + sign * threshold * np.floor(sign * (level - reference) / threshold),
-                        reference,
-                    )
-                    count += np.where(fires, 0, 0)
+                    # All events of the burst at once, then the reference stands at the level reached.
+                    count += fires * (np.floor(np.abs(level - reference) / threshold) - 1.0).clip(0)
+                    reference = np.where(fires, level, reference)
                 elif kind == "dead":
                     left = sign * (level - reference) - threshold
                     reference = np.where(fires, reference + sign * (threshold + 0.33 * np.maximum(left, 0)), reference)
@@ -55,7 +52,7 @@ def observations(kind, low, high, views=4, on=0.27, off=0.33, spread=0.04, seed=
         pixel = rng.choice(size, size // 3, replace=False)
         step = rng.uniform(low, high, len(pixel))
         up, down = cycle_counts(step, a[pixel], b[pixel], kind, seed=seed + view)
-        parts.append((pixel, np.full(len(pixel), view), step, up, down))
+        parts.append((pixel, np.full(len(pixel), view), step, up, down, np.ones(len(pixel), bool)))
     return StepCounts(*(np.concatenate(column) for column in zip(*parts, strict=True)))
 
 
@@ -82,7 +79,16 @@ def test_pixels_that_lose_events_are_recognised():
     assert fit.model == "resets"
     assert any("fall behind" in finding for finding in fit.findings)
     assert abs(fit.on - 0.27) < 3 * fit.on_sigma
-    assert fit.on_sigma > 0.08 * fit.on
+    assert fit.on_sigma > 0.1 * fit.on
+
+
+def test_leaping_references_are_told_by_their_slope():
+    """A reference that jumps to the level reached leaves less over; steps of several sizes show it."""
+    fit = fit_thresholds(observations("leaps", 0.8, 2.6), SHAPE)
+    assert fit.model == "leaps"
+    assert fit.on == pytest.approx(0.27, rel=0.03)
+    assert fit.off == pytest.approx(0.33, rel=0.03)
+    assert abs(fit.on - 0.27) < 3 * fit.on_sigma
 
 
 def test_steps_all_alike_widen_the_deviation():
