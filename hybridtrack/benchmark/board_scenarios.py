@@ -24,19 +24,29 @@ LAYOUTS: dict[str, dict[str, Any]] = {
 TARGETS = ("lamp_panel", "bench_screen")
 
 
+MIXES = (("4x4, bin 2", "bench_screen"), ("2x2, bin 1", "lamp_panel"), ("4x4, bin 2, omitted", "lamp_panel"),
+         ("4x4, cropped, filled", "bench_screen"))  # fmt: skip
+
+
+def mix_of(seed: int) -> tuple[str, str]:
+    """Layout and target of a seed: four layouts in turn, and every four seeds the targets change places."""
+    layout, target = MIXES[seed % len(MIXES)]
+    swapped = seed // len(MIXES) % 2
+    return layout, TARGETS[(TARGETS.index(target) + swapped) % len(TARGETS)]
+
+
 def layout_of(seed: int) -> str:
-    """Name of the layout that a seed uses: the first two for half of the seeds each, then the others too."""
-    names = list(LAYOUTS)
-    return names[seed % 2] if seed % 4 < 2 else names[seed // 2 % len(names)]
+    """Name of the layout that a seed uses."""
+    return mix_of(seed)[0]
 
 
 def board_scenario(targets: Path, seed: int, views: int = 12, dwell_s: float = 0.5) -> Recipe:
     """The recipe of one seed. `targets` is the folder that holds the example targets and modules."""
-    target = TARGETS[seed // 2 % 2]
+    layout, target = mix_of(seed)
     data = {
         "kind": "board",
         "name": f"board {seed}",
-        "module": {"file": targets / "wren.module.json", "overrides": LAYOUTS[layout_of(seed)]},
+        "module": {"file": targets / "wren.module.json", "overrides": LAYOUTS[layout]},
         "target": {"file": targets / f"{target}.target.json"},
         "truth": {"mirror_x": "random", "mirror_y": "random", "clear_site": "random", "centroid_px": 0.25},
         "views": {"count": views, "dwell_s": dwell_s, "tilt_max_deg": 35.0},
