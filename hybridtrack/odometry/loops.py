@@ -1,10 +1,10 @@
 """Places seen again: candidates by matching descriptors, a similarity by geometry, and reasons to refuse.
 
 Candidates are earlier keyframes that share hardly a track with the newest: every one is compared by its strongest
-features, the best few by all. The older keyframe's features have positions by its neighbours; the newest is localised against
-them (random samples, then Gauss-Newton), and the ratio of distances on both sides gives the scale between them (the
-similarity of Strasdat et al. 2010). A look-alike is refused when too few features agree, too small a share of them, or
-a patch only.
+features, the best few by all. The older keyframe's features have positions by its neighbours; the newest is
+localised against them (random samples, then Gauss-Newton), and the ratio of distances on both sides gives the scale
+between them (the similarity of Strasdat et al. 2010). A look-alike is refused when too few features agree, too small
+a share of them, or a patch only.
 """
 
 from dataclasses import dataclass
