@@ -139,6 +139,13 @@ def _track_picture(result: DemoResult) -> tuple[Figure, ...]:
     return (figure,) if figure is not None else ()
 
 
+def _path_story(result: DemoResult) -> str:
+    loops = result.hybrid.odometry.summary["loops_used"]
+    if loops:
+        return f"Tracks become poses and a map; where the trolley comes back {loops} loops were closed."
+    return "Tracks become poses and a map. No loop had to be closed: features stayed in view all the way round."
+
+
 def demo_page(result: DemoResult) -> Page:
     """Build the page."""
     calibration, score = result.calibration, result.score
@@ -189,7 +196,7 @@ def demo_page(result: DemoResult) -> Page:
             ),
             Section(
                 "4. The path",
-                "Tracks become poses and a map; the loop is closed where the trolley comes back.",
+                _path_story(result),
                 tables=(path_table(result),),
                 figures=(truth_path_figure(result), path_error_figure(result)),
             ),

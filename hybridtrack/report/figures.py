@@ -11,13 +11,17 @@ from contextlib import contextmanager
 from typing import Any
 
 import matplotlib
+import numpy as np
 from cycler import cycler
+from matplotlib.colors import to_hex
 from matplotlib.figure import Figure as Canvas
 
 from hybridtrack.report.page import Figure
 
 INK, RULE, PAPER = "#010203", "#040506", "#070809"
 SERIES = ("#0a0b01", "#0a0b02", "#0a0b03", "#0a0b04", "#0a0b05")
+# Over a picture, which is dark in both schemes; also for what is rasterised, where markers can't be replaced.
+ON_PICTURE = {"on": "#f5a04e", "off": "#5cb8ff", "trail": "#f2e14c", "feature": "#7df59a"}
 _VARIABLES = {INK: "var(--ink)", RULE: "var(--rule)", PAPER: "var(--paper)"} | {
     colour: f"var(--series-{number})" for number, colour in enumerate(SERIES, start=1)
 }
@@ -48,7 +52,16 @@ _STYLE: Any = {
 }
 
 
+def _require_colours_that_last(canvas: Canvas) -> None:
+    """A rasterised artist in a marker colour would stay nearly black: none may be."""
+    for artist in canvas.findobj(lambda artist: bool(artist.get_rasterized())):
+        colours = artist.get_facecolor() if hasattr(artist, "get_facecolor") else np.empty((0, 4))
+        for colour in np.atleast_2d(colours):
+            assert to_hex(colour) not in _VARIABLES, f"rasterised in the marker colour {to_hex(colour)}"
+
+
 def _to_svg(canvas: Canvas, name: str) -> str:
+    _require_colours_that_last(canvas)
     buffer = io.StringIO()
     with matplotlib.rc_context({"svg.hashsalt": name}):
         canvas.savefig(

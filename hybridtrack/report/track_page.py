@@ -7,7 +7,7 @@ import numpy as np
 
 from hybridtrack.module import HybridModule
 from hybridtrack.recording import Events
-from hybridtrack.report.figures import SERIES, drawing, finished
+from hybridtrack.report.figures import ON_PICTURE, SERIES, drawing, finished
 from hybridtrack.report.page import Figure, Page, Section, Table
 from hybridtrack.tracking import Tracks
 
@@ -56,17 +56,17 @@ def picture_figure(
     `image` (H, W[, 3]) taken at `t_ns`; `events` to lay over it; each feature's path of the last `trail_ns` is drawn.
     """
     caption = (
-        "Features over a frame: the dot is where each is, the line where it came from. Points of colour are events: "
-        "orange ON, blue OFF."
+        "Features over a frame: the dot is where each is, the line where it came from. Points of colour are events just "
+        "before it: orange ON, blue OFF."
     )
     mode = module.frame_mode
     grey = image if image.ndim == 2 else image.mean(axis=2)
     with drawing(name, caption, wide=True, height_in=4.6) as sheet:
         sheet.axes.imshow(grey, vmin=0, vmax=np.percentile(grey, 99.7))
         position = mode.frame_from_colour(module.colour_from_event_px(np.stack([events.x, events.y], axis=1)))
-        for value, colour in ((0, SERIES[0]), (1, SERIES[1])):
+        for value, colour in ((0, ON_PICTURE["off"]), (1, ON_PICTURE["on"])):
             chosen = position[events.on == value][:60_000]
-            sheet.axes.scatter(*chosen.T, s=1.6, color=colour, alpha=0.35, linewidths=0, rasterized=True)
+            sheet.axes.scatter(*chosen.T, s=2.2, color=colour, alpha=0.6, linewidths=0, rasterized=True)
         recent = tracks[
             (tracks.t_ns <= t_ns)
             & (tracks.t_ns > t_ns - trail_ns)
@@ -75,8 +75,8 @@ def picture_figure(
         for identity in np.unique(recent.id[recent.t_ns > t_ns - 30_000_000]):
             path = mode.frame_from_colour(recent.of(int(identity)).uv)
             step = max(1, len(path) // 40)
-            sheet.axes.plot(*path[::-step][::-1].T, color=SERIES[4], lw=1.0)
-            sheet.axes.plot(*path[-1], ".", color=SERIES[2], ms=5)
+            sheet.axes.plot(*path[::-step][::-1].T, color=ON_PICTURE["trail"], lw=1.0)
+            sheet.axes.plot(*path[-1], ".", color=ON_PICTURE["feature"], ms=5)
         sheet.axes.set(xlim=(-0.5, grey.shape[1] - 0.5), ylim=(grey.shape[0] - 0.5, -0.5))
         sheet.axes.set(xlabel="frame column", ylabel="frame row")
         sheet.axes.grid(False)
