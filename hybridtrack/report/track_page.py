@@ -56,7 +56,7 @@ def picture_figure(
     `image` (H, W[, 3]) taken at `t_ns`; `events` to lay over it; each feature's path of the last `trail_ns` is drawn.
     """
     caption = (
-        "Features over a frame: the dot is where each is, the line where it came from. Points of colour are events just "
+        "Features over a frame: the dot is where each is, the line where it came from. Coloured points are events just "
         "before it: orange ON, blue OFF."
     )
     mode = module.frame_mode
