@@ -1,4 +1,4 @@
-"""What every command shares on the terminal: progress, tables, and choosing a module for a recording."""
+"""What every command shares on the terminal: progress and tables."""
 
 import sys
 from collections.abc import Callable, Iterator

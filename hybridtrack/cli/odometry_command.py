@@ -12,7 +12,9 @@ from hybridtrack.report.page import POSE_CAUTION
 
 def odometry_command(
     recording: Annotated[Path, typer.Argument(help="Recording (*.h5).")],
-    module: Annotated[Path, typer.Option(help="Calibrated module (*.module.json).")],
+    module: Annotated[
+        Path | None, typer.Option(help="Calibrated module (*.module.json); by default the one the recording carries.")
+    ] = None,
     out: Annotated[
         Path, typer.Option(help="Folder for trajectory.csv, map.ply, pose_graph.json, summary.json, report.html.")
     ] = Path("out"),
@@ -23,15 +25,15 @@ def odometry_command(
     One camera does not observe the scale: lengths are in the map's own unit. A lost pose is left empty and never
     bridged in silence. Exit code 1: done, but poses were lost or the path fell into parts.
     """
-    from hybridtrack.module import load_module
+    from hybridtrack.cli.module_choice import module_for
     from hybridtrack.odometry import OdometryOptions, run_odometry, write_outputs
     from hybridtrack.recording import Recording
     from hybridtrack.report.odometry_page import odometry_page, odometry_table
     from hybridtrack.report.page import write_page
 
-    options, description = OdometryOptions(mode=mode), load_module(module)
+    options = OdometryOptions(mode=mode)
     with Recording.open(recording) as opened, shown_progress() as progress:
-        result = run_odometry(opened, description, options, progress)
+        result = run_odometry(opened, module_for(opened, module), options, progress)
     write_outputs(result, out)
     write_page(odometry_page(result, str(recording)), out / "report.html")
     print_table(odometry_table(result), str(recording))

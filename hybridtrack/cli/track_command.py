@@ -10,7 +10,9 @@ from hybridtrack.cli.console import print_table, report_written, shown_progress
 
 def track_command(
     recording: Annotated[Path, typer.Argument(help="Recording (*.h5).")],
-    module: Annotated[Path, typer.Option(help="Calibrated module (*.module.json).")],
+    module: Annotated[
+        Path | None, typer.Option(help="Calibrated module (*.module.json); by default the one the recording carries.")
+    ] = None,
     out: Annotated[Path, typer.Option(help="Folder for run.tracks.h5, summary.json, report.html.")] = Path("out"),
     mode: Annotated[str, typer.Option(help="hybrid, frames or events.")] = "hybrid",
     points: Annotated[Path | None, typer.Option(help="CSV id,t_ns,u,v: follow these and detect no others.")] = None,
@@ -22,8 +24,8 @@ def track_command(
     Each sample has a position on the colour array, a covariance, a state (alive, weak, lost, out_of_view) with its
     reason, and what it came from. Example: hybridtrack track lap.h5 --module bench-1/calibrated.module.json --out lap-1
     """
+    from hybridtrack.cli.module_choice import module_for
     from hybridtrack.files import write_json
-    from hybridtrack.module import load_module
     from hybridtrack.recording import Recording
     from hybridtrack.report.page import write_page
     from hybridtrack.report.track_page import track_page, track_summary, track_table
@@ -31,9 +33,9 @@ def track_command(
     from hybridtrack.tracking import TrackerOptions, read_points, track_recording, write_tracks
 
     options = TrackerOptions(mode=mode, max_features=features)  # type: ignore[arg-type]
-    description = load_module(module)
     chosen = read_points(points) if points is not None else None
     with Recording.open(recording) as opened:
+        description = module_for(opened, module)
         with shown_progress() as progress:
             tracks = track_recording(opened, description, options, points=chosen, progress=progress)
         write_tracks(out / "run.tracks.h5", tracks)
