@@ -40,15 +40,33 @@ def layout_of(seed: int) -> str:
     return mix_of(seed)[0]
 
 
+def map_terms_of(seed: int) -> tuple[float, float]:
+    """Largest displacement by linear terms off the lattice and by a radial term, px: a quarter of the seeds has one."""
+    odd = seed // len(MIXES)
+    if (seed + odd) % 4 != 3:
+        return 0.0, 0.0
+    return (0.05, 0.0) if odd % 2 else (0.0, 0.05)
+
+
 def board_scenario(targets: Path, seed: int, views: int = 12, dwell_s: float = 0.5) -> Recipe:
     """The recipe of one seed. `targets` is the folder that holds the example targets and modules."""
     layout, target = mix_of(seed)
+    odd = seed // len(MIXES)  # independent of layout and target
+    centroid_px = 0.25 if (seed + odd) % 2 else 0.0
+    off_lattice_px, radial_px = map_terms_of(seed)
     data = {
         "kind": "board",
         "name": f"board {seed}",
         "module": {"file": targets / "wren.module.json", "overrides": LAYOUTS[layout]},
         "target": {"file": targets / f"{target}.target.json"},
-        "truth": {"mirror_x": "random", "mirror_y": "random", "clear_site": "random", "centroid_px": 0.25},
+        "truth": {
+            "mirror_x": "random",
+            "mirror_y": "random",
+            "clear_site": "random",
+            "centroid_px": centroid_px,
+            "off_lattice_px": off_lattice_px,
+            "radial_px": radial_px,
+        },
         "views": {"count": views, "dwell_s": dwell_s, "tilt_max_deg": 35.0},
     }
     return recipe_from_data(data, f"board scenario {seed}")
