@@ -17,6 +17,7 @@ import numpy as np
 from hybridtrack.calibration.apertures import frame_aperture
 from hybridtrack.calibration.board_view import place_frame_pixels
 from hybridtrack.calibration.count_curve import CountNoise, fit_noise, straight_curve
+from hybridtrack.calibration.event_map_covariance import map_covariance, nuisance_covariance
 from hybridtrack.calibration.event_map_normal import (
     MAP_TERMS,
     MapBasis,
@@ -35,6 +36,7 @@ from hybridtrack.calibration.event_prediction import (
     predict_steps,
 )
 from hybridtrack.calibration.lattice_test import LatticeVerdict, judge_lattice
+from hybridtrack.calibration.parallax import distances_m, judge_parallax
 from hybridtrack.calibration.view_data import MAP_PARAMETERS, BoardCorners, EventMapFit, LensFit, ViewImages
 from hybridtrack.calibration.view_light import ViewLight, fit_view_light
 from hybridtrack.errors import BoardNotFoundError, DegenerateDataError
@@ -223,47 +225,6 @@ def _align(views: _Views, state: _State, nominal: HybridModule, centre: Array) -
     return _Aligned(state, all_steps, basis, accumulate(all_steps, state.model, basis, state.log_blur, motions))
 
 
-def _nuisance_covariance(lens_fit: LensFit, order: Array) -> Array:
-    """Joint covariance of the poses of the used views (6 each), then the lens."""
-    size = len(lens_fit.parameters)
-    poses = (size + 6 * order[:, None] + np.arange(6)).ravel()
-    at = np.concatenate([poses, np.arange(size)])
-    return lens_fit.joint_covariance[np.ix_(at, at)]
-
-
-def _nuisance_columns(normal: MapNormal) -> Array:
-    """Cross terms (V, S, 6V + P) of each view with all nuisances."""
-    views, size, width = normal.nuisance.shape
-    lens = width - 6
-    out = np.zeros((views, size, 6 * views + lens))
-    for v in range(views):
-        out[v, :, 6 * v : 6 * v + 6] = normal.nuisance[v, :, :6]
-        out[v, :, 6 * views :] = normal.nuisance[v, :, 6:]
-    return out
-
-
-def map_covariance(normal: MapNormal, nuisance: Array) -> tuple[Array, Array, float, int]:
-    """Covariance (7, 7) of the coefficients, cross covariance (7, P) with the lens, its factor over what noise and
-    poses explain, and the factor's degrees of freedom."""
-    views = len(normal.scores)
-    inverse = np.linalg.inv(normal.matrix)
-    columns = _nuisance_columns(normal)
-    gain = (inverse @ columns.sum(0))[:MAP_TERMS]
-    covariance = inverse[:MAP_TERMS, :MAP_TERMS] + gain @ nuisance @ gain.T
-    cross = -gain @ nuisance[:, 6 * views :]
-    # Scores of the map with all else of z eliminated.
-    rest = normal.matrix[MAP_TERMS:, MAP_TERMS:]
-    T = np.concatenate([np.eye(MAP_TERMS), -normal.matrix[:MAP_TERMS, MAP_TERMS:] @ np.linalg.inv(rest)], axis=1)
-    total = 0.0
-    for v in range(views):
-        pulled = T @ columns[v]
-        spread = T @ normal.spread[v] @ T.T + pulled @ nuisance @ pulled.T
-        score = T @ normal.scores[v]
-        total += float(score @ np.linalg.solve(0.5 * (spread + spread.T), score))
-    degrees = MAP_TERMS * (views - 1)
-    return covariance, cross, total / degrees, degrees
-
-
 def _patches(all_steps: list[PixelSteps], state: _State, basis: MapBasis, nominal: HybridModule) -> tuple[Array, Array]:
     """Displacement (M, 2) px that each patch of the event grid still asks for, at its middle (M, 2) in event px."""
     grid = nominal.event_grid
@@ -369,22 +330,24 @@ def fit_event_map(
     state = replace(state, model=_first_model(all_steps, pixels))
     aligned = _align(_signed(measured, sign), state, nominal, centre)
     state, normal = aligned.state, aligned.normal
-    covariance, cross, factor, degrees = map_covariance(normal, _nuisance_covariance(lens_fit, measured.order))
-    factor = max(factor, 1.0)
+    sure = map_covariance(normal, nuisance_covariance(lens_fit, measured.order))
+    factor = max(sure.factor, 1.0)
     base = lattice_matrix(nominal, start.mirror, (0.0, 0.0))
     deviation = state.matrix - base
     width, height = nominal.event_grid.width, nominal.event_grid.height
     middle = deviation @ np.array([(width - 1) / 2.0, (height - 1) / 2.0, 1.0])
     by_x, by_y = deviation[:, 0] * width / 2.0, deviation[:, 1] * height / 2.0
     coefficients = np.array([middle[0], by_x[0], by_y[0], middle[1], by_x[1], by_y[1], state.radial])
-    verdict = judge_lattice(coefficients, covariance * factor, degrees)
+    verdict = judge_lattice(coefficients, sure.covariance * factor, sure.degrees)
     fitted, site, findings = _result(state, base, verdict, start.mirror, centre, nominal)
     J, kept = coefficient_jacobian(nominal), _kept_parameters(verdict)
+    middle_m = target.corners_m().reshape(-1, 3).mean(0)
+    parallax = judge_parallax(sure.pulls, distances_m(measured.poses, middle_m))
     patch_xy, patch_px = _patches(aligned.steps, state, aligned.basis, nominal)
     return EventMapFit(
         colour_from_event=fitted, mirror_x=start.mirror[0], mirror_y=start.mirror[1], clear_site=site,
         parameters=tuple(MAP_PARAMETERS[k] for k in kept),
         covariance=(J @ verdict.covariance @ J.T)[np.ix_(kept, kept)],
-        cross_covariance=(J @ cross)[kept], residual_xy=patch_xy, residuals_px=patch_px,
-        findings=findings + _lattice_findings(verdict, factor),
+        cross_covariance=(J @ sure.cross)[kept], residual_xy=patch_xy, residuals_px=patch_px,
+        findings=findings + _lattice_findings(verdict, factor) + parallax.findings(), parallax=parallax,
     )  # fmt: skip

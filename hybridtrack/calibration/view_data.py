@@ -15,6 +15,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
+from hybridtrack.calibration.parallax import ParallaxTest
 from hybridtrack.geometry import FisheyeLens, PerspectiveLens
 from hybridtrack.module import ColourFromEvent
 
@@ -118,6 +119,7 @@ class EventMapFit:
     `parameters` are (a subset of) MAP_PARAMETERS; `covariance` theirs, clustered over views. `cross_covariance`
     (P_map, P_lens) against the lens block, or None where the two are independent. `residual_xy` (M, 2) event-grid
     positions, `residuals_px` (M, 2) displacement of local patches in colour px, for the report; may be empty.
+    `parallax`: whether the map depends on the board's distance.
     """
 
     colour_from_event: ColourFromEvent
@@ -130,11 +132,4 @@ class EventMapFit:
     residual_xy: Array
     residuals_px: Array
     findings: list[str] = field(default_factory=list)
-
-
-# Entry points that `calibrate` calls (in corners.py, lens_fit.py, event_map_fit.py, board_view.py):
-#   find_boards(views: list[ViewImages], target: Target, nominal: HybridModule) -> BoardSearch
-#   fit_lens(boards: list[BoardCorners], target: Target, nominal: HybridModule, model: str | None = None) -> LensFit
-#   fit_event_map(views, boards, lens_fit, target, nominal) -> EventMapFit
-#   board_from_colour_px(lens, camera_from_board (4, 4), uv (..., 2)) -> (..., 2) metres on the board plane
-# Fewer than three boards, or no tilt: BoardNotFoundError or DegenerateDataError, raised by `fit_lens`.
+    parallax: ParallaxTest | None = None
