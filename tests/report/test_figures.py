@@ -26,3 +26,11 @@ def test_colours_over_pictures_may_be_rasterised() -> None:
     with drawing("dots", "Dots.") as sheet:
         sheet.axes.scatter(np.arange(3), np.arange(3), color=ON_PICTURE["on"], rasterized=True)
     assert "<image" in finished(sheet).svg
+
+
+def test_a_colour_bar_may_be_rasterised() -> None:
+    """Its colours come from a map."""
+    with drawing("map", "A map.") as sheet:
+        shown = sheet.axes.imshow(np.eye(3))
+        sheet.canvas.colorbar(shown, ax=sheet.axes)
+    assert "<image" in finished(sheet).svg
