@@ -18,6 +18,7 @@ from hybridtrack.cli.ingest_command import ingest_command
 from hybridtrack.cli.inspect_command import inspect_command
 from hybridtrack.cli.odometry_command import odometry_command
 from hybridtrack.cli.synthesise_command import synthesise_command
+from hybridtrack.cli.target_command import target_command
 from hybridtrack.cli.track_command import track_command
 from hybridtrack.errors import HybridtrackError
 
@@ -33,6 +34,7 @@ app = typer.Typer(
         "A new module usually goes through: inspect, calibrate, track, odometry. Try 'hybridtrack demo' first."
     ),
 )
+app.command("target")(target_command)
 app.command("ingest")(ingest_command)
 app.command("inspect")(inspect_command)
 app.command("calibrate")(calibrate_command)
