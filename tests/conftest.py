@@ -2,6 +2,10 @@
 
 import os
 
+import hybridtrack.threads  # noqa: F401  before numpy: pools of threads made the calibrations of tests five times slower
+
+# isort: split
+
 import pytest
 
 
