@@ -1,7 +1,8 @@
 """`hybridtrack calibrate`: from a recording of a blinking target, or from photographs, to a calibrated module."""
 
+import sys
 from pathlib import Path
-from typing import Annotated
+from typing import TYPE_CHECKING, Annotated
 
 import typer
 
@@ -9,27 +10,89 @@ from hybridtrack.cli.console import print_findings, print_table, report_written,
 from hybridtrack.errors import OptionError
 from hybridtrack.report.page import BLINK_CAUTION
 
+if TYPE_CHECKING:
+    from hybridtrack.cli.calibration_output import Calibrated, CalibrationJob
 
-def _calibrate_recording(recording: Path, target: Path, module: Path | None, out: Path, lens_model: str | None) -> None:
-    from hybridtrack.calibration import CalibrationOptions, calibrate, summary
-    from hybridtrack.files import write_json
-    from hybridtrack.module import load_module, load_target, save_module
+
+def _job(target: Path, module: Path | None, lens_model: str | None, limits: Path | None) -> "CalibrationJob":
+    from hybridtrack.calibration.limits import load_limits
+    from hybridtrack.cli.calibration_output import CalibrationJob
+    from hybridtrack.module import load_module, load_target
+
+    return CalibrationJob(
+        load_target(target),
+        load_module(module) if module is not None else None,
+        lens_model,
+        load_limits(limits) if limits is not None else None,
+        "" if limits is None else str(limits),
+    )
+
+
+def _print_calibration(done: "Calibrated") -> None:
+    from hybridtrack.report.calibration_page import calibration_table
+    from hybridtrack.report.repeatability_page import limits_table
+
+    print_table(calibration_table(done.result), f"{done.result.module.name}, calibrated from {done.path}")
+    if done.checks:
+        print_table(limits_table(done.checks), "Limits")
+    print_findings(done.result.module.findings or [])
+
+
+def _with_progress(recording: Path, job: "CalibrationJob", which: str = "") -> "Calibrated":
+    from hybridtrack.cli.calibration_output import calibrate_file
+
+    with shown_progress() as progress:
+        return calibrate_file(
+            recording, job, lambda stage, fraction: progress(f"{which}: {stage}" if which else stage, fraction)
+        )
+
+
+def _require_different(recordings: list[Path]) -> None:
     from hybridtrack.recording import Recording
-    from hybridtrack.report.calibration_page import calibration_page, calibration_table
-    from hybridtrack.report.page import write_page
 
-    board = load_target(target)
-    with Recording.open(recording) as opened, shown_progress() as progress:
-        nominal = load_module(module) if module is not None else opened.module
-        if nominal is None:
-            raise OptionError(f"{recording}: names no module; --module with a nominal one is required")
-        result = calibrate(opened, board, nominal, CalibrationOptions(lens_model=lens_model), progress)
-    save_module(result.module, out / "calibrated.module.json")
-    write_json(out / "summary.json", summary(result))
-    write_page(calibration_page(result, str(recording)), out / "report.html")
-    print_table(calibration_table(result), f"{result.module.name}, calibrated")
-    print_findings(result.module.findings or [])
+    digests = []
+    for path in recordings:
+        with Recording.open(path) as opened:
+            digests.append(opened.digest())
+    if digests[0] == digests[1]:
+        raise OptionError(
+            f"calibrate: two recordings are required for repeatability, got one of the same content twice: "
+            f"{recordings[0]} and {recordings[1]}"
+        )
+
+
+def _calibrate_one(recording: Path, job: "CalibrationJob", out: Path) -> bool:
+    from hybridtrack.cli.calibration_output import write_calibration
+
+    done = _with_progress(recording, job)
+    write_calibration(done, job, out)
+    _print_calibration(done)
     report_written(out / "report.html")
+    return done.passed
+
+
+def _calibrate_two(recordings: list[Path], job: "CalibrationJob", out: Path) -> bool:
+    """The first one's files in `out`, with the comparison; the second one's in its folder `second`."""
+    from hybridtrack.calibration.repeatability import compare_calibrations, repeatability_summary
+    from hybridtrack.cli.calibration_output import write_calibration
+    from hybridtrack.report.repeatability_page import block_table, difference_table, repeatability_section
+
+    _require_different(recordings)
+    first, second = (
+        _with_progress(path, job, which) for path, which in zip(recordings, ("first", "second"), strict=True)
+    )
+    compared = compare_calibrations(first.result.module, second.result.module, first.result.blink.period_ns)
+    section = repeatability_section(compared, str(recordings[0]), str(recordings[1]))
+    more = {"repeatability": {"second": str(recordings[1]), **repeatability_summary(compared)}}
+    write_calibration(second, job, out / "second")
+    write_calibration(first, job, out, more, (section,))
+    for one in (first, second):
+        _print_calibration(one)
+    print_table(difference_table(compared), "Repeatability")
+    print_table(block_table(compared))
+    print_findings([section.text])
+    report_written(out / "report.html")
+    return compared.agrees and first.passed and second.passed
 
 
 def _calibrate_photos(
@@ -50,7 +113,8 @@ def _calibrate_photos(
 
 def calibrate_command(
     recording: Annotated[
-        Path | None, typer.Argument(help="Recording of the target (*.h5); none with --photos.")
+        list[Path] | None,
+        typer.Argument(help="Recording of the target (*.h5); two of one module to compare them; none with --photos."),
     ] = None,
     target: Annotated[Path | None, typer.Option(help="The blinking target (*.target.json).")] = None,
     module: Annotated[Path | None, typer.Option(help="Nominal module; else the one that the recording names.")] = None,
@@ -60,6 +124,12 @@ def calibrate_command(
     lens_model: Annotated[
         str | None, typer.Option(help="Lens model to use; else the one with the least held-out error.")
     ] = None,
+    limits: Annotated[
+        Path | None, typer.Option(help="Limits of a production line (TOML or JSON): pass or fail per number.")
+    ] = None,
+    batch: Annotated[
+        bool, typer.Option("--batch", help="Calibrate a lot: any number of recordings, or folders of them.")
+    ] = False,
     photos: Annotated[
         Path | None, typer.Option(help="Calibrate a lens alone, from a folder of board photographs.")
     ] = None,
@@ -71,17 +141,38 @@ def calibrate_command(
     The nominal module may have mirroring and clear site wrong, and no lens: they are found. Show the target in six or
     more still views, tilted up to 35 degrees and turned, some of them into the picture's corners.
 
+    Two recordings of one module are compared: differences of all numbers in deviations (exit code 1 if they disagree).
+    With --batch each recording is a module: percentiles, spread and outliers of each number; a refusal of one is said,
+    and the rest goes on.
+
+    --limits FILE holds one table for each number, named as in summary.json, with min, max and max_sigma (of its
+    deviation), all optional: [lens.fx] min = 820, max = 860, max_sigma = 0.5. guard_deviations = 2 at the top asks
+    values to stay that many deviations inside. Exit code 1 where a number fails. An unknown name is refused with the
+    list of all names.
+
     Example: hybridtrack calibrate board.h5 --target calib_targets/lamp_panel.target.json --module
     calib_targets/wren.module.json --out bench-1
     """
     if photos is not None:
-        if recording is not None:
-            raise OptionError("calibrate: a recording or --photos is required, got both")
+        if recording or limits is not None or batch:
+            raise OptionError("calibrate: recordings (with --limits, --batch) or --photos are required, got both")
         _calibrate_photos(photos, corners, square_mm, out, module, lens_model)
         return
-    if recording is None or target is None:
+    if not recording or target is None:
         raise OptionError("calibrate: a recording and --target are required (or --photos), got too little")
-    _calibrate_recording(recording, target, module, out, lens_model)
+    if len(recording) > 2 and not batch:
+        raise OptionError(f"calibrate: one recording, two to compare, or --batch is required, got {len(recording)}")
+    job = _job(target, module, lens_model, limits)
+    if batch:
+        from hybridtrack.cli.calibrate_batch import calibrate_lot
+
+        passed = calibrate_lot(recording, job, out)
+    elif len(recording) == 2:
+        passed = _calibrate_two(recording, job, out)
+    else:
+        passed = _calibrate_one(recording[0], job, out)
+    if not passed:
+        sys.exit(1)
 
 
 calibrate_command.__doc__ = f"{calibrate_command.__doc__}\n\n    Caution: {BLINK_CAUTION}"

@@ -139,8 +139,8 @@ def calibration_figures(result: CalibrationResult) -> tuple[Figure, ...]:
     return tuple(figure for figure in figures if figure is not None)
 
 
-def calibration_page(result: CalibrationResult, recording: str) -> Page:
-    """Build the page of one calibration."""
+def calibration_page(result: CalibrationResult, recording: str, sections: tuple[Section, ...] = ()) -> Page:
+    """Build the page of one calibration; `sections` (limits, repeatability) come before the numbers."""
     used = sum(view.board is not None for view in result.views)
     return Page(
         title=f"{result.module.name or 'Module'}, calibrated",
@@ -153,6 +153,7 @@ def calibration_page(result: CalibrationResult, recording: str) -> Page:
         findings=tuple(result.module.findings or ()),
         cautions=(BLINK_CAUTION,),
         sections=(
+            *sections,
             Section("Numbers", "Each with its standard deviation; what was held or could not be told says so.",
                     (calibration_table(result),)),
             Section("What they rest on", figures=calibration_figures(result)),
