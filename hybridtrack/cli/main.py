@@ -14,6 +14,7 @@ import typer
 from hybridtrack.cli.bench_command import bench_app
 from hybridtrack.cli.calibrate_command import calibrate_command
 from hybridtrack.cli.demo_command import demo_command
+from hybridtrack.cli.guide_command import guide_command
 from hybridtrack.cli.ingest_command import ingest_command
 from hybridtrack.cli.inspect_command import inspect_command
 from hybridtrack.cli.odometry_command import odometry_command
@@ -37,6 +38,7 @@ app = typer.Typer(
 app.command("target")(target_command)
 app.command("ingest")(ingest_command)
 app.command("inspect")(inspect_command)
+app.command("guide")(guide_command)
 app.command("calibrate")(calibrate_command)
 app.command("track")(track_command)
 app.command("odometry")(odometry_command)

@@ -23,13 +23,16 @@ LAYOUT = "hybridtrack-recording"
 EVENT_COLUMNS = {"t": "i", "x": "u", "y": "u", "on": "u"}
 
 
-def open_checked(path: Path | str) -> h5py.File:
-    """Open an HDF5 file and check `format` and `version`. Raises MissingFileError or FileFormatError."""
+def open_checked(path: Path | str, growing: bool = False) -> h5py.File:
+    """Open an HDF5 file and check `format` and `version`; `growing` lets another process append to it meanwhile.
+
+    Raises MissingFileError or FileFormatError.
+    """
     file = Path(path)
     if not file.is_file():
         raise MissingFileError(f"{file}: expected a recording (HDF5), found no such file")
     try:
-        handle = h5py.File(file, "r")
+        handle = h5py.File(file, "r", swmr=growing)
     except OSError as error:
         reason = str(error).split("(")[-1].rstrip(")")
         raise FileFormatError(
@@ -52,19 +55,24 @@ def open_checked(path: Path | str) -> h5py.File:
 class Recording:
     """A recording, open for reading. Use as a context manager, or call `close`."""
 
-    def __init__(self, handle: h5py.File, path: Path) -> None:
+    def __init__(self, handle: h5py.File, path: Path, growing: bool = False) -> None:
         self._handle = handle
         self.path = path
+        self.growing = growing
         self._element = lru_cache(maxsize=4096)(self._read_stamp)
         self.event_count = self._check_columns("events", EVENT_COLUMNS)
         self.frames = self._frame_table()
 
     @classmethod
-    def open(cls, path: Path | str) -> "Recording":
-        """Open and check a recording. Raises MissingFileError or FileFormatError with the field at fault."""
-        handle = open_checked(path)
+    def open(cls, path: Path | str, growing: bool = False) -> "Recording":
+        """Open and check a recording. Raises MissingFileError or FileFormatError with the field at fault.
+
+        `growing` opens what another process still appends to (HDF5's single writer, multiple readers), as long as it
+        was when opened: columns that the writer has not brought to one length yet are cut to the shortest.
+        """
+        handle = open_checked(path, growing)
         try:
-            return cls(handle, Path(path))
+            return cls(handle, Path(path), growing)
         except BaseException:
             handle.close()
             raise
@@ -98,9 +106,9 @@ class Recording:
             if data.dtype.kind not in allowed and not (kind == "f" and data.dtype.kind in "iu"):
                 raise self._refuse(f"/{group}/{name} must be {'float' if kind == 'f' else 'integer'}, got {data.dtype}")
             lengths[name] = len(data)
-        if len(set(lengths.values())) > 1:
+        if len(set(lengths.values())) > 1 and not self.growing:
             raise self._refuse(f"columns of /{group} must have one length, got {lengths}")
-        return next(iter(lengths.values()))
+        return min(lengths.values())
 
     def _frame_table(self) -> FrameTable:
         if "frames" not in self._handle:
@@ -122,9 +130,9 @@ class Recording:
                 "/frames/image must be uint8 or uint16 of shape (N, H, W) or (N, H, W, 3), "
                 f"got {image.dtype} {image.shape}"
             )
-        if len(image) != count:
+        if len(image) != count and not self.growing:
             raise self._refuse(f"/frames/image has {len(image)} pictures, but /frames/t_start has {count} stamps")
-        read = {name: self._handle[f"frames/{name}"][:] for name in columns}
+        read = {name: self._handle[f"frames/{name}"][: min(count, len(image))] for name in columns}
         return FrameTable(
             read["t_start"].astype(np.int64),
             read["exposure"].astype(np.int64),
