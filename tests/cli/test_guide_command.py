@@ -74,5 +74,7 @@ def test_refusals(bench: Path, tmp_path: Path) -> None:
     assert_refused(
         run("guide", tmp_path / "none", *target, "--once"), "a folder or a recording is required, found neither"
     )
+    (tmp_path / "a.txt").write_text("no recording")
+    assert_refused(run("guide", tmp_path / "a.txt", *target, "--once"), "expected an HDF5 recording")
     assert_refused(run("guide", tmp_path, *target, "--once"), "--module with a nominal module is required")
     assert_refused(run("guide", tmp_path, *target, "--every-s", 0), "0.1 to 600 is required, got 0")
