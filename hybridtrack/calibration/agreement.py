@@ -42,8 +42,13 @@ def frame_positions(nominal: HybridModule, mirror_x: bool, mirror_y: bool) -> Ar
     return np.stack([xy[..., 1], xy[..., 0]])
 
 
-def compare_pictures(swings: list[Array], amplitudes: list[Array], nominal: HybridModule) -> Agreement:
-    """Compare the swing of frames (Hf, Wf), DN, with event amplitudes (rows, columns), all views at once."""
+def compare_pictures(
+    swings: list[Array], amplitudes: list[Array], nominal: HybridModule, signed: bool = True
+) -> Agreement:
+    """Compare the swing of frames (Hf, Wf), DN, with event amplitudes (rows, columns), all views at once.
+
+    Where the sign of neither is known (`signed` False, pictures of how much changes), only agreement counts.
+    """
     pitch = 0.5 * (nominal.cluster.width + nominal.cluster.height) / nominal.frame_mode.binning
     frames = [normalised(swing, max(pitch, 0.7)) for swing in swings]
     events = [normalised(amplitude, 1.0) for amplitude in amplitudes]
@@ -59,4 +64,4 @@ def compare_pictures(swings: list[Array], amplitudes: list[Array], nominal: Hybr
                 event_power += float(np.sum(event**2))
             scale = np.sqrt(frame_power * event_power)
             results.append(Agreement(mirror_x, mirror_y, float(cross / scale) if scale > 0 else 0.0))
-    return max(results, key=lambda result: abs(result.correlation))
+    return max(results, key=lambda result: abs(result.correlation) if signed else result.correlation)

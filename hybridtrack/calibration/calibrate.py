@@ -17,19 +17,19 @@ from hybridtrack.calibration.blink import Blink, find_blink
 from hybridtrack.calibration.contrast import StepCounts, ThresholdFit, fit_thresholds
 from hybridtrack.calibration.defects import find_defects, quiet_counts
 from hybridtrack.calibration.event_light import EventSteps, event_steps
-from hybridtrack.calibration.first_fire import FirstFire, at_mean_first_event, measure_first_fire
-from hybridtrack.calibration.frame_views import FrameSettings, FrameViews, fit_frames
-from hybridtrack.calibration.geometry_fit import fit_geometry
+from hybridtrack.calibration.first_fire import FirstFire
+from hybridtrack.calibration.frame_views import FrameSettings, FrameViews
 from hybridtrack.calibration.intervals import shortest_interval_ns
 from hybridtrack.calibration.joint import join_blocks
 from hybridtrack.calibration.kernels import OFF_BRIGHT, OFF_DARK, ON_BRIGHT, ON_DARK
-from hybridtrack.calibration.onset import OnsetFit, fit_onsets
+from hybridtrack.calibration.light_and_place import geometry_module, measure_light_and_place
+from hybridtrack.calibration.onset import OnsetFit
 from hybridtrack.calibration.settling import Settling, measure_settling
 from hybridtrack.calibration.timing_result import TimingResult, timing_result
 from hybridtrack.calibration.view_data import BoardCorners, EventMapFit, LensFit, ViewImages
-from hybridtrack.calibration.views import View, ViewFold, ViewOptions, find_views, fold_view
+from hybridtrack.calibration.views import ViewFold, ViewOptions, find_views
 from hybridtrack.errors import DegenerateDataError, ModuleMismatchError
-from hybridtrack.module import Contrast, Defects, HybridModule, Target, lens_parameters
+from hybridtrack.module import Contrast, Defects, HybridModule, Target
 from hybridtrack.recording import Recording
 
 Array = np.ndarray
@@ -100,36 +100,6 @@ def require_common_time(recording: Recording) -> None:
         )
 
 
-def images_of_views(
-    views: list[View], folds: list[ViewFold], frames: FrameViews
-) -> tuple[list[ViewImages], list[ViewFold]]:
-    """Pictures and folds of the views whose frames could be demodulated."""
-    images, kept = [], []
-    for k, (view, fold, picture) in enumerate(zip(views, folds, frames.demodulated, strict=True)):
-        if picture is None:
-            continue
-        images.append(
-            ViewImages(
-                k,
-                view.t0_ns,
-                view.t1_ns,
-                frames.frames[k],
-                picture.bright_dn,
-                picture.dark_dn,
-                picture.bright_sigma_dn,
-                picture.dark_sigma_dn,
-                fold.on_count(),
-                fold.off_count(),
-                fold.amplitude(),
-                fold.snr(),
-                fold.cycles,
-                view.sway_px,
-            )
-        )
-        kept.append(fold)
-    return images, kept
-
-
 def step_counts(folds: list[ViewFold], steps: list[EventSteps], share: float, healthy: Array) -> StepCounts:
     """Observations of all `healthy` (rows, columns) pixels of set A and B that saw a step, `share` of which they
     felt.
@@ -162,23 +132,6 @@ def contrast_block(fit: ThresholdFit, refractory_ns: float | None) -> Contrast:
         off_spread=fit.off_spread,
         noise_width=None,
         refractory_ns=refractory_ns,
-    )
-
-
-def geometry_module(nominal: HybridModule, lens_fit: LensFit, map_fit: EventMapFit) -> HybridModule:
-    """The nominal module with lens, map, mirroring and clear site as found."""
-    grid = nominal.event_grid.model_copy(update={"mirror_x": map_fit.mirror_x, "mirror_y": map_fit.mirror_y})
-    cluster = nominal.cluster
-    if cluster.clear_site != map_fit.clear_site:
-        # The filter pattern names the place of the clear pixel, and no longer holds.
-        cluster = cluster.model_copy(update={"clear_site": map_fit.clear_site, "filters": None})
-    return nominal.model_copy(
-        update={
-            "event_grid": grid,
-            "cluster": cluster,
-            "lens": lens_parameters(lens_fit.lens),
-            "colour_from_event": map_fit.colour_from_event,
-        }
     )
 
 
@@ -219,27 +172,22 @@ def calibrate(
     rough = find_blink(recording, shape, target)
     tell("views", 0.08)
     views, findings = find_views(recording, rough, shape, options.views)
-    tell("flips", 0.16)
-    folds = [fold_view(recording, view, rough, shape) for view in views]
-    onset = fit_onsets(recording, rough, views, folds)
-    first_fire = measure_first_fire(recording, views, folds, onset)
-    onset = at_mean_first_event(onset, first_fire)
-    blink = onset.blink
-    folds = [fold_view(recording, view, blink, shape) for view in views]
-    findings += blink_findings(blink, target)
-
-    tell("frames", 0.25)
-    settings = FrameSettings(nominal, target, blink, int(recording.frames.t_start_ns.mean()))
-    frames = fit_frames(settings, recording, views, [fold.amplitude() for fold in folds])
-    images, folds = images_of_views(views, folds, frames)
-    timing = timing_result(frames.clocks, onset, nominal.frame_mode, target, settings.nominal_offset_ns)
-    findings += frames.findings + timing.findings
-
-    geometry = fit_geometry(
-        images, target, nominal, options.lens_model, lambda stage, fraction: tell(stage, 0.45 + 0.4 * fraction)
+    measured = measure_light_and_place(
+        recording,
+        views,
+        rough,
+        target,
+        nominal,
+        options.lens_model,
+        lambda stage, part: tell(stage, 0.16 + 0.69 * part),
+    )
+    onset, frames, geometry = measured.flips.onset, measured.frames, measured.geometry
+    blink, images, folds = onset.blink, measured.images, measured.folds
+    timing = timing_result(
+        frames.clocks, onset, nominal.frame_mode, target, measured.settings.nominal_offset_ns, measured.scanout_s
     )
     lens_fit, map_fit = geometry.lens_fit, geometry.map_fit
-    findings += geometry.findings
+    findings += blink_findings(blink, target) + frames.findings + timing.findings + geometry.findings
 
     tell("contrast", 0.85)
     module = geometry_module(nominal, lens_fit, map_fit)
@@ -256,7 +204,7 @@ def calibrate(
     ]
     placed = [(fold, view.steps) for fold, view in zip(folds, shown, strict=True) if view.steps is not None]
     placed_folds, placed_steps = [fold for fold, _ in placed], [step for _, step in placed]
-    kept_views = [views[image.index] for image in images]
+    recording, kept_views = measured.recording, measured.kept_views
     settling = measure_settling(recording, kept_views, folds, blink)
     quiet = quiet_counts(recording, kept_views, folds, blink, shape)
     defects, defect_findings = find_defects(quiet, placed_folds, placed_steps)
@@ -287,9 +235,9 @@ def calibrate(
         shown,
         blink,
         onset,
-        first_fire,
+        measured.flips.first_fire,
         frames,
-        settings,
+        measured.settings,
         lens_fit,
         map_fit,
         timing,

@@ -23,13 +23,13 @@ from hybridtrack.errors import DegenerateDataError
 
 Array = np.ndarray
 
-PARAMETERS = ("offset_ns", "line_time_ns", "exposure_correction_ns", "drift", "duty")
+PARAMETERS = ("offset_ns", "line_time_ns", "exposure_correction_ns", "drift", "duty", "sweep")
 
 
 @dataclass(frozen=True)
 class Clocks:
     """Offset at `drift_epoch_ns`, line time (negative: rows are read the other way), correction, drift (ns per ns),
-    duty.
+    duty; `sweep`: relative excess of a screen's sweep over the rows' delays.
     """
 
     offset_ns: float = 0.0
@@ -37,6 +37,7 @@ class Clocks:
     exposure_correction_ns: float = 0.0
     drift: float = 0.0
     duty: float = 0.5
+    sweep: float = 0.0
 
     @property
     def values(self) -> Array:
@@ -85,6 +86,8 @@ class ClockModel:
         start_ns = (
             rows.stamp_ns + clocks.offset_ns + clocks.drift * from_epoch + rows.order[:, None] * clocks.line_time_ns
         )
+        # A screen that flips later here is exposed as one that flips at once and is exposed earlier.
+        start_ns = start_ns - (1.0 + clocks.sweep) * rows.delay_ns[:, None]
         length_ns = np.maximum(rows.exposure_ns + clocks.exposure_correction_ns, 1000.0)
         rate = self.blink.hz * 1e-9
         # The blink's phase counts from where light is half way up, the waveform from where it begins to rise.
@@ -112,6 +115,7 @@ class ClockModel:
             "exposure_correction_ns": by_length * rate,
             "drift": by_start * rate * from_epoch,
             "duty": by_duty,
+            "sweep": -by_start * rate * self.rows.delay_ns[:, None],
         }
         return np.array([slopes[name] for name in free])
 

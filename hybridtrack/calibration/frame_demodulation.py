@@ -9,7 +9,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from hybridtrack.calibration.demodulation_kernels import fit_row_lines
+from hybridtrack.calibration.demodulation_kernels import fit_row_lines, fit_swept_lines
 
 Array = np.ndarray
 
@@ -40,32 +40,67 @@ class FrameDemodulation:
 
 
 @dataclass(frozen=True)
-class RowLines:
+class SweptShares:
+    """Shares f that differ from pixel to pixel: `table` (N, H, Q), read at `level` (H, W), 0 to Q - 1."""
+
+    table: Array
+    level: Array
+
+    def of(self, frames: Array) -> "SweptShares":
+        """Those of the selected frames."""
+        return SweptShares(self.table[frames], self.level)
+
+
+@dataclass(frozen=True)
+class RowShares:
+    """Shares f (N, H) that all pixels of a row have in common."""
+
+    share: Array
+
+    def of(self, frames: Array) -> "RowShares":
+        """Those of the selected frames."""
+        return RowShares(self.share[frames])
+
+
+Shares = RowShares | SweptShares
+
+
+@dataclass(frozen=True)
+class PixelLines:
     """`dark` D and `swing` K (H, W), `variance` of a sample about its line (H, W), `frame_rms` (N,) of the residuals
-    of each frame, and the rows' inverse normal matrices `inverse` (H, 2, 2) for (D, K)."""
+    of each frame, `mean_share` and the lines' inverse normal matrices `inverse` (.., 2, 2) for (D, K), both a row
+    (H, 1) or a pixel (H, W)."""
 
     dark: Array
     swing: Array
     variance: Array
     frame_rms: Array
+    mean_share: Array
     inverse: Array
 
 
-def row_lines(light: Array, share: Array) -> RowLines:
-    """Fit D + f K to `light` (N, H, W) with `share` f (N, H); NaN where a row's shares are too alike."""
+def pixel_lines(light: Array, shares: Shares) -> PixelLines:
+    """Fit D + f K to `light` (N, H, W); NaN where shares are too alike."""
     count, height, width = light.shape
+    light = np.ascontiguousarray(light)
     dark, swing, square = (np.empty((height, width)) for _ in range(3))
     frame_square = np.empty((height, count))
-    share = np.ascontiguousarray(share, dtype=float)
-    fit_row_lines(np.ascontiguousarray(light), share, LEAST_SPREAD, dark, swing, square, frame_square)
-    mean, spread = share.mean(axis=0), np.maximum(share.var(axis=0), 1e-12)
-    inverse = np.empty((height, 2, 2))
-    inverse[:, 1, 1] = 1.0 / (spread * count)
-    inverse[:, 0, 1] = inverse[:, 1, 0] = -mean / (spread * count)
-    inverse[:, 0, 0] = 1.0 / count + mean**2 / (spread * count)
+    if isinstance(shares, RowShares):
+        share = np.ascontiguousarray(shares.share, dtype=float)
+        fit_row_lines(light, share, LEAST_SPREAD, dark, swing, square, frame_square)
+        mean, spread = share.mean(axis=0)[:, None], share.var(axis=0)[:, None]
+    else:
+        mean, spread = np.empty((height, width)), np.empty((height, width))
+        table = np.ascontiguousarray(shares.table, dtype=float)
+        fit_swept_lines(light, table, shares.level, LEAST_SPREAD, dark, swing, square, mean, spread, frame_square)
+    spread = np.maximum(spread, 1e-12)
+    inverse = np.empty((*mean.shape, 2, 2))
+    inverse[..., 1, 1] = 1.0 / (spread * count)
+    inverse[..., 0, 1] = inverse[..., 1, 0] = -mean / (spread * count)
+    inverse[..., 0, 0] = 1.0 / count + mean**2 / (spread * count)
     known = np.isfinite(frame_square).any(axis=1)
     frame_rms = np.sqrt(np.nanmean(frame_square[known], axis=0)) if np.any(known) else np.full(count, np.nan)
-    return RowLines(dark, swing, square / max(count - 2, 1), frame_rms, inverse)
+    return PixelLines(dark, swing, square / max(count - 2, 1), frame_rms, mean, inverse)
 
 
 def photon_transfer(mean: Array, variance: Array) -> tuple[float, float]:
@@ -90,28 +125,22 @@ def steady_frames(frame_rms: Array) -> Array:
     return frame_rms <= 2.0 * np.median(frame_rms) + 1e-9
 
 
-def demodulate_frames(light: Array, share: Array) -> FrameDemodulation:
-    """Demodulate a view's linear light (N, H, W), NaN where saturated, with the shares f (N, H)."""
+def demodulate_frames(light: Array, shares: Shares) -> FrameDemodulation:
+    """Demodulate a view's linear light (N, H, W), NaN where saturated, with the shares of its N frames."""
     kept = np.ones(len(light), bool)
-    lines = row_lines(light, share)
+    lines = pixel_lines(light, shares)
     for _ in range(2):
         steady = steady_frames(lines.frame_rms)
         if np.all(steady) or np.count_nonzero(steady) < 4:
             break
         kept[np.flatnonzero(kept)[~steady]] = False
-        lines = row_lines(light[kept], share[kept])
-    centre = lines.dark + share[kept].mean(axis=0)[:, None] * lines.swing
+        lines = pixel_lines(light[kept], shares.of(kept))
+    centre = lines.dark + lines.mean_share * lines.swing
     floor, slope = photon_transfer(centre, lines.variance)
     noise = np.sqrt(floor + slope * np.maximum(np.nan_to_num(centre), 0.0))
     inverse = lines.inverse
-    bright_factor = np.sqrt(inverse[:, 0, 0] + 2 * inverse[:, 0, 1] + inverse[:, 1, 1])
-    dark_factor = np.sqrt(inverse[:, 0, 0])
-    pictures = (
-        lines.dark + lines.swing,
-        lines.dark,
-        noise * bright_factor[:, None],
-        noise * dark_factor[:, None],
-        noise,
-    )
+    bright_factor = np.sqrt(inverse[..., 0, 0] + 2 * inverse[..., 0, 1] + inverse[..., 1, 1])
+    dark_factor = np.sqrt(inverse[..., 0, 0])
+    pictures = (lines.dark + lines.swing, lines.dark, noise * bright_factor, noise * dark_factor, noise)
     bright, dark, bright_sigma, dark_sigma, noise = (picture.astype(np.float32) for picture in pictures)
     return FrameDemodulation(bright, dark, bright_sigma, dark_sigma, noise, kept)

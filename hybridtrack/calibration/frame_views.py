@@ -12,11 +12,19 @@ import numpy as np
 from hybridtrack.calibration.agreement import Agreement, compare_pictures
 from hybridtrack.calibration.blink import Blink
 from hybridtrack.calibration.clocks import ClockFit, ClockModel, Clocks, fit_clocks, search
-from hybridtrack.calibration.frame_demodulation import FrameDemodulation, demodulate_frames
+from hybridtrack.calibration.frame_demodulation import (
+    FrameDemodulation,
+    RowShares,
+    Shares,
+    SweptShares,
+    demodulate_frames,
+)
 from hybridtrack.calibration.frame_light import view_light
 from hybridtrack.calibration.row_signals import (
     LEAST_FRAMES,
     RowSignals,
+    ViewSignals,
+    banded_row_signals,
     join_row_signals,
     singular_row_signals,
     weighted_row_signals,
@@ -31,6 +39,10 @@ Array = np.ndarray
 
 LEAST_EXPLAINED = 0.5
 LEAST_CORRELATION = 0.35
+DELAY_STEPS = 192
+FIRST_BAND_CYCLES = 1.0 / 20.0
+FIRST_ROWS = 3
+BAND_CYCLES = 1.0 / 128.0  # pixels of a row whose delay by a screen's sweep is alike are one signal for the clocks
 DRIFT_DEVIATION = 10e-6  # a drift is fitted where the data tell it to better than this
 
 
@@ -85,8 +97,10 @@ def frames_of_view(frames: FrameTable, view: View, offset_ns: float, readout_ns:
     return np.flatnonzero((start + first >= view.t0_ns) & (start + frames.exposure_ns + last <= view.t1_ns))
 
 
-def view_shares(settings: FrameSettings, clocks: Clocks, frames: FrameTable, chosen: Array) -> Array:
-    """Share f (N, H) of the chosen frames' rows."""
+def view_shares(
+    settings: FrameSettings, clocks: Clocks, frames: FrameTable, chosen: Array, delay_ns: Array | None = None
+) -> Shares:
+    """Shares of the chosen frames' rows, or pixels where a screen's sweep delays them by `delay_ns` (H, W)."""
     mode, blink = settings.nominal.frame_mode, settings.blink
     # Stamps may be large: differences are taken before they turn to floating point.
     stamp = (frames.t_start_ns[chosen] - settings.drift_epoch_ns).astype(float)[:, None]
@@ -98,7 +112,15 @@ def view_shares(settings: FrameSettings, clocks: Clocks, frames: FrameTable, cho
         + blink.epoch_phase
         + 0.5 * settings.edges[0]
     )
-    return bright_share(cycles, length * (blink.hz * 1e-9) + np.zeros_like(cycles), settings.waveform(clocks))
+    rate, wave = blink.hz * 1e-9, settings.waveform(clocks)
+    length = length * rate + np.zeros_like(cycles)
+    if delay_ns is None:
+        return RowShares(bright_share(cycles, length, wave))
+    first, last = float(delay_ns.min()), float(delay_ns.max())
+    step = max((last - first) / (DELAY_STEPS - 1), 1.0)
+    delays = (first + step * np.arange(DELAY_STEPS)) * rate
+    table = bright_share(cycles[..., None] - delays, np.broadcast_to(length[..., None], (*length.shape, 1)), wave)
+    return SweptShares(table, (delay_ns - first) / step)
 
 
 def candidate_line_times_ns(settings: FrameSettings, frames: FrameTable) -> Array:
@@ -122,7 +144,11 @@ def first_rows(settings: FrameSettings, recording: Recording, frames: list[Array
     for k, chosen in enumerate(frames):
         if len(chosen) >= LEAST_FRAMES:
             signal, deviation = singular_row_signals(view_light(recording, chosen, settings.nominal), signed)
-            parts.append((signal, deviation, table.t_start_ns[chosen], table.exposure_ns[chosen], k))
+            parts.append(
+                ViewSignals(
+                    signal, deviation, table.t_start_ns[chosen], table.exposure_ns[chosen], k, np.zeros(mode.height)
+                )
+            )
     if not parts:
         raise DegenerateDataError(
             f"a view needs at least {LEAST_FRAMES} frames that lie wholly within it; the longest of {len(frames)} "
@@ -138,13 +164,13 @@ def first_rows(settings: FrameSettings, recording: Recording, frames: list[Array
 
 
 def demodulate_view(
-    settings: FrameSettings, recording: Recording, clocks: Clocks, chosen: Array, light: Array | None = None
+    settings: FrameSettings, recording: Recording, clocks: Clocks, chosen: Array, delay_ns: Array | None = None
 ) -> FrameDemodulation | None:
     """Pictures of one view, or None where it has too few frames or their rows all see the same share."""
     if len(chosen) < LEAST_FRAMES:
         return None
-    light = view_light(recording, chosen, settings.nominal) if light is None else light
-    result = demodulate_frames(light, view_shares(settings, clocks, recording.frames, chosen))
+    light = view_light(recording, chosen, settings.nominal)
+    result = demodulate_frames(light, view_shares(settings, clocks, recording.frames, chosen, delay_ns))
     return result if np.mean(np.isfinite(result.bright_dn)) > 0.02 else None
 
 
@@ -187,11 +213,7 @@ def agree(settings: FrameSettings, demodulated: list[FrameDemodulation | None], 
 
 
 def second_rows(
-    settings: FrameSettings,
-    recording: Recording,
-    clocks: Clocks,
-    frames: list[Array],
-    demodulated: list[FrameDemodulation | None],
+    settings: FrameSettings, recording: Recording, frames: list[Array], demodulated: list[FrameDemodulation | None]
 ) -> RowSignals:
     """Row signals weighted by the demodulated pictures."""
     mode, table = settings.nominal.frame_mode, recording.frames
@@ -202,13 +224,67 @@ def second_rows(
             signal, deviation = weighted_row_signals(
                 view_light(recording, used, settings.nominal), picture.swing_dn, picture.noise_dn
             )
-            parts.append((signal, deviation, table.t_start_ns[used], table.exposure_ns[used], k))
+            times = table.t_start_ns[used], table.exposure_ns[used]
+            parts.append(ViewSignals(signal, deviation, *times, k, np.zeros(mode.height)))
     return join_row_signals(parts, mode.read_order(np.arange(mode.height)), int(table.t_start_ns[0]), True)
 
 
-def final_clocks(settings: FrameSettings, rows: RowSignals, clocks: Clocks) -> tuple[ClockFit, list[str]]:
+def banded_singular_signals(light: Array, delay: Array, width_ns: float) -> tuple[Array, Array, Array]:
+    """Signals (B * H, N) of every few rows by singular vectors, each band of delays (H, W) apart, with deviations and
+    mean delays (B * H,)."""
+    band, columns = np.floor(delay / width_ns), []
+    height = light.shape[1]
+    for number in np.unique(band):
+        inside = band == number
+        signal, deviation = np.zeros((height, len(light))), np.full(height, np.inf)
+        thin = np.flatnonzero(inside.any(axis=1))[::FIRST_ROWS]
+        part = np.where(inside[thin], light[:, thin], np.float32(np.nan))
+        signal[thin], deviation[thin] = singular_row_signals(part, signed=False)
+        mean_delay = np.sum(inside * delay, axis=1) / np.maximum(np.sum(inside, axis=1), 1)
+        columns.append((signal, deviation, mean_delay))
+    signals, deviations, delays = (np.concatenate(each) for each in zip(*columns, strict=True))
+    return signals, deviations, delays
+
+
+def swept_rows(
+    settings: FrameSettings,
+    recording: Recording,
+    frames: list[Array],
+    pictures: list[FrameDemodulation | None] | None,
+    delays_ns: list[Array | None],
+) -> RowSignals:
+    """Signals of the parts of rows that a screen's sweep delays alike, each with its pixels' mean delay.
+
+    Weighted by `pictures`, or by singular vectors where there are none yet.
+    """
+    mode, table = settings.nominal.frame_mode, recording.frames
+    parts = []
+    for k, (chosen, delay) in enumerate(zip(frames, delays_ns, strict=True)):
+        picture = None if pictures is None else pictures[k]
+        if delay is None or len(chosen) < LEAST_FRAMES or (picture is None and pictures is not None):
+            continue
+        light = view_light(recording, chosen, settings.nominal)
+        if picture is None:
+            lines = banded_singular_signals(light, delay, settings.blink.period_ns * FIRST_BAND_CYCLES)
+        else:
+            width_ns = settings.blink.period_ns * BAND_CYCLES
+            lines = banded_row_signals(light, picture.swing_dn, picture.noise_dn, delay, width_ns)
+        signal, deviation, mean_delay = lines
+        times = table.t_start_ns[chosen], table.exposure_ns[chosen]
+        parts.append(ViewSignals(signal, deviation, *times, k, mean_delay))
+    if not parts:
+        raise DegenerateDataError(f"a view needs at least {LEAST_FRAMES} frames that lie wholly within it; none has")
+    order = mode.read_order(np.arange(mode.height))
+    return join_row_signals(parts, order, int(table.t_start_ns[0]), pictures is not None)
+
+
+def final_clocks(
+    settings: FrameSettings, rows: RowSignals, clocks: Clocks, fit_sweep: bool = False
+) -> tuple[ClockFit, list[str]]:
     """Fit everything the rows tell, leaving out what they don't, each with a sentence."""
     free = ["offset_ns", "exposure_correction_ns", "duty", "drift"]
+    if fit_sweep:
+        free.insert(1, "sweep")
     if settings.nominal.frame_mode.shutter == "rolling":
         free.insert(1, "line_time_ns")
     model, findings = settings.model(rows), []
@@ -252,8 +328,46 @@ def fit_frames(settings: FrameSettings, recording: Recording, views: list[View],
         picture if np.array_equal(before, chosen) else demodulate_view(settings, recording, clocks, chosen)
         for picture, before, chosen in zip(demodulated, first_choice, frames, strict=True)
     ]
-    rows = second_rows(settings, recording, clocks, frames, demodulated)
+    rows = second_rows(settings, recording, frames, demodulated)
     fit, findings = final_clocks(settings, rows, clocks)
     demodulated = [demodulate_view(settings, recording, fit.clocks, chosen) for chosen in frames]
     used = [c if d is None else c[d.kept] for c, d in zip(frames, demodulated, strict=True)]
     return FrameViews(demodulated, used, fit, rows, agreement, findings)
+
+
+def fit_swept_frames(
+    settings: FrameSettings,
+    recording: Recording,
+    views: list[View],
+    amplitudes: list[Array],
+    delays_ns: list[Array | None],
+    fit_sweep: bool,
+) -> FrameViews:
+    """As `fit_frames`, for a screen whose flip is swept over the board: `delays_ns` (H, W) of each view's frame pixels,
+    None where unknown; `fit_sweep`: whether their common factor is fitted, too."""
+    frames = [frames_of_view(recording.frames, view, settings.nominal_offset_ns, 0.0) for view in views]
+    rows = swept_rows(settings, recording, frames, None, delays_ns)
+    model = settings.model(rows)
+    clocks = search(model, Clocks(duty=settings.target.duty), candidate_line_times_ns(settings, recording.frames))
+    free = ("offset_ns",) if settings.nominal.frame_mode.shutter == "global" else ("offset_ns", "line_time_ns")
+    clocks = fit_clocks(model, clocks, free, settings.nominal_offset_ns).clocks
+
+    def demodulated(clocks: Clocks) -> list[FrameDemodulation | None]:
+        longer = 1.0 + clocks.sweep
+        return [
+            None if delay is None else demodulate_view(settings, recording, clocks, chosen, longer * delay)
+            for chosen, delay in zip(frames, delays_ns, strict=True)
+        ]
+
+    pictures = demodulated(clocks)
+    agreement = agree(settings, pictures, amplitudes)
+    if agreement.correlation < 0:
+        clocks = swapped(clocks, settings.blink.period_ns)
+        pictures = [None if picture is None else picture.swapped() for picture in pictures]
+    readout_ns = clocks.line_time_ns * settings.nominal.frame_mode.height
+    frames = [frames_of_view(recording.frames, view, clocks.offset_ns, readout_ns) for view in views]
+    rows = swept_rows(settings, recording, frames, pictures, delays_ns)
+    fit, findings = final_clocks(settings, rows, clocks, fit_sweep)
+    pictures = demodulated(fit.clocks)
+    used = [c if d is None else c[d.kept] for c, d in zip(frames, pictures, strict=True)]
+    return FrameViews(pictures, used, fit, rows, agreement, findings)

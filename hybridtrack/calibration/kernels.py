@@ -41,6 +41,43 @@ def fold_events(
 
 
 @kernel
+def time_order(t: Array, bin_ns: int) -> Array:
+    """Order (N,) that sorts stamps `t` (N,) int64 which span not too many bins: a bucket sort, then each bucket by
+    insertion; linear where a bucket holds few."""
+    count = len(t)
+    order = np.empty(count, np.int64)
+    if count == 0:
+        return order
+    first = t.min()
+    start = np.zeros((t.max() - first) // bin_ns + 2, np.int64)
+    for k in range(count):
+        start[(t[k] - first) // bin_ns + 1] += 1
+    for b in range(1, len(start)):
+        start[b] += start[b - 1]
+    fill = start.copy()
+    for k in range(count):
+        b = (t[k] - first) // bin_ns
+        place = fill[b]
+        fill[b] += 1
+        while place > start[b] and t[order[place - 1]] > t[k]:
+            order[place] = order[place - 1]
+            place -= 1
+        order[place] = k
+    return order
+
+
+@kernel
+def fold_harmonic(
+    t: Array, x: Array, y: Array, on: Array, epoch_ns: int, epoch_phase: float, hz: float, out: Array
+) -> None:
+    """Add signed polarity times exp(-2 pi i phase) of each event to its pixel of `out` (rows, columns), complex."""
+    rate = hz * 1e-9
+    for k in range(len(t)):
+        turn = -2.0 * np.pi * ((t[k] - epoch_ns) * rate + epoch_phase)
+        out[y[k], x[k]] += (2.0 * on[k] - 1.0) * complex(np.cos(turn), np.sin(turn))
+
+
+@kernel
 def fold_phase(
     t: Array, x: Array, y: Array, on: Array, epoch_ns: int, epoch_phase: float, hz: float, selected: Array, out: Array
 ) -> None:

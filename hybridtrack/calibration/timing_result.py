@@ -10,6 +10,7 @@ from hybridtrack.module import FrameMode, Target, Timing
 
 Array = np.ndarray
 
+SWEPT_EXPOSURE_NS = 1000.0
 LATENCY_FINDING = "offset includes event latency"
 
 
@@ -27,7 +28,14 @@ class TimingResult:
 def transform(fit: ClockFit, height: int) -> tuple[dict[str, float], Array, tuple[str, ...]]:
     """Values, covariance and names in units of the file; a negative line time is turned into the other row order."""
     clocks, free = fit.clocks, fit.free
-    scale = {"offset_ns": 1.0, "line_time_ns": 1.0, "exposure_correction_ns": 1.0, "drift": 1e6, "duty": 1.0}
+    scale = {
+        "offset_ns": 1.0,
+        "line_time_ns": 1.0,
+        "exposure_correction_ns": 1.0,
+        "drift": 1e6,
+        "duty": 1.0,
+        "sweep": 1.0,
+    }
     turn = np.diag([scale[name] for name in free])
     values = {name: getattr(clocks, name) * scale[name] for name in scale}
     if clocks.line_time_ns < 0 and "line_time_ns" in free:
@@ -39,15 +47,32 @@ def transform(fit: ClockFit, height: int) -> tuple[dict[str, float], Array, tupl
     return values, turn @ fit.covariance @ turn.T, free
 
 
-def sweep_deviation_ns(target: Target) -> float:
-    """What the unknown place of the flip in a screen's sweep adds to the offset."""
-    return target.scanout_s * 1e9 / np.sqrt(12.0)
+def sweep_findings(target: Target, scanout_s: tuple[float, float]) -> list[str]:
+    """What the sweep of a screen means for the clocks."""
+    found, sigma = scanout_s
+    findings = [
+        f"the target is a screen whose picture is swept in {1e3 * found:.2f} +- {1e3 * sigma:.2f} ms: the sweep was "
+        "estimated with the clocks and is counted in"
+    ]
+    if abs(found - target.scanout_s) > max(4.0 * sigma, 0.05 * target.scanout_s):
+        findings.append(
+            f"the target file states a sweep of {1e3 * target.scanout_s:.2f} ms, which the recording contradicts"
+        )
+    return findings
 
 
 def timing_result(
-    fit: ClockFit, onset: OnsetFit, mode: FrameMode, target: Target, nominal_offset_ns: float
+    fit: ClockFit,
+    onset: OnsetFit,
+    mode: FrameMode,
+    target: Target,
+    nominal_offset_ns: float,
+    scanout_s: tuple[float, float] | None = None,
 ) -> TimingResult:
-    """Timing block, joint covariance of its parameters, and findings."""
+    """Timing block, joint covariance of its parameters, and findings.
+
+    `scanout_s`: how long a screen's sweep was found to take, with its deviation; it is counted in already.
+    """
     values, covariance, free = transform(fit, mode.height)
     findings = [LATENCY_FINDING]
     row_order = mode.row_order
@@ -69,15 +94,16 @@ def timing_result(
     apart_ns = fit.drift_epoch_ns + values["offset_ns"] - onset.centre_ns
     phase = np.array([1.0, apart_ns])
     covariance[offset, offset] += phase @ onset.covariance @ phase
-    covariance[offset, offset] += onset.systematic_ns**2 + sweep_deviation_ns(target) ** 2
+    covariance[offset, offset] += onset.systematic_ns**2
     if "drift" in free:
         drift = free.index("drift")
         covariance[drift, drift] += onset.covariance[1, 1] * 1e12
-    if target.scanout_s > 0:
-        findings.append(
-            f"the target is a screen that sweeps over {target.scanout_s * 1e3:.1f} ms: clock figures carry that as "
-            "deviation"
-        )
+    if scanout_s is not None:
+        if "exposure_correction_ns" in free:
+            exposure = free.index("exposure_correction_ns")
+            # Pixels of a row within one band of the sweep are given one mean delay.
+            covariance[exposure, exposure] += SWEPT_EXPOSURE_NS**2
+        findings += sweep_findings(target, scanout_s)
     names = {
         "offset_ns": "frame_offset_ns",
         "line_time_ns": "line_time_ns",

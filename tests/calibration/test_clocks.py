@@ -1,5 +1,7 @@
 """The clock model on row signals made by its own formula, and by noise: exact, honest, refused."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -18,6 +20,7 @@ from hybridtrack.calibration.row_signals import RowSignals
 from hybridtrack.errors import DegenerateDataError
 
 BLINK = Blink(61.0, 1e-5, 0, 0.3, 0.5)
+AT_ONCE = PARAMETERS[:-1]  # no sweep
 TRUE = Clocks(1.3e6, 18e3, 4e4, 8e-6, 0.48)
 
 
@@ -36,6 +39,7 @@ def blank_rows(views=5, rows=60, frames=24, exposure_ns=4e6, frame_hz=60.0, sign
         order,
         order.astype(int),
         np.repeat(np.arange(views), rows),
+        np.zeros(len(order)),
         signed,
     )
 
@@ -55,6 +59,7 @@ def with_signal(rows, clocks, noise, seed):
         rows.order,
         rows.row,
         rows.view,
+        rows.delay_ns,
         rows.signed,
     )
 
@@ -67,7 +72,7 @@ def model_of(rows):
 def test_exact_signals_give_exact_clocks():
     """Without noise all five parameters come out from a start a millisecond off."""
     rows = with_signal(blank_rows(), TRUE, 0.0, 1)
-    fit = fit_clocks(model_of(rows), Clocks(2.2e6, 16e3), PARAMETERS)
+    fit = fit_clocks(model_of(rows), Clocks(2.2e6, 16e3), AT_ONCE)
     assert fit.clocks.offset_ns == pytest.approx(TRUE.offset_ns, abs=1.0)
     assert fit.clocks.line_time_ns == pytest.approx(TRUE.line_time_ns, abs=0.01)
     assert fit.clocks.exposure_correction_ns == pytest.approx(TRUE.exposure_correction_ns, abs=1.0)
@@ -78,10 +83,11 @@ def test_exact_signals_give_exact_clocks():
 
 def test_jacobian_matches_differences():
     """The projected Jacobian (Kaufman's) equals differences of the projected residual at a fit without residual."""
-    rows = with_signal(blank_rows(views=2, rows=12), TRUE, 0.0, 2)
+    blank = blank_rows(views=2, rows=12)
+    rows = with_signal(replace(blank, delay_ns=np.linspace(0.0, 7e6, len(blank.row))), TRUE, 0.0, 2)
     model = model_of(rows)
     _, jacobian = projected_problem(model, TRUE, PARAMETERS)
-    for k, (name, step) in enumerate(zip(PARAMETERS, (200.0, 2.0, 200.0, 1e-8, 1e-5), strict=True)):
+    for k, (name, step) in enumerate(zip(PARAMETERS, (200.0, 2.0, 200.0, 1e-8, 1e-5, 1e-5), strict=True)):
         ahead, behind = (
             project(rows, model.shares(TRUE.moved((name,), np.array([s]))))[1] * rows.weight for s in (step, -step)
         )
@@ -105,8 +111,8 @@ def test_errors_match_their_covariance():
     nees, inside = [], 0
     for seed in range(60):
         rows = with_signal(blank_rows(), TRUE, 2.0, 100 + seed)
-        fit = fit_clocks(model_of(rows), Clocks(1.6e6, 18.5e3, 0.0, 0.0, 0.5), PARAMETERS)
-        error = fit.clocks.values - TRUE.values
+        fit = fit_clocks(model_of(rows), Clocks(1.6e6, 18.5e3, 0.0, 0.0, 0.5), AT_ONCE)
+        error = (fit.clocks.values - TRUE.values)[: len(AT_ONCE)]
         value = float(error @ np.linalg.solve(fit.covariance, error)) / len(error)
         nees.append(value)
         inside += value * len(error) < 11.07  # chi-square, 5 degrees of freedom, 95 %
@@ -126,3 +132,18 @@ def test_nearest_offset_moves_by_whole_periods():
     assert nearest_offset(17e6, 16e6, 0.0) == pytest.approx(1e6)
     assert nearest_offset(-9e6, 16e6, 0.0) == pytest.approx(7e6)
     assert nearest_offset(1e6, 16e6, 30e6) == pytest.approx(33e6)
+
+
+def test_a_sweep_is_fitted_with_the_clocks():
+    """Rows that a screen's sweep delays, by more than the file says: line time and sweep are told apart where views
+    are turned against each other."""
+    rows = blank_rows()
+    delay_ns = np.where(rows.view % 2 == 0, 1.0, -1.0) * rows.order * 15e3 + 7e6
+    rows = replace(rows, delay_ns=delay_ns)
+    true = Clocks(-1.2e6, 18.1e3, 20e3, 0.0, 0.5, 0.04)
+    fit = fit_clocks(
+        model_of(with_signal(rows, true, 0.0, 3)),
+        replace(true, offset_ns=-1.3e6, sweep=0.0),
+        ("offset_ns", "line_time_ns", "exposure_correction_ns", "sweep"),
+    )
+    np.testing.assert_allclose(fit.clocks.values, true.values, rtol=1e-6, atol=1e-6)

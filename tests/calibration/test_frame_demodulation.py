@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from hybridtrack.calibration.frame_demodulation import demodulate_frames, photon_transfer
+from hybridtrack.calibration.frame_demodulation import RowShares, demodulate_frames, photon_transfer
 
 
 def frames_of(dark, swing, share, noise=0.0, seed=0):
@@ -21,7 +21,7 @@ def pictures(seed=1, shape=(20, 30)):
 def test_exact_frames_give_exact_pictures():
     """Without noise both pictures come back to the precision of the frames."""
     dark, swing, share = pictures()
-    result = demodulate_frames(frames_of(dark, swing, share), share)
+    result = demodulate_frames(frames_of(dark, swing, share), RowShares(share))
     assert result.dark_dn == pytest.approx(dark, abs=1e-3)
     assert result.swing_dn == pytest.approx(swing, abs=1e-3)
 
@@ -29,7 +29,7 @@ def test_exact_frames_give_exact_pictures():
 def test_errors_match_their_deviations():
     """Normalised errors of both pictures have unit variance under constant noise."""
     dark, swing, share = pictures(2, (60, 80))
-    result = demodulate_frames(frames_of(dark, swing, share, 2.0, 3), share)
+    result = demodulate_frames(frames_of(dark, swing, share, 2.0, 3), RowShares(share))
     for error, sigma in (
         (result.dark_dn - dark, result.dark_sigma_dn),
         (result.bright_dn - dark - swing, result.bright_sigma_dn),
@@ -52,7 +52,7 @@ def test_a_frame_from_another_picture_is_dropped():
     dark, swing, share = pictures(5)
     light = frames_of(dark, swing, share, 0.5)
     light[7] = light[7][::-1]
-    result = demodulate_frames(light, share)
+    result = demodulate_frames(light, RowShares(share))
     assert not result.kept[7]
     assert np.count_nonzero(result.kept) == 11
     assert np.abs(result.dark_dn - dark).max() < 2.5
@@ -62,7 +62,7 @@ def test_rows_of_one_share_are_blank():
     """A row whose exposures all saw the same share is NaN, not a wild number."""
     dark, swing, share = pictures(6)
     share[:, 4] = 0.5
-    result = demodulate_frames(frames_of(dark, swing, share, 0.5), share)
+    result = demodulate_frames(frames_of(dark, swing, share, 0.5), RowShares(share))
     assert np.all(np.isnan(result.bright_dn[4]))
     assert np.all(np.isfinite(result.bright_dn[5]))
 
@@ -72,6 +72,6 @@ def test_saturated_samples_blank_their_pixel():
     dark, swing, share = pictures(7)
     light = frames_of(dark, swing, share, 0.5)
     light[3, 2, 2] = np.nan
-    result = demodulate_frames(light, share)
+    result = demodulate_frames(light, RowShares(share))
     assert np.isnan(result.bright_dn[2, 2])
     assert np.isfinite(result.bright_dn[2, 3])
