@@ -13,7 +13,7 @@ from hybridtrack.calibration.demodulation_kernels import fit_row_lines, fit_swep
 
 Array = np.ndarray
 
-LEAST_SPREAD = 0.02  # least variance of f over the frames for a row to be resolved
+LEAST_SPREAD = 0.0015  # least variance of f over the frames for a row to be resolved
 
 
 @dataclass(frozen=True)
