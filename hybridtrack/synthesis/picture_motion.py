@@ -83,6 +83,8 @@ def picture_motion(
     times = np.linspace(t0_ns, t1_ns, max(int(np.ceil((t1_ns - t0_ns) / _SPEED_STEP_NS)), 1) + 1)
     nearest = np.rint(np.interp(times, casts, np.arange(len(casts)))).astype(np.int64)
     speeds = point_speeds(lens, directions * distance[nearest][..., None], trajectory.twists(times))
-    median, upper, highest = np.nanquantile(speeds, [0.5, 0.9, 1.0], axis=1)
+    # Where the lens reaches all probes the plain quantile serves, many times faster.
+    quantile = np.nanquantile if np.isnan(speeds).any() else np.quantile
+    median, upper, highest = quantile(speeds, [0.5, 0.9, 1.0], axis=1)
     steps = 0.5 * (upper[1:] + upper[:-1]) * np.diff(times) * 1e-9
     return PictureMotion(times, median, upper, highest, np.concatenate([[0.0], np.cumsum(steps)]))

@@ -36,7 +36,7 @@ Array = np.ndarray
 
 # Motion on the colour array, in px, that a tile's list of surfaces allows for beyond the poses it was made at.
 LIST_MARGIN_PX = 4.0
-_TILE_PX, _GROUP_PX = (64, 32), 128
+_TILE_PX, _GROUP_PX = (32, 16), 128
 # Poses between two at which tiles are listed: at most half a pixel apart, they stay within the margin.
 _LIST_STRIDE = 12
 _MAPS_AT_ONCE = 200_000  # 22 MB
@@ -128,7 +128,8 @@ def pixel_rays(lens: Lens, positions: FloatArray, aperture: Aperture, channels: 
     rays[:, SOLID_ANGLE] = 3.0 * aperture.deviation_px**2 * px_area
     rays[:, MARGIN] = 0.5 * box_px * np.maximum(*(np.linalg.norm(step, axis=-1) for step in steps))
     rays[:, CHANNEL] = 0 if channels is None else channels
-    inside = np.flatnonzero(np.isfinite(rays).all(axis=-1))
+    reached = np.isfinite(rays).all(axis=-1)
+    inside = np.flatnonzero(reached)
     order, start, group_start = _tile_order(positions, inside)
     sorted_rays = rays[order]
     margin_rad = LIST_MARGIN_PX * float(np.sqrt(px_area[inside].max())) if len(inside) else 0.0
@@ -141,7 +142,7 @@ def pixel_rays(lens: Lens, positions: FloatArray, aperture: Aperture, channels: 
         _cones(sorted_rays, start, margin_rad),
         _cones(sorted_rays, group_start, margin_rad),
         np.searchsorted(group_start, start[:-1], side="right") - 1,
-        np.setdiff1d(np.arange(len(positions)), inside),
+        np.flatnonzero(~reached),
     )
 
 

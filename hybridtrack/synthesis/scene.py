@@ -24,8 +24,11 @@ _MOST_LEVELS = 16
 def halved(picture: Array) -> Array:
     """Average 2 x 2 texels, repeating the last row or column of an odd size, so that the scale is exactly one half."""
     height, width = picture.shape
-    padded = np.pad(picture, ((0, height % 2), (0, width % 2)), mode="edge")
-    return 0.25 * (padded[::2, ::2] + padded[1::2, ::2] + padded[::2, 1::2] + padded[1::2, 1::2])
+    if height % 2 or width % 2:
+        picture = np.pad(picture, ((0, height % 2), (0, width % 2)), mode="edge")
+    return np.asarray(
+        cv2.resize(picture, (picture.shape[1] // 2, picture.shape[0] // 2), interpolation=cv2.INTER_AREA), np.float32
+    )
 
 
 def pyramid(picture: Array) -> list[Array]:

@@ -55,8 +55,9 @@ def stroke(canvas: Array, points: Array, tone: float, width: int = 1) -> None:
 
 def dot(canvas: Array, centre: Array | list[float], radius: float, tone: float) -> None:
     """Fill a disc with smooth edges."""
-    size = int(radius * (1 << _SUBPIXEL_BITS))
-    cv2.circle(canvas, fixed_point(centre).tolist(), size, float(tone), -1, cv2.LINE_AA, _SUBPIXEL_BITS)
+    unit = 1 << _SUBPIXEL_BITS  # plain numbers: there are tens of thousands of dots
+    place = round(float(centre[0]) * unit), round(float(centre[1]) * unit)
+    cv2.circle(canvas, place, int(radius * unit), float(tone), -1, cv2.LINE_AA, _SUBPIXEL_BITS)
 
 
 def rectangle(canvas: Array, left: float, top: float, width: float, height: float, tone: float) -> None:
