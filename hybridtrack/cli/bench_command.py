@@ -73,3 +73,36 @@ def bench_odometry(
     chosen = list(range(first_seed, first_seed + seeds))
     sequences = example_folder("sequences")
     _finish("odometry", lambda progress: run_odometry_study(chosen, sequences, recipe, progress), out)
+
+
+@bench_app.command("tracking")
+def bench_tracking(
+    seeds: Seeds = 3,
+    first_seed: First = 1000,
+    speeds: Annotated[str, typer.Option(help="Peak picture speeds, colour px/s.")] = "500,1000,2000,4000,8000,16000",
+    oracle: Annotated[bool, typer.Option(help="Also follow sharp pictures at 1 kHz.")] = True,
+    out: Out = None,
+) -> None:
+    """Follow one path at rising speed with events, frames and both, beside a baseline and an oracle.
+
+    Exit code 1 where a limit fails.
+    """
+    from hybridtrack.benchmark.tracking_study import run_tracking_study
+    from hybridtrack.errors import OptionError
+    from hybridtrack.examples import example_folder
+    from hybridtrack.report.page import write_page
+    from hybridtrack.report.tracking_study_page import tracking_study_page
+
+    try:
+        chosen_speeds = [float(speed) for speed in speeds.split(",")]
+    except ValueError:
+        raise OptionError(f"speeds must be numbers with commas between them, got '{speeds}'") from None
+    chosen = list(range(first_seed, first_seed + seeds))
+
+    def run(progress: Callable[[str, float], None]) -> "Study":
+        result = run_tracking_study(chosen_speeds, chosen, example_folder("sequences"), oracle, progress)
+        if out is not None:
+            write_page(tracking_study_page(result), out / "report.html")
+        return result.study
+
+    _finish("tracking", run, out)
