@@ -22,6 +22,8 @@ from hybridtrack.tracking.feature_table import FORGOTTEN, HISTORY, STATE_SIZE, P
 Array = np.ndarray
 Record = Any  # one record of FEATURE or PIXEL, whose fields no type checker knows
 Table = np.recarray
+FEWEST_IN_FIELD = 8
+PUSH_TIME_S = 0.003  # over which the common acceleration is learned
 
 
 @kernel
@@ -245,6 +247,80 @@ def update(
 
 
 @kernel
+def velocity_field(table: Table, pace: Pace, field: Array) -> bool:
+    """Fit an affine field of velocities to the features: `field` (2, 3) of 1, and u and v about the picture's middle in
+    units of its width. Reweighted by Cauchy's function (Holland and Welsch 1977), so that strays count little. False
+    where there are too few."""
+    count, speed = 0, 0.0
+    for f in range(len(table)):
+        if table[f].active:
+            count += 1
+            speed += np.hypot(table[f].state[2], table[f].state[3])
+    if count < FEWEST_IN_FIELD:
+        return False
+    scale = pace.common_share * speed / count + pace.common_floor
+    normal, right, row = np.zeros((3, 3)), np.zeros((2, 3)), np.ones(3)
+    field[:] = 0.0
+    for iteration in range(6):
+        normal[:] = 0.0
+        right[:] = 0.0
+        for f in range(len(table)):
+            if not table[f].active:
+                continue
+            x, p = table[f].state, table[f].cov
+            row[1], row[2] = (x[0] - 0.5 * pace.width) / pace.width, (x[1] - 0.5 * pace.height) / pace.width
+            weight = 1.0 / (p[2, 2] + p[3, 3] + scale * scale)
+            if iteration > 0:
+                e_u, e_v = x[2], x[3]
+                for k in range(3):
+                    e_u -= field[0, k] * row[k]
+                    e_v -= field[1, k] * row[k]
+                weight /= 1.0 + (e_u * e_u + e_v * e_v) / (scale * scale)
+            for i in range(3):
+                right[0, i] += weight * row[i] * x[2]
+                right[1, i] += weight * row[i] * x[3]
+                for k in range(i + 1):
+                    normal[i, k] += weight * row[i] * row[k]
+        # A weak pull of the slopes to zero keeps few features from turning strays into a field.
+        for i in range(3):
+            normal[i, i] += 1e-12 if i == 0 else 0.02 * normal[0, 0]
+            for k in range(i):
+                normal[k, i] = normal[i, k]
+        factorise(normal)
+        for axis in range(2):
+            for k in range(3):
+                field[axis, k] = right[axis, k]
+            substitute(normal, field[axis])
+    return True
+
+
+@kernel
+def pull_velocity(feature: Record, field: Array, dt_s: float, pace: Pace) -> None:
+    """Kalman update of a feature's velocity by the common field, as far as one tick's share of it is news."""
+    x, p, gain = feature.state, feature.cov, feature.step
+    u, v = (x[0] - 0.5 * pace.width) / pace.width, (x[1] - 0.5 * pace.height) / pace.width
+    mean_u = field[0, 0] + field[0, 1] * u + field[0, 2] * v
+    mean_v = field[1, 0] + field[1, 1] * u + field[1, 2] * v
+    sigma = pace.common_share * np.hypot(mean_u, mean_v) + pace.common_floor
+    variance = sigma * sigma * max(1.0, pace.common_time_s / dt_s)
+    for axis in range(2):
+        c = 2 + axis
+        error = (mean_u if axis == 0 else mean_v) - x[c]
+        # A feature that moves by itself is believed in the end: its pull is bounded.
+        total = p[c, c] + variance * max(1.0, abs(error) / (2.0 * sigma))
+        for i in range(STATE_SIZE):
+            gain[i] = p[i, c] / total
+        for i in range(STATE_SIZE):
+            x[i] += gain[i] * error
+        for i in range(STATE_SIZE):
+            for k in range(STATE_SIZE):
+                feature.h[i, k] = p[c, k]
+        for i in range(STATE_SIZE):
+            for k in range(STATE_SIZE):
+                p[i, k] -= gain[i] * feature.h[i, k]
+
+
+@kernel
 def remember(feature: Record, pace: Pace) -> None:
     """Write the state into the ring of past states, no closer than `history_ns`."""
     slot = feature.history_next
@@ -324,6 +400,7 @@ def advance(
     work: Array,
     pace: Pace,
     clock: Array,
+    push: Array,
     out_slot: Array,
     out_ns: Array,
     out: Array,
@@ -331,12 +408,13 @@ def advance(
     """Run over events (N,) and bring features up to `until_ns`, tick by tick.
 
     `levels` (rows, columns) of PIXEL, `table` (M,) of FEATURE, `work` their templates. `clock` int64 (2,) holds the
-    next tick and the time between ticks, which is chosen anew every `base_ns`. At multiples of `output_ns` each
+    next tick and the time between ticks, which is chosen anew every `base_ns`. `push` (2,) is the acceleration that
+    features have in common, frame px/s^2, learned as it goes. At multiples of `output_ns` each
     feature's slot, time and row (u, v, cov uu, uv, vv) go to the `out` arrays, and one that has left the picture is no
     longer active. Returns how many rows were written and how many events were used.
     """
     written, used, k, count = 0, 0, 0, len(t)
-    jac, sampled = np.zeros(STATE_SIZE), np.zeros(3)
+    jac, sampled, field = np.zeros(STATE_SIZE), np.zeros(3), np.zeros((2, 3))
     while True:
         now = clock[0]
         while k < count and t[k] <= now:
@@ -347,12 +425,24 @@ def advance(
             k += 1
         if now >= until_ns:
             return written, used
+        in_common = pace.measuring != 0 and velocity_field(table, pace, field)
+        before_u, before_v, tick_s = field[0, 0], field[1, 0], 0.0
         for f in range(len(table)):
             feature = table[f]
             if not feature.active or feature.t_ns >= now:
                 continue
             since = feature.t_ns
+            if in_common:
+                tick_s = (now - since) * 1e-9
+                feature.recent_speed = max(
+                    feature.recent_speed, 0.5 * np.hypot(push[0], push[1]) / pace.acceleration_share
+                )
             predict(feature, now, pace)
+            if in_common:
+                feature.state[2] += push[0] * tick_s
+                feature.state[3] += push[1] * tick_s
+                field[0, 0], field[1, 0] = before_u + push[0] * tick_s, before_v + push[1] * tick_s
+                pull_velocity(feature, field, tick_s, pace)
             if pace.measuring:
                 update(feature, work[f], levels, since, pace, jac, sampled)
             remember(feature, pace)
@@ -362,6 +452,10 @@ def advance(
                 written += 1
                 if not in_picture(feature, pace):
                     feature.active = 0  # that line was its last
+        if in_common and tick_s > 0.0 and velocity_field(table, pace, field):
+            share = min(0.5, tick_s / PUSH_TIME_S)
+            push[0] += share * ((field[0, 0] - before_u) / tick_s - push[0])
+            push[1] += share * ((field[1, 0] - before_v) / tick_s - push[1])
         if now % pace.base_ns == 0:
             clock[1] = suitable_tick(table, pace)
         clock[0] = min(now + clock[1], (now // pace.base_ns + 1) * pace.base_ns)

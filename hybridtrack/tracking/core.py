@@ -11,6 +11,9 @@ from hybridtrack.tracking.track_state import ALIVE, LEFT_PICTURE, OUT_OF_VIEW
 from hybridtrack.tracking.tracks_file import Tracks
 
 Array = np.ndarray
+# Stated covariances over the filters' own: errors have heavier tails than noise gives, for corners lie on outlines too,
+# where two depths meet. Measured on tuning rides at 700 and 2100 px/s so that the 95 % ellipse holds about nine in ten.
+HEAVY_TAILS = {"hybrid": 2.4, "frames": 4.0, "events": 2.0}
 LONGEST_EXPOSURE_NS = 40_000_000  # over which past states are kept at full density
 
 
@@ -85,7 +88,7 @@ class Core:
             self.slots.id[slot],
             np.asarray(t_ns, np.int64),
             self.mode.colour_from_frame(uv),
-            (np.asarray(cov) * self.mode.binning**2).astype(np.float32),
+            (np.asarray(cov) * (HEAVY_TAILS[self.options.mode] * self.mode.binning**2)).astype(np.float32),
             state.astype(np.uint8),
             reason.astype(np.uint8),
             np.full(len(slot), source, np.uint8),
@@ -152,6 +155,9 @@ def new_pace(module: HybridModule, options: TrackerOptions, radius: float) -> Pa
         surprise=9.0,
         lag_ns=0,
         measuring=0,
+        common_share=0.10,
+        common_floor=40.0,
+        common_time_s=0.01,
     )
 
 

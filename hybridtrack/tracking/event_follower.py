@@ -10,6 +10,7 @@ from hybridtrack.tracking.core import Core
 from hybridtrack.tracking.event_buffer import EventBuffer
 from hybridtrack.tracking.event_gaps import EventGaps
 from hybridtrack.tracking.event_lag import EventLag
+from hybridtrack.tracking.event_motion import CommonMotion, common_motion
 from hybridtrack.tracking.light_levels import FrameClock, SharpPictures, new_levels
 from hybridtrack.tracking.log_light import LogLight
 from hybridtrack.tracking.tracks_file import Tracks
@@ -35,6 +36,7 @@ class EventFollower:
         self._ramp_ns = LONGEST_RAMP_NS
         self._now_ns: int | None = None
         self._clock = np.zeros(2, np.int64)
+        self._push = np.zeros(2)
 
     @property
     def theta(self) -> float:
@@ -105,6 +107,7 @@ class EventFollower:
             core.features.work,
             pace,
             self._clock,
+            self._push,
             slot,
             when,
             rows,
@@ -129,6 +132,11 @@ class EventFollower:
         if self._gaps.overlaps(*clock.span_ns):
             bracket = np.zeros_like(bracket)
         return bracket, last
+
+    def common_motion(self, clock: FrameClock, at_ns: int) -> CommonMotion | None:
+        """The picture's velocity about an instant near a frame's exposure, by its events."""
+        cell_px = 1.0 / max(abs(self._core.pace.x_u), abs(self._core.pace.x_v))
+        return common_motion(self.exposure_events(clock), self._pictures.frame_uv, at_ns + self.lag.ns, cell_px)
 
     def activity(self, clock: FrameClock, uv: Array, radius: float) -> tuple[Array, Array]:
         """Events in the rows' exposures within `radius` of frame positions (N, 2), and the event pixels there."""

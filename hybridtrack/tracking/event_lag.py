@@ -11,7 +11,8 @@ import numpy as np
 
 Array = np.ndarray
 PRIOR_SIGMA_S = 1e-3
-MEMORY_FRAMES = 60.0
+# Short, for a trail shows only in part, as frames pull features back: the rest is learned from the frames that follow.
+MEMORY_FRAMES = 10.0
 LEAST_SPEED = 100.0  # frame px/s
 SHORTEST_S, LONGEST_S = -5e-4, 2e-3
 

@@ -17,6 +17,8 @@ WIDE_VELOCITY = 1500.0  # frame px/s, deviation of a velocity of which nothing i
 START_SIGMA_PX = 0.1
 SAME_INSTANT_NS = 50_000
 FEW = 3
+FAST_START_PX = 3.0  # movement in an exposure from which the events' common velocity is the better start
+COMMON_SHARE = 0.25  # of the common velocity that a feature's own may differ by: depths differ
 
 
 class FeatureStarter:
@@ -40,7 +42,7 @@ class FeatureStarter:
             self._velocity_limits(started, views.best, clock)
         if started and len(settled) >= FEW:
             self._velocity_of_neighbours(started, settled)
-        elif started and self._follower is not None:
+        elif started and self._follower is not None and not self._common_velocity(started, clock):
             self._velocity_in_exposure(started, views.light, clock)
         table = self._core.table
         for slot in started:
@@ -151,6 +153,18 @@ class FeatureStarter:
             rate = (count + 2.0) / max(size, 1) / (clock.exposure_ns * 1e-9)
             sigma = 2.0 * rate * self._follower.theta / max(float(mean), 1e-3)
             self._set_velocity(slot, np.zeros(2), float(np.clip(sigma, 20.0, WIDE_VELOCITY)))
+
+    def _common_velocity(self, started: list[int], clock: FrameClock) -> bool:
+        """Give new features the picture's common velocity where it is fast; return whether it is."""
+        assert self._follower is not None
+        middle = int(clock.middle_ns(np.array(0.5 * self._core.mode.height)))
+        found = self._follower.common_motion(clock, middle)
+        if found is None or np.linalg.norm(found.velocity) * clock.exposure_ns * 1e-9 < FAST_START_PX:
+            return False
+        sigma = COMMON_SHARE * float(np.linalg.norm(found.velocity)) + found.step
+        for slot in started:
+            self._set_velocity(slot, found.velocity, sigma)
+        return True
 
     def _velocity_in_exposure(self, started: list[int], light: LogLight, clock: FrameClock) -> None:
         """Measure new features' velocity between sharp pictures near both ends of this exposure."""

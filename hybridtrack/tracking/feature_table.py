@@ -91,6 +91,9 @@ class Pace(NamedTuple):
     surprise: float  # squared deviations of an update from its prediction at which the velocity is doubted
     lag_ns: int  # of an event behind its light, see `event_lag`
     measuring: int  # 0: coast only
+    common_share: float  # deviation of a feature's velocity from the common field, of the speed
+    common_floor: float  # and px/s
+    common_time_s: float  # for how long such a difference lasts
 
 
 class FeatureTable:

@@ -14,11 +14,13 @@ from hybridtrack.tracking.advance_kernels import (
     observe_position,
     pixel_residual,
     predict,
+    pull_velocity,
     remember,
     rewind,
     substitute,
     trajectory,
     update,
+    velocity_field,
 )
 from hybridtrack.tracking.alignment_kernels import with_slopes
 from hybridtrack.tracking.core import Core, new_core
@@ -192,7 +194,7 @@ def test_lines_come_on_the_output_grid(core: Core) -> None:
     t = np.arange(start + 1, start + 5 * base, 10_000)
     x, y, on = (np.full(len(t), v, k) for v, k in ((20, np.uint16), (20, np.uint16), (1, np.uint8)))
     slot, when, rows = np.zeros(50, np.int64), np.zeros(50, np.int64), np.zeros((50, 5))
-    args = (levels, core.table.records, core.features.work, core.pace, clock, slot, when, rows)
+    args = (levels, core.table.records, core.features.work, core.pace, clock, np.zeros(2), slot, when, rows)
     written, used = advance(t, x, y, on, int(t[-1]), 1_000_000, *args)
     assert when[:written].tolist() == [start + k * base for k in range(1, 5)]
     assert used == len(t)
@@ -211,3 +213,46 @@ def test_small_algebra() -> None:
     inverse = np.zeros((5, 5))
     invert(m.copy(), inverse, np.zeros(5))
     np.testing.assert_allclose(inverse, np.linalg.inv(m), rtol=1e-9)
+
+
+def crowd(strays: int = 0) -> tuple[Core, Array]:
+    """Forty features that move by an affine field (2, 3), some of them on ways of their own."""
+    core, random = new_core(small_module(), TrackerOptions(), 40), np.random.default_rng(7)
+    table, pace = core.table, core.pace
+    field = np.array([[900.0, 120.0, -60.0], [-300.0, 40.0, 150.0]])
+    table.active[:] = 1
+    table.state[:, :2] = random.uniform([0, 0], [pace.width, pace.height], (40, 2))
+    about = (table.state[:, :2] - 0.5 * np.array([pace.width, pace.height])) / pace.width
+    table.state[:, 2:4] = np.column_stack([np.ones(40), about]) @ field.T
+    table.state[:strays, 2:4] += random.uniform(2000, 4000, (strays, 2))
+    table.cov[:] = np.diag([0.1, 0.1, 900.0, 900.0, 1e-3])
+    return core, field
+
+
+def test_the_common_field_is_that_of_most_features() -> None:
+    """Exact but for the weak prior without strays; a quarter of strays moves its middle by a few per cent only."""
+    for strays, within in ((0, 0.01), (10, 0.05)):
+        core, field = crowd(strays)
+        found = np.zeros((2, 3))
+        assert velocity_field(core.table.records, core.pace, found)
+        assert np.linalg.norm(found[:, 0] - field[:, 0]) < within * np.linalg.norm(field[:, 0])
+    few, _ = crowd()
+    few.table.active[5:] = 0
+    assert not velocity_field(few.table.records, few.pace, np.zeros((2, 3)))
+
+
+def test_pulls_are_a_kalman_update_and_bounded_for_strays() -> None:
+    """A feature near the field is updated by its stated deviation; one that goes its own way is moved little."""
+    core, field = crowd()
+    row, pace = core.table.rows[0], core.pace
+    about = (row.state[:2] - 0.5 * np.array([pace.width, pace.height])) / pace.width
+    mean = field @ np.array([1.0, *about])
+    row.state[2] = mean[0] + 20.0
+    sigma = pace.common_share * np.hypot(*mean) + pace.common_floor
+    variance = sigma**2 * pace.common_time_s / 1e-3
+    pull_velocity(row, field, 1e-3, pace)
+    assert row.state[2] == pytest.approx(mean[0] + 20.0 * variance / (variance + 900.0))
+    assert row.cov[2, 2] == pytest.approx(900.0 * variance / (variance + 900.0))
+    row.state[2], row.cov[2, 2] = mean[0] + 5000.0, 900.0
+    pull_velocity(row, field, 1e-3, pace)
+    assert row.state[2] > mean[0] + 4900.0
