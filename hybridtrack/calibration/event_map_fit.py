@@ -50,6 +50,8 @@ _CLOSE_PX = 2e-4
 _LEAST_PIXELS = 300
 _ODD_GAIN = 6.0  # deviations of the gains' spread beyond which a pixel is left out
 _PATCHES = (16, 10)
+# Views may scatter less than their noise was taken for; below this a few views agree by chance.
+LEAST_FACTOR = 0.5
 
 
 @dataclass(frozen=True)
@@ -331,7 +333,7 @@ def fit_event_map(
     aligned = _align(_signed(measured, sign), state, nominal, centre)
     state, normal = aligned.state, aligned.normal
     sure = map_covariance(normal, nuisance_covariance(lens_fit, measured.order))
-    factor = max(sure.factor, 1.0)
+    factor = max(sure.factor, LEAST_FACTOR)
     base = lattice_matrix(nominal, start.mirror, (0.0, 0.0))
     deviation = state.matrix - base
     width, height = nominal.event_grid.width, nominal.event_grid.height
