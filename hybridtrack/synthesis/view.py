@@ -22,9 +22,6 @@ from hybridtrack.synthesis.scene import CHANNELS, Scene
 Array = np.ndarray
 
 STEP_PX = 0.5  # of picture motion between two looks at the scene
-# Between two samples of an exposure. They leave out step^2 / 12 = 0.04 px^2 of the blur's variance, where aperture and
-# point spread of a bin of two have 0.69 px^2.
-BLUR_STEP_PX = 0.7
 _LONGEST_STEP_NS = 5e6
 _STEPS_A_BLOCK = 32
 _FEWEST_SAMPLES, _MOST_SAMPLES = 2, 96
@@ -137,12 +134,12 @@ class View:
         """Mean light (rows, columns) float32 of a frame whose rows start their exposure at `row_starts_ns` (rows,).
 
         `exposure_ns` is how long they really expose, `full_ns` the exposure for which a white surface shows the lamps'
-        `white_dn`. The motion within an exposure is followed in steps of `BLUR_STEP_PX` at most.
+        `white_dn`. The motion within an exposure is followed in steps of half a colour px at most.
         """
         mode = self.module.frame_mode
         first, last = float(row_starts_ns.min()), float(row_starts_ns.max())
         ways = [motion.way_between(t, t + exposure_ns) for t in np.linspace(first, last, 5)]
-        samples = int(np.clip(np.ceil(max(ways) / BLUR_STEP_PX), _FEWEST_SAMPLES, _MOST_SAMPLES))
+        samples = int(np.clip(np.ceil(max(ways) / STEP_PX), _FEWEST_SAMPLES, _MOST_SAMPLES))
         knots = max(-(-mode.height // _ROWS_A_KNOT), 1) + 1
         edges = np.arange(samples + 1)[:, None] * (exposure_ns / samples)
         middles = np.linspace(first, last, knots) + 0.5 * (edges[1:] + edges[:-1])
