@@ -15,7 +15,7 @@ import numpy as np
 
 from hybridtrack.calibration.blink import Blink, find_blink
 from hybridtrack.calibration.contrast import StepCounts, ThresholdFit, fit_thresholds
-from hybridtrack.calibration.defects import find_defects, quiet_counts
+from hybridtrack.calibration.defects import find_defects, quiet_counts, share_of_lamps
 from hybridtrack.calibration.event_light import EventSteps, event_steps
 from hybridtrack.calibration.first_fire import FirstFire
 from hybridtrack.calibration.frame_views import FrameSettings, FrameViews
@@ -207,7 +207,9 @@ def calibrate(
     recording, kept_views = measured.recording, measured.kept_views
     settling = measure_settling(recording, kept_views, folds, blink)
     quiet = quiet_counts(recording, kept_views, folds, blink, shape)
-    defects, defect_findings = find_defects(quiet, placed_folds, placed_steps)
+    defects, defect_findings = find_defects(
+        quiet, placed_folds, placed_steps, share_of_lamps(recording, kept_views, blink, shape)
+    )
     thresholds = fit_thresholds(
         step_counts(placed_folds, placed_steps, settling.share, healthy_mask(defects, shape)), shape
     )

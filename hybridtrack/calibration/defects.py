@@ -6,7 +6,7 @@ could be by chance (Poisson tail); lamps that flicker over a whole patch are not
 never fired although light blinked on it by a step that any healthy pixel answers.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy.ndimage import maximum_filter, median_filter
@@ -14,7 +14,7 @@ from scipy.stats import poisson
 
 from hybridtrack.calibration.blink import Blink
 from hybridtrack.calibration.event_light import EventSteps
-from hybridtrack.calibration.kernels import count_quiet_events
+from hybridtrack.calibration.kernels import count_events, count_quiet_events, fold_harmonic
 from hybridtrack.calibration.views import View, ViewFold
 from hybridtrack.module import Defects
 from hybridtrack.recording import Recording
@@ -26,6 +26,8 @@ HOT_RATIO = 15.0
 HOT_LEAST_HZ = 3.0
 DEAD_FLIPS = 20
 EDGE_VIEWS = 3
+FLICKER_LINES = 4
+IN_STEP = 0.7  # how far events that a lamp lets loose add up at its rate: they are spread over part of its cycle
 CLEAR_STEP = 0.9  # log step that any healthy pixel answers
 
 
@@ -70,6 +72,27 @@ def quiet_counts(
     return QuietCounts(count, time_s)
 
 
+def share_of_lamps(recording: Recording, views: list[View], blink: Blink, shape: tuple[int, int]) -> Array:
+    """Share (rows, columns) of each pixel's events that follow another light, at one of the blink's `flicker_hz`.
+
+    A pixel of low threshold answers every cycle of a lamp, ON and OFF in turn, while its neighbours are silent: its
+    signed events add up at the lamp's rate, those of a hot pixel do not.
+    """
+    share = np.zeros(shape)
+    for rate_hz in blink.flicker_hz[:FLICKER_LINES]:
+        lamp = replace(blink, hz=rate_hz, epoch_phase=0.0)
+        in_step, count = np.zeros(shape), np.zeros(shape)
+        for view in views:
+            harmonic = np.zeros(shape, np.complex128)
+            for events in recording.event_blocks(view.t0_ns, view.t1_ns, check_order=False):
+                columns = events.t, events.x, events.y, events.on
+                fold_harmonic(*columns, lamp.epoch_ns, lamp.epoch_phase, lamp.hz, harmonic)
+                count_events(events.x, events.y, count)
+            in_step += np.abs(harmonic)
+        share = np.maximum(share, in_step / (IN_STEP * np.maximum(count, 1.0)))
+    return np.minimum(share, 1.0)
+
+
 def hot_pixels(quiet: QuietCounts) -> Array:
     """Mask (rows, columns) of hot pixels."""
     rate = quiet.rate_hz
@@ -105,11 +128,16 @@ def pixel_list(mask: Array) -> list[tuple[int, int]]:
     return [(int(a), int(b)) for a, b in zip(x, y, strict=True)]
 
 
-def find_defects(quiet: QuietCounts, folds: list[ViewFold], steps: list[EventSteps]) -> tuple[Defects, list[str]]:
-    """Hot and dead pixels, and findings."""
-    hot = hot_pixels(quiet)
+def find_defects(
+    quiet: QuietCounts, folds: list[ViewFold], steps: list[EventSteps], lamps: Array
+) -> tuple[Defects, list[str]]:
+    """Hot and dead pixels, and findings. The share `lamps` (rows, columns) of events is the room's, not the pixel's."""
+    hot = hot_pixels(replace(quiet, count=quiet.count * (1.0 - lamps)))
     dead, judged = dead_pixels(folds, steps)
     findings = []
+    excused = int(np.count_nonzero(hot_pixels(quiet) & ~hot))
+    if excused:
+        findings.append(f"{excused} pixels fire with the room's lamps, and are not counted as hot")
     share = float(np.mean(judged))
     if share < 0.9:
         findings.append(
