@@ -22,6 +22,7 @@ from hybridtrack.synthesis.scene import CHANNELS, Scene
 Array = np.ndarray
 
 STEP_PX = 0.5  # of picture motion between two looks at the scene
+BLUR_STEP_PX = 0.65  # of picture motion a node within an exposure
 _LONGEST_STEP_NS = 5e6
 _STEPS_A_BLOCK = 32
 _FEWEST_SAMPLES, _MOST_SAMPLES = 2, 96
@@ -134,15 +135,17 @@ class View:
         """Mean light (rows, columns) float32 of a frame whose rows start their exposure at `row_starts_ns` (rows,).
 
         `exposure_ns` is how long they really expose, `full_ns` the exposure for which a white surface shows the lamps'
-        `white_dn`. The motion within an exposure is followed in steps of half a colour px at most.
+        `white_dn`. The motion within an exposure is followed at Gauss-Legendre
+        nodes, one for `BLUR_STEP_PX` of it and two at least; the lamps are integrated exactly.
         """
         mode = self.module.frame_mode
         first, last = float(row_starts_ns.min()), float(row_starts_ns.max())
         ways = [motion.way_between(t, t + exposure_ns) for t in np.linspace(first, last, 5)]
-        samples = int(np.clip(np.ceil(max(ways) / STEP_PX), _FEWEST_SAMPLES, _MOST_SAMPLES))
+        samples = int(np.clip(np.ceil(max(ways) / BLUR_STEP_PX), _FEWEST_SAMPLES, _MOST_SAMPLES))
+        nodes, shares = np.polynomial.legendre.leggauss(samples)
         knots = max(-(-mode.height // _ROWS_A_KNOT), 1) + 1
-        edges = np.arange(samples + 1)[:, None] * (exposure_ns / samples)
-        middles = np.linspace(first, last, knots) + 0.5 * (edges[1:] + edges[:-1])
+        edges = exposure_ns * np.concatenate([[0.0], np.cumsum(0.5 * shares)])[:, None]
+        middles = np.linspace(first, last, knots) + 0.5 * exposure_ns * (nodes[:, None] + 1.0)
         span = last - first
         exposure = Exposure(
             self.trajectory.poses(middles.ravel()).reshape(samples, knots, 4, 4),
