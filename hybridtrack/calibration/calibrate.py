@@ -23,8 +23,10 @@ from hybridtrack.calibration.intervals import shortest_interval_ns
 from hybridtrack.calibration.joint import join_blocks
 from hybridtrack.calibration.kernels import OFF_BRIGHT, OFF_DARK, ON_BRIGHT, ON_DARK
 from hybridtrack.calibration.light_and_place import geometry_module, measure_light_and_place
+from hybridtrack.calibration.light_steps import has_several_steps
 from hybridtrack.calibration.onset import OnsetFit
 from hybridtrack.calibration.settling import Settling, measure_settling
+from hybridtrack.calibration.several_steps import StepsSeen, thresholds_from_steps
 from hybridtrack.calibration.timing_result import TimingResult, timing_result
 from hybridtrack.calibration.view_data import BoardCorners, EventMapFit, LensFit, ViewImages
 from hybridtrack.calibration.views import ViewFold, ViewOptions, find_views
@@ -130,7 +132,7 @@ def contrast_block(fit: ThresholdFit, refractory_ns: float | None) -> Contrast:
         off_threshold=fit.off,
         on_spread=fit.on_spread,
         off_spread=fit.off_spread,
-        noise_width=None,
+        noise_width=fit.noise[0] if fit.noise is not None else None,
         refractory_ns=refractory_ns,
     )
 
@@ -171,7 +173,7 @@ def calibrate(
     tell("blinking", 0.0)
     rough = find_blink(recording, shape, target)
     tell("views", 0.08)
-    views, findings = find_views(recording, rough, shape, options.views)
+    views, findings = find_views(recording, rough, shape, options.views, has_several_steps(target))
     measured = measure_light_and_place(
         recording,
         views,
@@ -204,7 +206,7 @@ def calibrate(
     ]
     placed = [(fold, view.steps) for fold, view in zip(folds, shown, strict=True) if view.steps is not None]
     placed_folds, placed_steps = [fold for fold, _ in placed], [step for _, step in placed]
-    recording, kept_views = measured.recording, measured.kept_views
+    everything, recording, kept_views = recording, measured.recording, measured.kept_views
     settling = measure_settling(recording, kept_views, folds, blink)
     quiet = quiet_counts(recording, kept_views, folds, blink, shape)
     defects, defect_findings = find_defects(
@@ -214,6 +216,17 @@ def calibrate(
         step_counts(placed_folds, placed_steps, settling.share, healthy_mask(defects, shape)), shape
     )
     refractory = shortest_interval_ns(recording, kept_views, shape)
+    if measured.light_steps is not None:
+        tell("steps of light", 0.88)
+        seen = StepsSeen(
+            everything,
+            [measured.views[view.images.index] for view in shown if view.steps is not None],
+            placed_steps,
+            blink,
+            measured.light_steps,
+            healthy_mask(defects, shape),
+        )
+        thresholds = thresholds_from_steps(seen, target, thresholds, settling, refractory or 0.0)
     findings += defect_findings + thresholds.findings
 
     tell("module", 0.97)

@@ -18,12 +18,13 @@ import numpy as np
 
 from hybridtrack.calibration.blink import Blink
 from hybridtrack.calibration.row_signals import RowSignals
-from hybridtrack.calibration.square_wave import Waveform, bright_share, bright_share_slopes
+from hybridtrack.calibration.square_wave import CycleStrengths, Waveform, bright_share, bright_share_slopes
 from hybridtrack.errors import DegenerateDataError
 
 Array = np.ndarray
 
 PARAMETERS = ("offset_ns", "line_time_ns", "exposure_correction_ns", "drift", "duty", "sweep")
+SEARCH_PERIODS = 2
 
 
 @dataclass(frozen=True)
@@ -71,13 +72,17 @@ class ClockFit:
 
 @dataclass(frozen=True)
 class ClockModel:
-    """Row signals against the blink clock: shares f of every row and frame, and the projected residuals."""
+    """Row signals against the blink clock: shares f of every row and frame, and the projected residuals.
+
+    `strengths` of the cycles where the target plays several steps of light: they tell whole periods apart.
+    """
 
     rows: RowSignals
     blink: Blink
     rise: float
     fall: float
     drift_epoch_ns: int
+    strengths: CycleStrengths | None = None
 
     def exposure_cycles(self, clocks: Clocks) -> tuple[Array, Array]:
         """Start and length (R, N) of all exposures, in cycles."""
@@ -98,7 +103,7 @@ class ClockModel:
 
     def waveform(self, clocks: Clocks) -> Waveform:
         """Light over a cycle for these clocks."""
-        return Waveform(clocks.duty, self.rise, self.fall)
+        return Waveform(clocks.duty, self.rise, self.fall, self.strengths)
 
     def shares(self, clocks: Clocks) -> Array:
         """f (R, N)."""
@@ -151,12 +156,16 @@ def explained_part(rows: RowSignals, share: Array) -> float:
 
 
 def search(model: ClockModel, start: Clocks, line_times_ns: Array, steps: int = 48) -> Clocks:
-    """The best of a grid over offset (one blink period) and line time."""
+    """The best of a grid over offset (one blink period, or the nearest ones where cycles differ) and line time."""
     thin = np.arange(0, len(model.rows.row), max(1, len(model.rows.row) // 150))
     coarse = replace(model, rows=model.rows[thin])
     best, best_part = start, -np.inf
+    offsets = np.arange(steps) / steps * model.blink.period_ns
+    if model.strengths is not None:
+        around = start.offset_ns + np.arange(-SEARCH_PERIODS, SEARCH_PERIODS) * model.blink.period_ns
+        offsets = np.concatenate([offsets + period for period in around])
     for line_time in line_times_ns:
-        for offset in np.arange(steps) / steps * model.blink.period_ns:
+        for offset in offsets:
             clocks = replace(start, offset_ns=float(offset), line_time_ns=float(line_time))
             part = explained_part(coarse.rows, coarse.shares(clocks))
             if part > best_part:
@@ -260,6 +269,7 @@ def fit_clocks(model: ClockModel, start: Clocks, free: tuple[str, ...], nominal_
     """
     clocks = refine(model, start, free)
     covariance, residual = clustered_covariance(model, clocks, free)
-    clocks = replace(clocks, offset_ns=nearest_offset(clocks.offset_ns, model.blink.period_ns, nominal_offset_ns))
+    if model.strengths is None:
+        clocks = replace(clocks, offset_ns=nearest_offset(clocks.offset_ns, model.blink.period_ns, nominal_offset_ns))
     explained = explained_part(model.rows, model.shares(clocks))
     return ClockFit(clocks, free, covariance, model.drift_epoch_ns, residual, explained)

@@ -16,10 +16,14 @@ Other pixels remember otherwise; `pixel_model` tells them apart wherever steps o
 """
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from hybridtrack.calibration.pixel_model import LEAST_COUNT, CountCurve, choose_model
+
+if TYPE_CHECKING:
+    from hybridtrack.calibration.several_steps import SeveralSteps
 
 Array = np.ndarray
 
@@ -47,7 +51,8 @@ class StepCounts:
 @dataclass(frozen=True)
 class ThresholdFit:
     """Medians over pixels with deviations, spreads over pixels, maps (rows, columns; NaN where unknown), the model
-    of the pixel that was chosen ("steps" or "resets"), the curve behind it, and findings. None: not to be told."""
+    of the pixel that was chosen, the curve behind it, and findings; from a target with `several` steps of light also
+    the comparator's `noise` with its deviation. None: not to be told."""
 
     on: float | None
     off: float | None
@@ -60,6 +65,8 @@ class ThresholdFit:
     model: str
     curve: CountCurve
     findings: list[str]
+    noise: tuple[float, float] | None = None
+    several: "SeveralSteps | None" = None
 
 
 def count_curve(counts: StepCounts, bins: int = 16) -> CountCurve:

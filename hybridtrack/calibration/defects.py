@@ -68,7 +68,7 @@ def quiet_counts(
             count_quiet_events(
                 events.t, events.x, events.y, blink.epoch_ns, blink.epoch_phase, blink.hz, first, last, anytime, count
             )
-        time_s += (view.t1_ns - view.t0_ns) * 1e-9 * np.where(anytime, 1.0, last - first)
+        time_s += fold.cycles / blink.hz * np.where(anytime, 1.0, last - first)
     return QuietCounts(count, time_s)
 
 

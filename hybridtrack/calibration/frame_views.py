@@ -20,6 +20,7 @@ from hybridtrack.calibration.frame_demodulation import (
     demodulate_frames,
 )
 from hybridtrack.calibration.frame_light import view_light
+from hybridtrack.calibration.light_steps import LightSteps, find_light_steps
 from hybridtrack.calibration.row_signals import (
     LEAST_FRAMES,
     RowSignals,
@@ -29,7 +30,7 @@ from hybridtrack.calibration.row_signals import (
     singular_row_signals,
     weighted_row_signals,
 )
-from hybridtrack.calibration.square_wave import Waveform, bright_share
+from hybridtrack.calibration.square_wave import CycleStrengths, Waveform, bright_share
 from hybridtrack.calibration.views import View
 from hybridtrack.errors import DegenerateDataError, ModuleMismatchError
 from hybridtrack.module import HybridModule, Target, Timing
@@ -48,12 +49,14 @@ DRIFT_DEVIATION = 10e-6  # a drift is fitted where the data tell it to better th
 
 @dataclass(frozen=True)
 class FrameSettings:
-    """What the fits of a recording share: nominal module, target, blink clock, and the epoch of the drift."""
+    """What the fits of a recording share: nominal module, target, blink clock, the epoch of the drift, and the
+    strengths of cycles where the target plays several steps of light."""
 
     nominal: HybridModule
     target: Target
     blink: Blink
     drift_epoch_ns: int
+    strengths: CycleStrengths | None = None
 
     @property
     def edges(self) -> tuple[float, float]:
@@ -69,11 +72,11 @@ class FrameSettings:
 
     def model(self, rows: RowSignals) -> ClockModel:
         """The clock model over these rows."""
-        return ClockModel(rows, self.blink, *self.edges, self.drift_epoch_ns)
+        return ClockModel(rows, self.blink, *self.edges, self.drift_epoch_ns, self.strengths)
 
     def waveform(self, clocks: Clocks) -> Waveform:
         """Light of set A over a cycle."""
-        return Waveform(clocks.duty, *self.edges)
+        return Waveform(clocks.duty, *self.edges, self.strengths)
 
 
 @dataclass(frozen=True)
@@ -88,6 +91,7 @@ class FrameViews:
     rows: RowSignals
     agreement: Agreement
     findings: list[str]
+    light_steps: LightSteps | None = None
 
 
 def frames_of_view(frames: FrameTable, view: View, offset_ns: float, readout_ns: float) -> Array:
@@ -182,7 +186,7 @@ def swapped(clocks: Clocks, period_ns: float) -> Clocks:
 def bootstrap(settings: FrameSettings, recording: Recording, frames: list[Array]) -> Clocks:
     """Rough clocks with no knowledge of the board."""
     model = settings.model(first_rows(settings, recording, frames))
-    start = Clocks(duty=settings.target.duty)
+    start = Clocks(settings.nominal_offset_ns, duty=settings.target.duty)
     clocks = search(model, start, candidate_line_times_ns(settings, recording.frames))
     free = ("offset_ns",) if settings.nominal.frame_mode.shutter == "global" else ("offset_ns", "line_time_ns")
     fit = fit_clocks(model, clocks, free, settings.nominal_offset_ns)
@@ -329,10 +333,14 @@ def fit_frames(settings: FrameSettings, recording: Recording, views: list[View],
         for picture, before, chosen in zip(demodulated, first_choice, frames, strict=True)
     ]
     rows = second_rows(settings, recording, frames, demodulated)
+    steps = None
+    if settings.strengths is not None:
+        steps = find_light_steps(settings.model(rows), clocks, settings.strengths, views)
+        settings = replace(settings, strengths=steps.strengths)
     fit, findings = final_clocks(settings, rows, clocks)
     demodulated = [demodulate_view(settings, recording, fit.clocks, chosen) for chosen in frames]
     used = [c if d is None else c[d.kept] for c, d in zip(frames, demodulated, strict=True)]
-    return FrameViews(demodulated, used, fit, rows, agreement, findings)
+    return FrameViews(demodulated, used, fit, rows, agreement, findings, steps)
 
 
 def fit_swept_frames(

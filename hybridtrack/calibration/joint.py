@@ -17,12 +17,14 @@ def join_blocks(lens: LensFit, event_map: EventMapFit, timing: TimingResult, thr
     """One covariance over all parameters, in the order lens, map, clocks, thresholds."""
     names = [*lens.parameters, *event_map.parameters, *timing.parameters]
     blocks = [lens.covariance, event_map.covariance, timing.covariance]
+    noise, noise_sigma = thresholds.noise or (None, None)
     for name, value, sigma in (
-        ("on", thresholds.on, thresholds.on_sigma),
-        ("off", thresholds.off, thresholds.off_sigma),
+        ("on_threshold", thresholds.on, thresholds.on_sigma),
+        ("off_threshold", thresholds.off, thresholds.off_sigma),
+        ("noise_width", noise, noise_sigma),
     ):
         if value is not None and sigma is not None:
-            names.append(f"contrast.{name}_threshold")
+            names.append(f"contrast.{name}")
             blocks.append(np.array([[sigma**2]]))
     covariance = np.zeros((len(names), len(names)))
     start = 0

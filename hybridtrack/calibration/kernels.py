@@ -41,6 +41,58 @@ def fold_events(
 
 
 @kernel
+def count_by_cycle(
+    t: Array, x: Array, y: Array, on: Array, epoch_ns: int, epoch_phase: float, hz: float, duty: float, sign: Array,
+    first: int, out: Array,
+) -> None:  # fmt: skip
+    """Add to `out` (cycles,), from whole cycle `first` on, events that agree with the light, less those against it.
+
+    `sign` (rows, columns) int8: 1 for pixels of set A, -1 for those that blink the other way, 0 for all others.
+    """
+    rate = hz * 1e-9
+    for k in range(len(t)):
+        s = sign[y[k], x[k]]
+        if s == 0:
+            continue
+        phase = (t[k] - epoch_ns) * rate + epoch_phase
+        cycle = int(np.floor(phase)) - first
+        if 0 <= cycle < len(out):
+            bright = phase - np.floor(phase) < duty
+            out[cycle] += s if bright == (on[k] == 1) else -s
+
+
+@kernel
+def fold_steps(
+    t: Array, x: Array, y: Array, on: Array, epoch_ns: int, epoch_phase: float, hz: float, duty: float, first: int,
+    step: Array, last: Array, run: Array, out: Array,
+) -> None:  # fmt: skip
+    """Count events by pixel and step of light into `out` (steps, 2, 3, rows, columns).
+
+    `step` (cycles,) from whole cycle `first` on: index of each cycle's step, -1 to leave it out. Second axis: ON in the
+    bright part, OFF in the dark part of the cycle. Third: events, flips with at least one, and the sum over flips of
+    the squared count. `last` (2, rows, columns) int64, filled with a cycle before all, and `run` (2, rows, columns)
+    int64 carry the current flip's number and count.
+    """
+    rate = hz * 1e-9
+    for k in range(len(t)):
+        phase = (t[k] - epoch_ns) * rate + epoch_phase
+        whole = np.floor(phase)
+        cycle = int(whole) - first
+        if cycle < 0 or cycle >= len(step) or step[cycle] < 0:
+            continue
+        off = 1 - on[k]
+        if (phase - whole >= duty) != (off == 1):
+            continue
+        r, c, s = y[k], x[k], step[cycle]
+        if last[off, r, c] != cycle:
+            last[off, r, c], run[off, r, c] = cycle, 0
+            out[s, off, 1, r, c] += 1
+        run[off, r, c] += 1
+        out[s, off, 0, r, c] += 1
+        out[s, off, 2, r, c] += 2 * run[off, r, c] - 1
+
+
+@kernel
 def time_order(t: Array, bin_ns: int) -> Array:
     """Order (N,) that sorts stamps `t` (N,) int64 which span not too many bins: a bucket sort, then each bucket by
     insertion; linear where a bucket holds few."""

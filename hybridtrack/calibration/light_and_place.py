@@ -19,6 +19,7 @@ from hybridtrack.calibration.frame_views import (
     frames_of_view,
 )
 from hybridtrack.calibration.geometry_fit import Geometry, fit_geometry
+from hybridtrack.calibration.light_steps import ChosenCycles, LightSteps, first_guess, has_several_steps
 from hybridtrack.calibration.onset import OnsetFit, fit_onsets
 from hybridtrack.calibration.row_signals import LEAST_FRAMES
 from hybridtrack.calibration.sweep import (
@@ -40,12 +41,14 @@ from hybridtrack.calibration.sweep_ramp import (
 )
 from hybridtrack.calibration.view_data import EventMapFit, LensFit, ViewImages
 from hybridtrack.calibration.views import View, ViewFold, fold_view
+from hybridtrack.errors import DegenerateDataError
 from hybridtrack.module import HybridModule, Target, lens_parameters
 from hybridtrack.recording import Recording
 
 Array = np.ndarray
 Progress = Callable[[str, float], None]
 
+LEAST_STRONG = 3  # cycles of the strongest step of light in a view
 SWEEP_DOUBT = 0.5  # deviations of the sweep's excess beyond which events are counted anew
 
 
@@ -76,6 +79,11 @@ class LightAndPlace:
     scanout_s: tuple[float, float] | None = None
 
     @property
+    def light_steps(self) -> LightSteps | None:
+        """Which step of light each cycle played, None where the target has one."""
+        return self.frames.light_steps
+
+    @property
     def kept_views(self) -> list[View]:
         """The views of `images`."""
         return [self.views[image.index] for image in self.images]
@@ -98,13 +106,19 @@ def geometry_module(nominal: HybridModule, lens_fit: LensFit, map_fit: EventMapF
     )
 
 
+def fold_views(recording: Recording, views: list[View], blink: Blink, shape: tuple[int, int]) -> list[ViewFold]:
+    """Fold every view; one of which only some cycles are kept counts those."""
+    cycles = [recording.count_in(view) if isinstance(recording, ChosenCycles) else None for view in views]
+    return [fold_view(recording, view, blink, shape, count) for view, count in zip(views, cycles, strict=True)]
+
+
 def date_flips(recording: Recording, views: list[View], rough: Blink, shape: tuple[int, int]) -> Flips:
     """Fold the views by a rough blink clock, refine it by the bursts, and fold them again."""
-    folds = [fold_view(recording, view, rough, shape) for view in views]
+    folds = fold_views(recording, views, rough, shape)
     onset = fit_onsets(recording, rough, views, folds)
     first_fire = measure_first_fire(recording, views, folds, onset)
     onset = at_mean_first_event(onset, first_fire)
-    return Flips([fold_view(recording, view, onset.blink, shape) for view in views], onset, first_fire)
+    return Flips(fold_views(recording, views, onset.blink, shape), onset, first_fire)
 
 
 def images_of_views(
@@ -146,11 +160,22 @@ def measure_at_once(
     lens_model: str | None,
     tell: Progress,
 ) -> LightAndPlace:
-    """As if the board flipped all at once."""
+    """As if the board flipped all at once. Of several steps of light only the strongest counts here."""
     tell("flips", 0.0)
-    flips = date_flips(recording, views, rough, nominal.event_grid.shape)
+    shape, strengths, everything = nominal.event_grid.shape, None, recording
+    if has_several_steps(target):
+        guess, strong = first_guess(everything, views, rough, target, shape)
+        recording = ChosenCycles(everything, rough, guess.first, strong)
+        views = [view for view in views if recording.count_in(view) >= LEAST_STRONG]
+        if not views:
+            raise DegenerateDataError(
+                f"a view of a target with several levels must hold {LEAST_STRONG} cycles of the largest, and none does"
+            )
+    flips = date_flips(recording, views, rough, shape)
+    if has_several_steps(target):
+        strengths, _ = first_guess(everything, views, flips.onset.blink, target, shape)
     tell("frames", 0.1)
-    settings = FrameSettings(nominal, target, flips.onset.blink, int(recording.frames.t_start_ns.mean()))
+    settings = FrameSettings(nominal, target, flips.onset.blink, int(recording.frames.t_start_ns.mean()), strengths)
     frames = fit_frames(settings, recording, views, [fold.amplitude() for fold in flips.folds])
     images, folds = images_of_views(views, flips.folds, frames)
     geometry = fit_geometry(
@@ -285,6 +310,11 @@ def measure_light_and_place(
 
     Raises DegenerateDataError, ModuleMismatchError and BoardNotFoundError, each with one sentence.
     """
+    if has_several_steps(target) and (target.is_counterphase or target.scanout_s > 0):
+        raise DegenerateDataError(
+            "steps of light of several sizes (levels) are read from a shuttered target that flips at once; this one is "
+            f"{'counterphase' if target.is_counterphase else 'swept'}; state levels as null where it plays one step"
+        )
     if target.scanout_s <= 0:
         if target.is_counterphase:
             require_no_sweep([view_harmonic(recording, v, rough, nominal.event_grid.shape) for v in views], rough)

@@ -4,6 +4,8 @@ Events are folded at the blink frequency in blocks of two cycles. Each block's s
 compared with the one before: their correlation and the shift between them (one step of Lucas and Kanade 1981 for a
 pure translation). A view is a maximal run of blocks with a pattern, where both stay within hand sway; what lies
 between is transit. Where the pattern sways by several event pixels over the run, the stillest part is taken.
+On a target of several steps of light the small ones show too little: such blocks are passed over, and the next strong
+one is compared with the last.
 Only numbers per block are kept, so that memory does not grow with the recording.
 """
 
@@ -24,6 +26,9 @@ BLOCK_CYCLES = 2
 SMOOTH_PX = 1.5
 ACTIVE_SHARE = 0.004  # of the event grid must blink for a block to count
 ACTIVE_EVENTS = 0.5  # events per flip that make a pixel active
+WEAK_S = 0.35  # longest stretch of small steps that is passed over
+WEAK_PART = 0.6  # of the last strong block's amplitude
+ALIKE, UNLIKE = 0.9, 0.4  # correlations of blocks that show the board at one place, and at two
 
 
 @dataclass(frozen=True)
@@ -44,12 +49,14 @@ class ViewOptions:
 
 @dataclass(frozen=True)
 class Block:
-    """One block of whole cycles: start, how many pixels blink, and what changed since the block before."""
+    """One block of whole cycles: start, how many pixels blink, and what changed since the block before; `weak` ones
+    tell nothing."""
 
     cycle: int
     active: int
     correlation: float
     shift_px: Array
+    weak: bool = False
 
 
 @dataclass(frozen=True)
@@ -143,9 +150,24 @@ def cycle_blocks(recording: Recording, blink: Blink) -> Iterator[tuple[int, list
                 cycle, pieces = cycle + BLOCK_CYCLES, []
 
 
-def describe_blocks(recording: Recording, blink: Blink, shape: tuple[int, int]) -> list[Block]:
-    """Fold the whole recording block by block."""
-    blocks, before = [], None
+def is_weak(strong: Array | None, before: Array | None, after: Array, correlation: float) -> bool:
+    """Whether a block `after` shows too small a step of light to be compared with the last `strong` one.
+
+    One that is unlike it, and like the block `before`, shows another place of the board, however weakly.
+    """
+    if strong is None or before is None or correlation > ALIKE:
+        return False
+    if correlation < UNLIKE and compare(before, after)[0] > ALIKE:
+        return False
+    return bool(np.abs(after).sum(dtype=float) < WEAK_PART * np.abs(strong).sum(dtype=float))
+
+
+def describe_blocks(
+    recording: Recording, blink: Blink, shape: tuple[int, int], several_steps: bool = False
+) -> list[Block]:
+    """Fold the whole recording block by block; `several_steps` of light let weak blocks be passed over."""
+    blocks: list[Block] = []
+    strong, before, since = None, None, 0
     for cycle, pieces in cycle_blocks(recording, blink):
         planes = np.zeros((4, *shape), np.uint16)
         for events in pieces:
@@ -154,31 +176,50 @@ def describe_blocks(recording: Recording, blink: Blink, shape: tuple[int, int]) 
         active = int(np.count_nonzero(np.abs(amplitude) >= ACTIVE_EVENTS))
         # A pixel that fires without pause must not outweigh the board.
         smooth = gaussian_filter(np.clip(amplitude, -4.0, 4.0), SMOOTH_PX)
-        blocks.append(Block(cycle, active, *compare(before, smooth)))
+        correlation, shift = compare(strong, smooth)
+        near = several_steps and (cycle - since) * blink.period_ns < 1e9 * WEAK_S
+        weak = near and is_weak(strong, before, smooth, correlation)
+        if weak:
+            shift = np.zeros(2)
+        elif several_steps and strong is not None:
+            # Steps of light differ: what is left of their ratio would look like motion.
+            ratio = float(np.sum(smooth * strong, dtype=float) / max(np.sum(smooth * smooth, dtype=float), 1e-12))
+            shift = translation_px(strong, ratio * smooth)
+        blocks.append(Block(cycle, active, correlation, shift, weak))
         before = smooth
+        if not weak:
+            strong, since = smooth, cycle
     return blocks
+
+
+def least_correlation(blocks: list[Block], least_active: int, options: ViewOptions) -> float:
+    """What joins a block to a run, above what options ask where views are usually more alike."""
+    strong = [b.correlation for b in blocks if b.active >= least_active and b.correlation > options.correlation]
+    usual = float(np.median(strong)) if strong else 1.0
+    # A block in which one view ends and the next begins correlates with both, but less than within a view.
+    return max(options.correlation, usual - max(0.08, 4.0 * (1.0 - usual)))
 
 
 def still_runs(blocks: list[Block], least_active: int, options: ViewOptions) -> list[tuple[int, int]]:
     """Runs [first, last) of blocks that hold still; a block joins the run of the one before it."""
-    strong = [b.correlation for b in blocks if b.active >= least_active and b.correlation > options.correlation]
-    usual = float(np.median(strong)) if strong else 1.0
-    # A block in which one view ends and the next begins correlates with both, but less than within a view.
-    least = max(options.correlation, usual - max(0.08, 4.0 * (1.0 - usual)))
-    runs, first = [], None
+    least = least_correlation(blocks, least_active, options)
+    runs, first, last = [], None, 0
     for k, block in enumerate(blocks):
+        if block.weak:
+            continue
         joined = (
             block.active >= least_active
             and block.correlation >= least
             and float(np.hypot(*block.shift_px)) <= options.sway_per_block_px
         )
         if first is not None and not joined:
-            runs.append((first, k))
+            runs.append((first, last))
             first = None
         if first is None and block.active >= least_active:
             first = k
+        last = k + 1
     if first is not None:
-        runs.append((first, len(blocks)))
+        runs.append((first, last))
     return runs
 
 
@@ -226,11 +267,18 @@ def view_of_run(blocks: list[Block], run: tuple[int, int], blink: Blink, options
 
 
 def find_views(
-    recording: Recording, blink: Blink, shape: tuple[int, int], options: ViewOptions | None = None
+    recording: Recording,
+    blink: Blink,
+    shape: tuple[int, int],
+    options: ViewOptions | None = None,
+    several_steps: bool = False,
 ) -> tuple[list[View], list[str]]:
-    """Views in order of time, and findings. Raises BoardNotFoundError where nothing that blinks ever holds still."""
+    """Views in order of time, and findings; `several_steps`: whether the target blinks by steps of several sizes.
+
+    Raises BoardNotFoundError where nothing that blinks ever holds still.
+    """
     options = options or ViewOptions()
-    blocks = describe_blocks(recording, blink, shape)
+    blocks = describe_blocks(recording, blink, shape, several_steps)
     least_active = max(30, int(ACTIVE_SHARE * shape[0] * shape[1]))
     views = [view_of_run(blocks, run, blink, options) for run in still_runs(blocks, least_active, options)]
     kept = [view for view in views if view is not None]
@@ -250,9 +298,12 @@ def find_views(
     return kept, findings
 
 
-def fold_view(recording: Recording, view: View, blink: Blink, shape: tuple[int, int]) -> ViewFold:
-    """Events of one view by pixel, polarity and half of the cycle."""
+def fold_view(
+    recording: Recording, view: View, blink: Blink, shape: tuple[int, int], cycles: int | None = None
+) -> ViewFold:
+    """Events of one view by pixel, polarity and half of the cycle; `cycles`: how many it has, if not all of its
+    time."""
     planes = np.zeros((4, *shape), np.uint32)
     for events in recording.event_blocks(view.t0_ns, view.t1_ns, check_order=False):
         add_events(events, blink, planes)
-    return ViewFold(planes, max(1, round((view.t1_ns - view.t0_ns) / blink.period_ns)))
+    return ViewFold(planes, cycles or max(1, round((view.t1_ns - view.t0_ns) / blink.period_ns)))

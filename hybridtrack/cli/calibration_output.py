@@ -10,11 +10,13 @@ from hybridtrack.calibration.named_numbers import Number, named_numbers
 from hybridtrack.cli.console import ProgressCallback
 from hybridtrack.errors import OptionError
 from hybridtrack.files import write_json
-from hybridtrack.module import HybridModule, Target, save_module
+from hybridtrack.module import ContrastMap, HybridModule, Target, save_contrast_map, save_module
 from hybridtrack.recording import Recording
 from hybridtrack.report.calibration_page import calibration_page
 from hybridtrack.report.page import Section, write_page
 from hybridtrack.report.repeatability_page import limits_section, limits_summary
+
+MAP_NAME = "calibrated.contrast.h5"
 
 
 @dataclass(frozen=True)
@@ -57,6 +59,17 @@ def calibrate_file(path: Path, job: CalibrationJob, progress: ProgressCallback) 
     return Calibrated(path, result, plain, numbers, checks)
 
 
+def _with_map(result: CalibrationResult, path: Path) -> HybridModule:
+    """The module, naming the map of its thresholds, which is written to `path`; without where none was measured."""
+    several, contrast = result.thresholds.several, result.module.contrast
+    if several is None or contrast is None:
+        return result.module
+    maps = several.maps
+    digest = save_contrast_map(ContrastMap(maps.on, maps.off, maps.on_sigma, maps.off_sigma), path)
+    named = contrast.model_copy(update={"map_file": path.name, "map_sha256": digest})
+    return result.module.model_copy(update={"contrast": named})
+
+
 def write_calibration(
     done: Calibrated,
     job: CalibrationJob,
@@ -64,11 +77,13 @@ def write_calibration(
     more: dict[str, Any] | None = None,
     sections: tuple[Section, ...] = (),
 ) -> None:
-    """Write calibrated.module.json, summary.json with `more`, and report.html with `sections` after its own."""
+    """Write calibrated.module.json, its threshold map where there is one, summary.json with `more`, and report.html
+    with `sections` after its own.
+    """
     plain = done.summary | (more or {})
     if done.checks:
         plain |= {"limits": limits_summary(done.checks, job.limits_source)}
         sections = (limits_section(done.checks, job.limits_source), *sections)
-    save_module(done.result.module, out / "calibrated.module.json")
+    save_module(_with_map(done.result, out / MAP_NAME), out / "calibrated.module.json")
     write_json(out / "summary.json", plain)
     write_page(calibration_page(done.result, str(done.path), sections), out / "report.html")

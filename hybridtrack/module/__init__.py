@@ -1,5 +1,6 @@
 """What a hybrid module and its calibration target are; JSON in and out."""
 
+from hybridtrack.module.contrast_map import ContrastMap, load_contrast_map, save_contrast_map
 from hybridtrack.module.event_map import ColourFromEvent, LatticeTest, nominal_matrix
 from hybridtrack.module.hybrid_module import HybridModule, load_module, parse_module, save_module
 from hybridtrack.module.layout import (
@@ -27,6 +28,7 @@ __all__ = [
     "ColourArray",
     "ColourFromEvent",
     "Contrast",
+    "ContrastMap",
     "Defects",
     "EventGrid",
     "FisheyeParameters",
@@ -41,10 +43,12 @@ __all__ = [
     "clear_in_bin",
     "frame_pixel_centres",
     "lens_parameters",
+    "load_contrast_map",
     "load_module",
     "load_target",
     "nominal_matrix",
     "parse_module",
+    "save_contrast_map",
     "save_module",
     "save_target",
 ]

@@ -118,44 +118,6 @@ def event_residual_figure(result: CalibrationResult) -> Figure | None:
     return finished(sheet)
 
 
-def step_figure(result: CalibrationResult) -> Figure:
-    """Events a flip against the size of the step of light."""
-    fit = result.thresholds
-    caption = (
-        "Events a flip against the step of light that the colour pixels of the same cluster measured. The "
-        "lines are what the "
-        "estimated thresholds predict."
-    )
-    with drawing("steps", caption) as sheet:
-        for counts, threshold, name, colour in (
-            (fit.curve.on, fit.on, "ON", SERIES[1]),
-            (fit.curve.off, fit.off, "OFF", SERIES[0]),
-        ):
-            sheet.axes.plot(fit.curve.step, counts, "o", ms=4, color=colour, label=name)
-            if threshold is not None and fit.on is not None and fit.off is not None:
-                steps = np.linspace(0, float(fit.curve.step.max()) * 1.05, 50)
-                mean_count = np.maximum(steps - 0.5 * (fit.on + fit.off), 0.0) / threshold
-                sheet.axes.plot(steps, mean_count, "-", color=colour, lw=1)
-        sheet.axes.set(xlabel="step of light, natural log", ylabel="events a flip", xlim=(0, None), ylim=(0, None))
-        sheet.axes.legend()
-    return finished(sheet)
-
-
-def threshold_figure(result: CalibrationResult) -> Figure | None:
-    """The map of ON thresholds."""
-    thresholds = result.thresholds.on_map
-    known = np.isfinite(thresholds)
-    if not known.any():
-        return None
-    low, high = np.percentile(thresholds[known], [2, 98])
-    with drawing("thresholds", "ON threshold of each event pixel that saw the board; empty where none did.") as sheet:
-        image = sheet.axes.imshow(thresholds, cmap="viridis", vmin=low, vmax=high)
-        sheet.axes.grid(False)
-        sheet.axes.set(xlabel="x, event grid", ylabel="y, event grid")
-        sheet.canvas.colorbar(image, ax=sheet.axes, shrink=0.8, label="natural log")
-    return finished(sheet)
-
-
 def correlation_figure(result: CalibrationResult) -> Figure | None:
     """The joint covariance as a correlation picture."""
     uncertainty = result.module.uncertainty

@@ -11,9 +11,8 @@ from hybridtrack.report.calibration_figures import (
     correlation_figure,
     coverage_figure,
     event_residual_figure,
-    step_figure,
-    threshold_figure,
 )
+from hybridtrack.report.contrast_figures import contrast_figures
 from hybridtrack.report.page import BLINK_CAUTION, Figure, Page, Section, Table
 
 
@@ -107,6 +106,11 @@ def _contrast_rows(module: HybridModule) -> list[tuple[str, str, str, str]]:
             spread = getattr(contrast, f"{side}_spread")
             meaning = f"natural log; {spread:.4f} from pixel to pixel" if spread is not None else "natural log"
             rows.append((f"{side.upper()} threshold", *with_deviation(value, deviation), meaning))
+        if contrast.noise_width is not None:
+            deviation = sigma.of("contrast.noise_width") if sigma else None
+            rows.append(
+                ("comparator noise", *with_deviation(contrast.noise_width, deviation), "natural log, one sigma")
+            )
         if contrast.refractory_ns is not None:
             rows.append(
                 ("refractory time", f"{contrast.refractory_ns * 1e-3:.0f} us", "", "shortest wait seen at a pixel")
@@ -132,8 +136,7 @@ def calibration_figures(result: CalibrationResult) -> tuple[Figure, ...]:
         band_figure(result),
         coverage_figure(result),
         event_residual_figure(result),
-        step_figure(result),
-        threshold_figure(result),
+        *contrast_figures(result),
         correlation_figure(result),
     ]
     return tuple(figure for figure in figures if figure is not None)

@@ -13,9 +13,9 @@ from hybridtrack.report.calibration_figures import (
     busiest_view,
     coverage_figure,
     event_residual_figure,
-    step_figure,
 )
 from hybridtrack.report.calibration_page import with_deviation
+from hybridtrack.report.contrast_figures import step_figure
 from hybridtrack.report.figures import INK, SERIES, drawing, finished
 from hybridtrack.report.page import BLINK_CAUTION, POSE_CAUTION, SYNTHETIC_NOTICE, Figure, Page, Section, Table
 from hybridtrack.report.track_page import lives_of

@@ -1,11 +1,27 @@
 """The bright share of an exposure against numerical integration and differences."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
-from hybridtrack.calibration.square_wave import Waveform, bright_share, bright_share_slopes, integral, level
+from hybridtrack.calibration.square_wave import (
+    CycleStrengths,
+    Waveform,
+    bright_share,
+    bright_share_slopes,
+    integral,
+    level,
+)
 
-WAVES = [Waveform(0.5), Waveform(0.35), Waveform(0.5, 0.04, 0.02), Waveform(0.6, 0.1, 0.15)]
+STEPPED = CycleStrengths(-1, np.array([0.3, 1.0, 0.1, 0.6, 0.6]))
+WAVES = [
+    Waveform(0.5),
+    Waveform(0.35),
+    Waveform(0.5, 0.04, 0.02),
+    Waveform(0.6, 0.1, 0.15),
+    Waveform(0.55, 0.03, 0.02, STEPPED),
+]
 
 
 @pytest.mark.parametrize("wave", WAVES)
@@ -24,8 +40,7 @@ def test_slopes_match_differences(wave, length):
     start = np.random.default_rng(1).uniform(-3, 3, 400)
     step = 1e-6
     by_start, by_length, by_duty = bright_share_slopes(start, np.full(400, length), wave)
-    longer = Waveform(wave.duty + step, wave.rise, wave.fall)
-    shorter = Waveform(wave.duty - step, wave.rise, wave.fall)
+    longer, shorter = replace(wave, duty=wave.duty + step), replace(wave, duty=wave.duty - step)
     expected = [
         (bright_share(start + step, length, wave) - bright_share(start - step, length, wave)) / (2 * step),
         (bright_share(start, length + step, wave) - bright_share(start, length - step, wave)) / (2 * step),
@@ -39,3 +54,11 @@ def test_whole_periods_see_the_duty():
     """An exposure of whole periods sees the duty wherever it begins."""
     start = np.linspace(-1, 1, 50)
     assert np.allclose(bright_share(start, 2.0, Waveform(0.3)), 0.3, atol=1e-12)
+
+
+def test_cycles_count_with_their_strength():
+    """An exposure over whole cycles sees the duty times their mean strength, also beyond those that are known."""
+    wave = Waveform(0.5, strengths=STEPPED)
+    assert bright_share(np.array([0.0]), 2.0, wave)[0] == pytest.approx(0.5 * (1.0 + 0.1) / 2)
+    assert bright_share(np.array([-3.0]), 2.0, wave)[0] == pytest.approx(0.5 * 0.3)
+    assert bright_share(np.array([4.25]), 1.0, wave)[0] == pytest.approx(0.5 * 0.6)
