@@ -36,14 +36,19 @@ class LapRecordings:
     events: int
 
 
-def make_recordings(sequences: Path, folder: Path, seed: int, progress: Progress, lap_recipe: str) -> LapRecordings:
-    """Synthesise both recordings into `folder`. `sequences` holds the recipes `board_quick` and `lap_recipe`."""
+def make_recordings(
+    sequences: Path, folder: Path, seed: int, progress: Progress, lap_recipe: str, duration_s: float | None = None
+) -> LapRecordings:
+    """Synthesise both recordings into `folder`. `sequences` holds the recipes `board_quick` and `lap_recipe`, whose lap
+    lasts `duration_s` where that is given."""
     board_recipe = load_recipe(sequences / "board_quick.toml")
     lap = load_recipe(sequences / f"{lap_recipe}.toml")
     if not isinstance(board_recipe, BoardRecipe) or not isinstance(lap, GreenhouseRecipe):
         raise OptionError(f"{sequences}: a board and a greenhouse recipe are required, got others")
     # One module in both: the same draw from the same seed.
     lap = lap.model_copy(update={"module_seed": seed, "truth": board_recipe.truth})
+    if duration_s is not None:
+        lap = lap.model_copy(update={"duration_s": duration_s})
     paths = folder / "board.h5", folder / "lap.h5"
     events = generate(board_recipe, paths[0], seed, lambda stage, part: progress("making the board recording", part))
     events += generate(lap, paths[1], seed, lambda stage, part: progress("making the greenhouse lap", part))

@@ -75,6 +75,23 @@ def bench_odometry(
     _finish("odometry", lambda progress: run_odometry_study(chosen, sequences, recipe, progress), out)
 
 
+@bench_app.command("verify")
+def bench_verify(
+    seeds: Seeds = 3,
+    first_seed: First = 1000,
+    recipe: Annotated[str, typer.Option(help="Greenhouse recipe in the folder sequences.")] = "greenhouse_moderate",
+    duration_s: Annotated[float, typer.Option(help="Seconds of motion.")] = 5.0,
+    out: Out = None,
+) -> None:
+    """Check modules in the field, unchanged and drifted, in bright and dim rooms. Exit code 1 where a limit fails."""
+    from hybridtrack.benchmark.verify_study import run_verify_study
+    from hybridtrack.examples import example_folder
+
+    chosen = list(range(first_seed, first_seed + seeds))
+    sequences = example_folder("sequences")
+    _finish("verify", lambda progress: run_verify_study(chosen, sequences, recipe, duration_s, progress), out)
+
+
 @bench_app.command("tracking")
 def bench_tracking(
     seeds: Seeds = 3,

@@ -21,6 +21,7 @@ from hybridtrack.cli.odometry_command import odometry_command
 from hybridtrack.cli.synthesise_command import synthesise_command
 from hybridtrack.cli.target_command import target_command
 from hybridtrack.cli.track_command import track_command
+from hybridtrack.cli.verify_command import verify_command
 from hybridtrack.errors import HybridtrackError
 
 app = typer.Typer(
@@ -40,6 +41,7 @@ app.command("ingest")(ingest_command)
 app.command("inspect")(inspect_command)
 app.command("guide")(guide_command)
 app.command("calibrate")(calibrate_command)
+app.command("verify")(verify_command)
 app.command("track")(track_command)
 app.command("odometry")(odometry_command)
 app.command("synthesise")(synthesise_command)
