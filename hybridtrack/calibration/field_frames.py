@@ -72,18 +72,20 @@ class FieldFrames:
 
     def velocity(self, index: int) -> Array:
         """Image velocity (H, W, 2) in colour px a ns, from the frames before and after."""
-        stamps = self.recording.frames.t_start_ns
-        total, span = 0.0, 0.0
+        stamps, here = self.recording.frames.t_start_ns, self.grey(index)
+        total, span = np.zeros((*here.shape, 2), np.float32), 0.0
         for other in (index - 1, index + 1):
             if 0 <= other < len(stamps):
-                self.light(index), self.light(other)
-                flow = self._flow.calc(
-                    self._grey[index], self._grey[other], np.zeros((*self._grey[index].shape, 2), np.float32)
-                )
+                flow = self._flow.calc(here, self.grey(other), np.zeros_like(total))
                 sign = float(np.sign(other - index))
-                total = total + sign * flow
+                total += np.float32(sign) * flow
                 span += sign * float(stamps[other] - stamps[index])
-        return np.asarray(total) * (self.module.frame_mode.binning / span)
+        return total * (self.module.frame_mode.binning / span)
+
+    def grey(self, index: int) -> Array:
+        """A frame as flow sees it."""
+        self.light(index)
+        return self._grey[index]
 
     def sampled(self, picture: Array, offset: tuple[float, float] = (0.0, 0.0)) -> Array:
         """A picture (H, W) or (H, W, C) at the event pixels, NaN outside."""
