@@ -56,6 +56,23 @@ def bench_calibration(
     _finish("calibration", lambda progress: run_calibration_study(chosen, targets, views, dwell_s, progress), out)
 
 
+@bench_app.command("contrast")
+def bench_contrast(
+    seeds: Seeds = 4,
+    first_seed: First = 1000,
+    views: Annotated[int, typer.Option(help="Views a recording.")] = 14,
+    dwell_s: Annotated[float, typer.Option(help="Seconds a view.")] = 0.7,
+    out: Out = None,
+) -> None:
+    """Calibrate modules from a target with several steps of light: thresholds, noise, maps. Exit code 1 on a limit."""
+    from hybridtrack.benchmark.contrast_study import run_contrast_study
+    from hybridtrack.examples import example_folder
+
+    chosen = list(range(first_seed, first_seed + seeds))
+    targets = example_folder("calib_targets")
+    _finish("contrast", lambda progress: run_contrast_study(chosen, targets, views, dwell_s, progress), out)
+
+
 @bench_app.command("odometry")
 def bench_odometry(
     seeds: Seeds = 3,
