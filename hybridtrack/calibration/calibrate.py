@@ -14,6 +14,7 @@ from typing import Any
 import numpy as np
 
 from hybridtrack.calibration.blink import Blink, find_blink
+from hybridtrack.calibration.clock_completion import CompletedTiming, complete_timing
 from hybridtrack.calibration.contrast import StepCounts, ThresholdFit, fit_thresholds
 from hybridtrack.calibration.defects import find_defects, quiet_counts, share_of_lamps
 from hybridtrack.calibration.event_light import EventSteps, event_steps
@@ -75,6 +76,7 @@ class CalibrationResult:
     thresholds: ThresholdFit
     settling: Settling
     findings: list[str]
+    completed: CompletedTiming | None = None
 
 
 def require_frames_of(recording: Recording, nominal: HybridModule) -> None:
@@ -189,7 +191,7 @@ def calibrate(
         frames.clocks, onset, nominal.frame_mode, target, measured.settings.nominal_offset_ns, measured.scanout_s
     )
     lens_fit, map_fit = geometry.lens_fit, geometry.map_fit
-    findings += blink_findings(blink, target) + frames.findings + timing.findings + geometry.findings
+    findings += blink_findings(blink, target) + frames.findings + geometry.findings
 
     tell("contrast", 0.85)
     module = geometry_module(nominal, lens_fit, map_fit)
@@ -206,6 +208,17 @@ def calibrate(
     ]
     placed = [(fold, view.steps) for fold, view in zip(folds, shown, strict=True) if view.steps is not None]
     placed_folds, placed_steps = [fold for fold, _ in placed], [step for _, step in placed]
+    seen_views = [view for view, show in zip(measured.kept_views, shown, strict=True) if show.steps is not None]
+    completed = complete_timing(
+        timing,
+        measured.recording,
+        list(zip(seen_views, placed_steps, strict=True)),
+        (blink, measured.flips.first_fire),
+        nominal,
+        target,
+    )
+    timing = completed.timing
+    findings += timing.findings
     everything, recording, kept_views = recording, measured.recording, measured.kept_views
     settling = measure_settling(recording, kept_views, folds, blink)
     quiet = quiet_counts(recording, kept_views, folds, blink, shape)
@@ -259,6 +272,7 @@ def calibrate(
         thresholds,
         settling,
         findings,
+        completed,
     )
 
 

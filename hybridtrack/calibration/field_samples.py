@@ -80,7 +80,8 @@ class FieldBlocks:
         before = row if mode.row_order == 1 else mode.height - 1 - row
         line = (timing.line_time_ns or 0.0) if mode.shutter == "rolling" else 0.0
         self.delay_ns = np.ascontiguousarray(before, float) * line
-        self.start_ns = timing.exposure_start_ns(table.t_start_ns, 0)
+        # Events are compared by their stamps: an exposure is as late among them as they are.
+        self.start_ns = timing.exposure_start_ns(table.t_start_ns, 0) + (timing.event_latency_ns or 0.0)
         self.length_ns = timing.true_exposure_ns(table.exposure_ns)
         self.origin_ns = int(table.t_start_ns[0])
 

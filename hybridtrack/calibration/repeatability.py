@@ -92,6 +92,16 @@ def _offset_difference(
     variance = [number.sigma**2 if number.sigma is not None else None for number in numbers]
     raw = end - start
     note = ""
+    if (before.event_latency_ns is None) != (after.event_latency_ns is None):
+        # One offset holds the latency, the other stands beside it: only the sums compare.
+        latency = "timing.event_latency_ns"
+        for k, module in enumerate(modules):
+            held = module.timing.event_latency_ns if module.timing is not None else None
+            if held is None:
+                continue
+            raw += held if k == 1 else -held
+            variance[k] = float(covariance_of(module, [name, latency]).sum())
+        note = "event latency included"
     drift = before.frame_drift_ppm
     if drift is not None and before.drift_epoch_ns is not None and after.drift_epoch_ns is not None:
         apart_ns = after.drift_epoch_ns - before.drift_epoch_ns
@@ -100,7 +110,8 @@ def _offset_difference(
         if variance[0] is not None and sigma is not None:
             cross = covariance_of(first, [name, "timing.frame_drift_ppm"])[0, 1]
             variance[0] += (sigma * 1e-6 * apart_ns) ** 2 + 2e-6 * apart_ns * cross
-        note = f"compared {apart_ns * 1e-9:.0f} s apart" if abs(apart_ns) > 1e9 else ""
+        if abs(apart_ns) > 1e9:
+            note = f"{note}, compared {apart_ns * 1e-9:.0f} s apart".lstrip(", ")
     sigma_ns = None if None in variance else float(np.sqrt(sum(variance)))  # type: ignore[arg-type]
     if period_ns is not None:
         periods = round(raw / period_ns)

@@ -12,6 +12,7 @@ Array = np.ndarray
 
 SWEPT_EXPOSURE_NS = 1000.0
 LATENCY_FINDING = "offset includes event latency"
+PERIODS_FINDING = "frame_offset_ns is known up to whole blink periods"
 
 
 @dataclass(frozen=True)
@@ -85,7 +86,7 @@ def timing_result(
     period = onset.blink.period_ns
     values["offset_ns"] = nearest_offset(values["offset_ns"], period, nominal_offset_ns)
     findings.append(
-        f"frame_offset_ns is known up to whole blink periods of {period * 1e-6:.3f} ms; the one nearest "
+        f"{PERIODS_FINDING} of {period * 1e-6:.3f} ms; the one nearest "
         f"{'the nominal value' if nominal_offset_ns else 'zero'} is given"
     )
     covariance = covariance.copy()

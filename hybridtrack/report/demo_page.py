@@ -27,7 +27,7 @@ def _true_offset_us(true: HybridModule, estimate: HybridModule) -> float:
     assert true.timing is not None
     assert estimate.timing is not None
     epoch_ns = (estimate.timing.drift_epoch_ns or 0) - (true.timing.drift_epoch_ns or 0)
-    latency = (true.timing.event_latency_ns or 0.0) - (estimate.timing.event_latency_ns or 0.0)
+    latency = (true.timing.event_latency_ns or 0.0) if estimate.timing.event_latency_ns is None else 0.0
     offset = true.timing.frame_offset_ns or 0.0
     return 1e-3 * (offset + latency + (true.timing.frame_drift_ppm or 0.0) * 1e-6 * epoch_ns)
 
@@ -45,6 +45,8 @@ def error_table(result: DemoResult) -> Table:
     assert estimate.colour_from_event is not None
     assert true.colour_from_event is not None
     offset = estimate.timing.frame_offset_ns
+    separated = estimate.timing.event_latency_ns is not None
+    offset_name = "frame offset" if separated else "frame offset with event latency"
     lines: list[tuple[str, str, float | None, float | None, str, float]] = [
         (f"lens {name}", f"lens.{name}", getattr(lens, name), getattr(true_lens, name), "px", 1.0)
         for name in ("fx", "fy", "cx", "cy")
@@ -55,7 +57,7 @@ def error_table(result: DemoResult) -> Table:
             estimate.colour_from_event.matrix[row][2], true.colour_from_event.matrix[row][2], "px", 1.0,
         ))  # fmt: skip
     lines += [
-        ("frame offset with event latency", "timing.frame_offset_ns", None if offset is None else offset * 1e-3,
+        (offset_name, "timing.frame_offset_ns", None if offset is None else offset * 1e-3,
          _true_offset_us(true, estimate), "us", 1e-3),
         ("line time", "timing.line_time_ns", (estimate.timing.line_time_ns or 0) * 1e-3,
          (true.timing.line_time_ns or 0) * 1e-3, "us", 1e-3),

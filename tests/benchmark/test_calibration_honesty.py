@@ -116,3 +116,14 @@ def test_the_score_of_the_truth_itself_is_naught() -> None:
     assert score.lens_rms_px == pytest.approx(0.0, abs=1e-9)
     assert score.offset_us == pytest.approx(0.0, abs=1e-9)
     assert not score.off_lattice
+
+
+def test_a_separated_latency_is_compared_with_its_own_truth() -> None:
+    """Offset and latency each err by what they are off, not by each other."""
+    truth = made_module({})
+    assert truth.timing is not None
+    true = truth.timing.model_copy(update={"event_latency_ns": 9e4})
+    fitted = truth.timing.model_copy(update={"event_latency_ns": 9.5e4, "frame_offset_ns": 1.497e6})
+    errors = clock_errors(truth.model_copy(update={"timing": fitted}), truth.model_copy(update={"timing": true}))
+    assert errors["frame_offset_ns"] == pytest.approx(-3e3)
+    assert errors["event_latency_ns"] == pytest.approx(5e3)

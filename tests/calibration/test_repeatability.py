@@ -117,3 +117,33 @@ def test_the_summary_is_plain(tmp_path) -> None:
     text = json.dumps(data, allow_nan=False)
     assert set(NAMES) <= set(json.loads(text)["numbers"])
     assert covariance().shape == (len(NAMES), len(NAMES))
+
+
+def test_offsets_with_and_without_latency_are_compared_by_their_sum() -> None:
+    """One calibration separated the latency, the other did not: the same sum does not differ."""
+    first, second = module_with(TRUTH), module_with(TRUTH)
+    assert second.timing is not None
+    assert second.uncertainty is not None
+    held = second.timing.frame_offset_ns or 0.0
+    timing = second.timing.model_copy(update={"frame_offset_ns": held - 9e4, "event_latency_ns": 9e4})
+    index = second.uncertainty.parameters.index("timing.frame_offset_ns")
+    size = len(second.uncertainty.parameters)
+    wide = np.zeros((size + 1, size + 1))
+    wide[:size, :size] = second.uncertainty.covariance
+    sum_variance = wide[index, index]
+    wide[index, index] += 15e3**2
+    wide[size, size] = 15e3**2
+    wide[index, size] = wide[size, index] = -(15e3**2)
+    uncertainty = second.uncertainty.model_copy(
+        update={
+            "parameters": [*second.uncertainty.parameters, "timing.event_latency_ns"],
+            "sigma": np.sqrt(np.diag(wide)).tolist(),
+            "covariance": wide.tolist(),
+        }
+    )
+    split = second.model_copy(update={"timing": timing, "uncertainty": uncertainty})
+    result = compare_calibrations(first, split, PERIOD_NS)
+    offset = next(d for d in result.differences if d.name == "timing.frame_offset_ns")
+    assert offset.difference == pytest.approx(0.0, abs=1e-6)
+    assert offset.sigma == pytest.approx(np.sqrt(2 * sum_variance))
+    assert "event latency included" in offset.note
