@@ -52,7 +52,7 @@ def contrast_scenario(targets: Path, seed: int, views: int, dwell_s: float) -> B
         "target": {"file": targets / "lamp_panel_levels.target.json"},
         "truth": {"mirror_x": "random", "mirror_y": "random", "clear_site": "random"},
         "views": {"count": views, "dwell_s": dwell_s, "tilt_max_deg": 35.0},
-        "light": {"cycles_per_level": 1 + seed // 2 % 4},
+        "light": {"cycles_per_level": 2 + seed // 2 % 3},
         "pixels": {"reference": PIXELS[seed % 2]},
     }
     recipe = recipe_from_data(data, f"contrast scenario {seed}")

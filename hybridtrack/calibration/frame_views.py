@@ -335,7 +335,7 @@ def fit_frames(settings: FrameSettings, recording: Recording, views: list[View],
     rows = second_rows(settings, recording, frames, demodulated)
     steps = None
     if settings.strengths is not None:
-        steps = find_light_steps(settings.model(rows), clocks, settings.strengths, views)
+        steps = find_light_steps(settings.model(rows), clocks, settings.strengths, views, settings.target)
         settings = replace(settings, strengths=steps.strengths)
     fit, findings = final_clocks(settings, rows, clocks)
     demodulated = [demodulate_view(settings, recording, fit.clocks, chosen) for chosen in frames]

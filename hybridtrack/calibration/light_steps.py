@@ -28,6 +28,7 @@ from hybridtrack.recording import Events, Recording
 Array = np.ndarray
 
 STRONG_PART = 0.8  # of a view's largest count of events a cycle: cycles that play the strongest step
+STRONG_GUESS, SEEN_WHOLE = 0.7, 0.2
 ROUNDS = 12
 TIGHT = 1e-4
 LEAST_GROUP = 0.12  # of the commonest step's cycles
@@ -125,6 +126,13 @@ def cycle_shares(model: ClockModel, clocks: Clocks, first: int, count: int) -> A
     return (bright_until(begin + length) - bright_until(begin)) / length[..., None]
 
 
+def scale_of(found: Array, guess: Array, information: Array) -> float:
+    """The strength (of C) to be called one: that of cycles which events take for the strongest and frames see whole."""
+    strongest = (guess > STRONG_GUESS) & (information > SEEN_WHOLE * information.max())
+    scale = float(np.median(found[strongest])) if np.any(strongest) else float(np.max(found))
+    return max(scale, 1e-9)
+
+
 def strengths_of_view(model: ClockModel, clocks: Clocks, first: int, guess: Array) -> tuple[Array, Array]:
     """Strengths (C,) and deviations (C,) of one view's cycles, whose rows are those of `model`, from a guess (C,)."""
     rows = model.rows
@@ -143,7 +151,7 @@ def strengths_of_view(model: ClockModel, clocks: Clocks, first: int, guess: Arra
         normal = design.T @ design
         ridge = 1e-7 * float(np.max(np.diag(normal))) + 1e-12
         found = np.linalg.solve(normal + ridge * np.eye(len(guess)), design.T @ signal + ridge * guess)
-        found /= max(float(np.quantile(found, 0.97)), 1e-9)
+        found /= scale_of(found, guess, np.diag(normal))
         change = float(np.max(np.abs(found - strength)))
         strength = found
         if change < TIGHT:
@@ -163,8 +171,20 @@ def gathered(values: Array, sigma: Array) -> list[Array]:
     return np.split(order, cuts)
 
 
-def find_light_steps(model: ClockModel, clocks: Clocks, guess: CycleStrengths, views: list[View]) -> LightSteps:
-    """Strengths of all cycles by the frames, gathered into steps.
+def merged(groups: list[Array], values: Array, most: int) -> list[Array]:
+    """Groups, falling in strength, joined with their nearest neighbour until no more than `most` are left."""
+    groups = list(groups)
+    while len(groups) > most:
+        middle = np.log(np.maximum([np.median(values[group]) for group in groups], 1e-4))
+        near = int(np.argmin(middle[:-1] - middle[1:]))
+        groups[near : near + 2] = [np.concatenate(groups[near : near + 2])]
+    return groups
+
+
+def find_light_steps(
+    model: ClockModel, clocks: Clocks, guess: CycleStrengths, views: list[View], target: Target
+) -> LightSteps:
+    """Strengths of all cycles by the frames, gathered into no more steps than the target has.
 
     `model.rows` are those of `views`, numbered by their place in the list. Raises DegenerateDataError where the frames
     do not resolve them.
@@ -186,12 +206,17 @@ def find_light_steps(model: ClockModel, clocks: Clocks, guess: CycleStrengths, v
     # The outermost cycle of a view may lie in no frame as a whole, and then passes for a step of its own.
     most = max(len(group) for group in groups)
     groups = [group for group in groups if len(group) >= max(3, LEAST_GROUP * most)]
+    groups = merged(groups, values, len(set(target.levels or [1.0])))
     step = np.full(len(values), -1)
     strength, deviation = np.zeros(len(groups)), np.zeros(len(groups))
     for number, group in enumerate(groups):
         step[group] = number
-        strength[number] = np.average(values[group], weights=sigma[group] ** -2.0)
+        strength[number] = np.median(values[group])
         deviation[number] = np.std(values[group]) / np.sqrt(len(group))
         values[group] = strength[number]
+    # What frames do not tell of a cycle is taken for the step that its events come nearest to.
+    unknown = np.flatnonzero(step < 0)
+    nearest = np.abs(guess.values[unknown, None] - strength / strength[0]).argmin(axis=1)
+    values[unknown] = strength[nearest]
     values, scale = values / strength[0], strength[0]
     return LightSteps(first, step, strength / scale, deviation / scale, CycleStrengths(first, values))

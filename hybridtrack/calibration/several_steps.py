@@ -5,7 +5,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from hybridtrack.calibration.blink import Blink
-from hybridtrack.calibration.comparator_fit import Comparator, ComparatorFit, Pixels, fit_comparator
+from hybridtrack.calibration.comparator_fit import Comparator, ComparatorFit, fit_comparator
 from hybridtrack.calibration.contrast import ThresholdFit
 from hybridtrack.calibration.event_light import EventSteps
 from hybridtrack.calibration.light_steps import LightSteps
@@ -21,20 +21,23 @@ Array = np.ndarray
 LEAST_OBSERVATIONS = 300
 USUAL = (0.3, 0.04, 0.05)  # threshold, relative spread and relative noise to start from where nothing is known
 KNOWN = 0.42  # a pixel's own threshold counts as known below this part of the spread from pixel to pixel
-UNLIKE = 4.0  # chi-square over freedom beyond which no model follows the curves
+SHORTEST_NS = 1e3
+UNLIKE = 3.0  # chi-square over freedom beyond which no model follows the curves
 STEP_DOUBT = 0.05  # log units between a step as stated and as measured that are worth a sentence
 SIMILAR_MODELS = 9.0
+HOPELESS = 8.0  # chi-square over freedom beyond which the curves are of something else
+BLACK_DN = 0.1  # what the black level may be off by
+METHOD = 0.004  # relative deviation of thresholds that more data do not lower
 NOISE_DOUBT = 0.5  # of the noise: its deviation beyond which it is not given
 
 
 @dataclass(frozen=True, eq=False)
 class SeveralSteps:
-    """What the steps tell: `answers` of all pixels, the `fit` of their curves, `maps`, the model pixels' `pixels`."""
+    """What the steps tell: `answers` of all pixels, the `fit` of their curves, and `maps`."""
 
     answers: StepAnswers
     fit: ComparatorFit
     maps: ThresholdMaps
-    pixels: Pixels
 
     @property
     def known(self) -> Array:
@@ -59,11 +62,12 @@ class StepsSeen:
     healthy: Array
 
 
-def start_of(fit: ThresholdFit, settling: Settling, model: str) -> Comparator:
+def start_of(fit: ThresholdFit, settling: Settling, dead_ns: float) -> Comparator:
     """First values from what the strongest step alone told."""
     on, off = fit.on or USUAL[0], fit.off or USUAL[0]
     spreads = ((fit.on_spread or 0.0) / on or USUAL[1], (fit.off_spread or 0.0) / off or USUAL[1])
-    return Comparator(on, off, *spreads, USUAL[2] * 0.5 * (on + off), settling.tau_off_ns or 0.0, model)
+    noise, dead_ns = USUAL[2] * 0.5 * (on + off), max(dead_ns, SHORTEST_NS)
+    return Comparator(on, off, *spreads, noise, settling.tau_off_ns or 0.0, dead_ns, "steps")
 
 
 def step_findings(target: Target, seen: StepAnswers, several: SeveralSteps) -> list[str]:
@@ -95,6 +99,14 @@ def step_findings(target: Target, seen: StepAnswers, several: SeveralSteps) -> l
     return findings
 
 
+def shared_deviation(seen: StepsSeen, data: StepAnswers) -> float:
+    """Relative deviation that all thresholds share: of the method, and of steps measured over an uncertain black
+    level."""
+    dark_dn = float(np.median(np.concatenate([light.dark_dn[np.isfinite(light.log_step)] for light in seen.light])))
+    log_step = float(np.log1p(np.median(data.swing)))
+    return float(np.hypot(METHOD, BLACK_DN / max(dark_dn, BLACK_DN) / log_step))
+
+
 def thresholds_from_steps(
     seen: StepsSeen, target: Target, first: ThresholdFit, settling: Settling, dead_ns: float
 ) -> ThresholdFit:
@@ -110,19 +122,25 @@ def thresholds_from_steps(
         )
         return replace(first, findings=[*first.findings, reason])
     period, duty = seen.blink.period_ns, seen.blink.duty
-    pixels = Pixels(dead_ns, (duty * period, (1.0 - duty) * period))
-    fit = fit_comparator(data, start_of(first, settling, "steps"), pixels)
-    maps = threshold_maps(data, fit, pixels, seen.healthy.shape)
-    several = SeveralSteps(data, fit, maps, pixels)
+    halves_ns = duty * period, (1.0 - duty) * period
+    fit = fit_comparator(data, start_of(first, settling, dead_ns), halves_ns)
+    if fit.chi_square > HOPELESS * fit.freedom:
+        reason = (
+            f"thresholds rest on the largest step of light alone: no model of the pixel makes of the others what these "
+            f"pixels make of them (chi-square {fit.chi_square / fit.freedom:.0f} a number)"
+        )
+        return replace(first, findings=[*first.findings, reason])
+    maps = threshold_maps(data, fit, halves_ns, seen.healthy.shape)
+    several = SeveralSteps(data, fit, maps)
     comparator = fit.comparator
-    noise_sigma = fit.sigma("noise")
+    noise_sigma, shared = fit.sigma("noise"), shared_deviation(seen, data)
     noise = (comparator.noise, noise_sigma) if noise_sigma < NOISE_DOUBT * comparator.noise else None
     return replace(
         first,
         on=comparator.on,
         off=comparator.off,
-        on_sigma=fit.sigma("on"),
-        off_sigma=fit.sigma("off"),
+        on_sigma=float(np.hypot(fit.sigma("on"), shared * comparator.on)),
+        off_sigma=float(np.hypot(fit.sigma("off"), shared * comparator.off)),
         on_spread=float(maps.spread[0] * comparator.on),
         off_spread=float(maps.spread[1] * comparator.off),
         on_map=maps.on,

@@ -12,7 +12,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from hybridtrack.calibration.comparator_fit import Comparator, ComparatorFit, Pixels, play_thresholds
+from hybridtrack.calibration.comparator_fit import Comparator, ComparatorFit, play_thresholds
 from hybridtrack.calibration.comparator_kernels import EVENTS
 from hybridtrack.calibration.step_curves import StepAnswers
 
@@ -66,7 +66,7 @@ def event_sums(answers: Array) -> Array:
 
 
 def view_model(
-    part: StepAnswers, comparator: Comparator, pixels: Pixels, logs: Array, seed: int
+    part: StepAnswers, comparator: Comparator, halves_ns: tuple[float, float], logs: Array, seed: int
 ) -> tuple[_ViewModel, Array]:
     """What thresholds do to the sums of one view, from model pixels in the light of `part` whose thresholds differ by
     `logs` (2, PLAYED) from the comparator's; and by how much the view alone misses them (PLAYED, 2).
@@ -77,7 +77,9 @@ def view_model(
     random = np.random.default_rng(seed)
     chosen = part.of(random.integers(0, len(part.swing), PLAYED))
     on, off = logs
-    played = play_thresholds(chosen, comparator.on * np.exp(on), comparator.off * np.exp(off), comparator, pixels, seed)
+    played = play_thresholds(
+        chosen, comparator.on * np.exp(on), comparator.off * np.exp(off), comparator, halves_ns, seed
+    )
     sums, log_step = event_sums(played), np.log1p(chosen.swing)
     design = np.column_stack([np.ones(PLAYED), on, off, log_step - log_step.mean()])
     found, *_ = np.linalg.lstsq(design, sums, rcond=None)
@@ -106,7 +108,7 @@ def robust_spread(values: Array) -> float:
 
 
 def pixel_estimates(
-    data: StepAnswers, fit: ComparatorFit, pixels: Pixels, size: int, seed: int
+    data: StepAnswers, fit: ComparatorFit, halves_ns: tuple[float, float], size: int, seed: int
 ) -> tuple[Array, Array, Array]:
     """Flat indices (K,) of the pixels seen, their log thresholds (K, 2) from the medians, with covariance (K, 2, 2)."""
     width = MARGIN * max(fit.comparator.on_spread, fit.comparator.off_spread, 0.01)
@@ -117,7 +119,7 @@ def pixel_estimates(
         own = data.of(data.view == view)
         if len(own.swing) < LEAST_PIXELS:
             continue
-        model, misses = view_model(own, comparator, pixels, logs, seed + int(view))
+        model, misses = view_model(own, comparator, halves_ns, logs, seed + int(view))
         scores, each = model.information(event_sums(own.answers), np.log1p(own.swing))
         score[own.pixel] += scores
         information[own.pixel] += each
@@ -153,11 +155,11 @@ def _polarity(estimate: Array, variance: Array, seen: Array, median: float, shap
 
 
 def threshold_maps(
-    data: StepAnswers, fit: ComparatorFit, pixels: Pixels, shape: tuple[int, int], seed: int = 5
+    data: StepAnswers, fit: ComparatorFit, halves_ns: tuple[float, float], shape: tuple[int, int], seed: int = 5
 ) -> ThresholdMaps:
     """Maps for a grid of `shape` (rows, columns) around the medians of `fit`."""
     size = shape[0] * shape[1]
-    seen, estimate, covariance = pixel_estimates(data, fit, pixels, size, seed)
+    seen, estimate, covariance = pixel_estimates(data, fit, halves_ns, size, seed)
     medians = (fit.comparator.on, fit.comparator.off)
     up, down = (_polarity(estimate[:, p], covariance[:, p, p], seen, medians[p], shape) for p in (0, 1))
     return ThresholdMaps(

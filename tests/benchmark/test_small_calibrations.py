@@ -85,32 +85,36 @@ def test_a_screen_that_sweeps(tmp_path: Path, direction: str) -> None:
     assert any("swept in 7.20" in finding for finding in result.findings)
 
 
-@pytest.mark.parametrize(("cycles", "levels"), [(3, [0.3, 0.7, 1.1, 1.6]), (1, [1.5, 0.45, 1.0])])
-def test_a_panel_with_steps_of_several_sizes(tmp_path: Path, cycles: int, levels: list[float]) -> None:
-    """Steps played in whatever order and for however long are found: thresholds to 2 %, geometry as from one step."""
+def test_a_panel_with_steps_of_several_sizes(tmp_path: Path) -> None:
+    """Steps played in whatever order and for however long are found: thresholds to what two seconds of a small module
+    allow and within their deviations, geometry as from one step."""
+    levels = [1.5, 0.45, 1.0]
     result, score = calibrated(
         tmp_path,
         "lamp_panel",
         5,
         {"levels": levels},
-        light={"cycles_per_level": cycles},
-        views={"count": 6, "dwell_s": 0.5, "between": "gap", "between_s": 0.05},
+        light={"cycles_per_level": 2},
+        views={"count": 6, "dwell_s": 0.4, "between": "gap", "between_s": 0.05},
     )
     assert score.mirror_right
     assert score.clear_site_right
     assert score.map_rms_px < 0.03
     assert score.nees["clocks"].value / score.nees["clocks"].freedom < 4.0
-    assert abs(score.on_percent) < 2.0
-    assert abs(score.off_percent) < 2.0
+    assert abs(score.on_percent) < 4.0
+    assert abs(score.off_percent) < 4.0
+    assert score.nees["thresholds"].value / score.nees["thresholds"].freedom < 4.0
     steps = result.frames.light_steps
     assert steps is not None
     expected = np.expm1(sorted(levels, reverse=True)) / np.expm1(max(levels))
     assert np.allclose(steps.strength, expected, atol=0.01)
     several, truth = result.thresholds.several, read_truth(tmp_path / "small.h5")
     assert several is not None
-    error = np.log(several.maps.on / truth.extras["on_threshold"])[several.known]
-    assert len(error) > 100
-    assert np.std(error) < 0.5 * np.std(np.log(truth.extras["on_threshold"]))
+    error = several.maps.on - truth.extras["on_threshold"]
+    seen = np.isfinite(error)
+    assert np.mean(seen) > 0.4
+    assert np.std(error[seen]) < 0.9 * np.std(truth.extras["on_threshold"])
+    assert 0.7 < np.std((error / several.maps.on_sigma)[seen]) < 1.3
 
 
 def test_steps_on_a_counterphase_target_are_refused(tmp_path: Path) -> None:
