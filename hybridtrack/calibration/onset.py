@@ -26,6 +26,8 @@ BEFORE_NS = 2_500_000.0
 AFTER_NS = 2_500_000.0
 QUANTILE = 0.01
 LEAST_EVENTS = 200
+WANDER = 0.1  # of the onset's rise: how far views shift as a whole, by light and load (measured: 5 to 12 %)
+WANDER_VIEWS = 4  # what that is worth, in views: few views may line up by chance
 
 
 @dataclass(frozen=True)
@@ -95,10 +97,13 @@ def onsets_of_view(recording: Recording, view: View, fold: ViewFold, blink: Blin
     return number, times + (flips - BEFORE_NS)[:, None]
 
 
-def regress(number: Array, onset_ns: Array, view: Array, centre: float) -> tuple[Array, Array, Array]:
+def regress(
+    number: Array, onset_ns: Array, view: Array, centre: float, wander_ns: float | None = None
+) -> tuple[Array, Array, Array]:
     """Robust line of onset over flip number: (intercept at `centre`, period), covariance (2, 2), residuals (K,).
 
     Huber weights; the covariance adds the scatter of flips and that of whole views, whose flips share light and load.
+    `wander_ns`: how far views are expected to shift; the scatter of a few views is drawn towards it.
     """
     design = np.column_stack([np.ones(len(number)), number - centre])
     weight = np.ones(len(number))
@@ -114,7 +119,10 @@ def regress(number: Array, onset_ns: Array, view: Array, centre: float) -> tuple
     covariance = np.linalg.inv(normal) * scale**2
     if len(groups) > 2:
         # Views that shift as a whole: the line is then one through the views' means.
-        covariance = covariance + np.linalg.inv(means.T @ means) * np.sum(shifts**2) / (len(groups) - 2)
+        variance, freedom = float(np.sum(shifts**2)), len(groups) - 2
+        if wander_ns is not None:
+            variance, freedom = variance + WANDER_VIEWS * wander_ns**2, freedom + WANDER_VIEWS
+        covariance = covariance + np.linalg.inv(means.T @ means) * variance / freedom
     return line, covariance, residual
 
 
@@ -137,7 +145,8 @@ def fit_onsets(recording: Recording, blink: Blink, views: list[View], folds: lis
             f"flips of {blink.hz:.2f} Hz have as many"
         )
     centre = float(np.round(number.mean()))
-    line, covariance, residual = regress(number, time[:, 1], view_of, centre)
+    rise_ns = float(np.median(time[:, 2] - time[:, 0]))
+    line, covariance, residual = regress(number, time[:, 1], view_of, centre, WANDER * rise_ns)
     period = float(line[1])
     scaling = np.diag([1.0, 1.0 / period])
     refined = replace(
@@ -150,7 +159,6 @@ def fit_onsets(recording: Recording, blink: Blink, views: list[View], folds: lis
     view_residual = np.array(
         [residual[view_of == k].mean() if np.any(view_of == k) else np.nan for k in range(len(views))]
     )
-    rise_ns = float(np.median(time[:, 2] - time[:, 0]))
     return OnsetFit(
         blink=refined,
         centre_ns=float(blink.epoch_ns + line[0]),

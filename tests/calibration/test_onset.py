@@ -55,6 +55,21 @@ def test_regression_is_honest_about_shared_shifts():
     assert np.std(errors) == pytest.approx(1.0, abs=0.3)
 
 
+def test_few_views_that_line_up_by_chance_are_not_believed():
+    """Of six views over two seconds some line up by chance; with the wander expected no error exceeds 4 deviations."""
+    rng = np.random.default_rng(6)
+    number = np.concatenate([np.arange(20) + 28 * v for v in range(6)]).astype(float)
+    view = np.repeat(np.arange(6), 20)
+    errors: dict[bool, list[float]] = {True: [], False: []}
+    for _ in range(400):
+        onset = 1.37e7 * number + 2e3 * rng.standard_normal(6)[view] + 500.0 * rng.standard_normal(120)
+        for expected in errors:
+            line, covariance, _ = regress(number, onset, view, 80.0, 2e3 if expected else None)
+            errors[expected].append(abs(line[1] - 1.37e7) / np.sqrt(covariance[1, 1]))
+    assert max(errors[True]) < 4.0 < max(errors[False])
+    assert 0.6 < np.mean(np.square(errors[True])) < 1.3
+
+
 def test_blinking_too_faint_to_date_is_refused(clean):
     """With no pixel inside set A no flip can be dated."""
     view = View(5_000_000_000, 5_400_000_000, 0.0, False)
