@@ -13,6 +13,7 @@ from hybridtrack.report.calibration_figures import (
     event_residual_figure,
 )
 from hybridtrack.report.contrast_figures import contrast_figures
+from hybridtrack.report.latency_figure import latency_figure
 from hybridtrack.report.page import BLINK_CAUTION, Figure, Page, Section, Table
 
 
@@ -81,6 +82,11 @@ def _map_rows(module: HybridModule) -> list[tuple[str, str, str, str]]:
 def _clock_rows(module: HybridModule) -> list[tuple[str, str, str, str]]:
     timing, sigma = module.timing, module.uncertainty
     assert timing is not None
+    latency = (
+        "not determined: contained in the frame offset"
+        if timing.event_latency_ns is None
+        else f"first event after light turns to {timing.reference_light_dn or 0.0:.0f} DN; not in the frame offset"
+    )
 
     def row(name: str, field: str, scale: float, unit: str, meaning: str) -> tuple[str, str, str, str]:
         value, deviation = getattr(timing, field), sigma.of(f"timing.{field}") if sigma else None
@@ -92,7 +98,8 @@ def _clock_rows(module: HybridModule) -> list[tuple[str, str, str, str]]:
         row("line time", "line_time_ns", 1e-3, "us", "from one row's exposure to the next"),
         row("exposure correction", "exposure_correction_ns", 1e-3, "us", "true exposure less stamped"),
         row("frame clock drift", "frame_drift_ppm", 1.0, "ppm", "against the event clock"),
-        row("event latency", "event_latency_ns", 1e-3, "us", "contained in the frame offset where not determined"),
+        row("event latency", "event_latency_ns", 1e-3, "us", latency),
+        row("row skew", "row_skew_ns", 1e-3, "us", "from one row's event stamps to the next row's, under this load"),
     ]
 
 
@@ -134,6 +141,7 @@ def calibration_figures(result: CalibrationResult) -> tuple[Figure, ...]:
     figures = [
         blink_figure(result, view) if view is not None else None,
         band_figure(result),
+        latency_figure(result),
         coverage_figure(result),
         event_residual_figure(result),
         *contrast_figures(result),
