@@ -15,9 +15,10 @@ class CalibrationScore:
 
     `map_rms_px`: displacement of the event map over the field, colour px. `focal_percent`: the worse of fx and
     fy. `offset_us`: frame offset against true offset plus true event latency, where the estimate includes it.
-    `offset_sigmas`: the same in stated deviations. Thresholds in percent of truth. `lens_rms_px`: displacement of the
-    lens over the field, orientation removed. `off_lattice`: whether the estimate says that the map is not the plain
-    lattice, and `off_lattice_true` whether it is not. `nees` of each block under the stated covariance.
+    `offset_sigmas`: the same in stated deviations. `latency_separated`: whether the estimate's offset excludes it.
+    Thresholds in percent of truth. `lens_rms_px`: displacement of the lens over the field, orientation removed.
+    `off_lattice`: whether the estimate says that the map is not the plain lattice, and `off_lattice_true` whether it is
+    not. `nees` of each block under the stated covariance.
     """
 
     mirror_right: bool
@@ -28,6 +29,7 @@ class CalibrationScore:
     line_time_percent: float
     offset_us: float
     offset_sigmas: float
+    latency_separated: bool
     exposure_us: float
     drift_ppm: float
     on_percent: float
@@ -85,6 +87,7 @@ def score_calibration(estimate: HybridModule, truth: HybridModule) -> Calibratio
         line_time_percent=_percent(estimate.timing.line_time_ns, truth.timing.line_time_ns),
         offset_us=offset_ns * 1e-3,
         offset_sigmas=offset_ns / sigma if sigma else float("nan"),
+        latency_separated=estimate.timing.event_latency_ns is not None,
         exposure_us=1e-3 * clocks.get("exposure_correction_ns", float("nan")),
         drift_ppm=clocks.get("frame_drift_ppm", float("nan")),
         on_percent=_percent(estimate.contrast.on_threshold, truth.contrast.on_threshold),
