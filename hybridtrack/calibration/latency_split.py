@@ -21,8 +21,8 @@ from hybridtrack.module import Target
 
 Array = np.ndarray
 
-# Delay of comparator and bus that light does not change: tens of microseconds (common practice, no source). No recording
-# of light shows it, so that it is as unsure as it is large: 0 to 0.1 ms lie within three deviations.
+# Delay of comparator and bus that light does not change: tens of microseconds (common practice, no source). No
+# recording of light shows it, so that it is as unsure as it is large: 0 to 0.1 ms lie within three deviations.
 CONSTANT_NS, CONSTANT_SIGMA_NS = 25_000.0, 25_000.0
 CURVE_FLOOR_NS = 2_000.0  # a bin of the curve
 WORST_CURVE_NS = 12_000.0  # a wider deviation of the intercept would spoil the offset
