@@ -5,7 +5,7 @@ more a cycle lets loose, the larger its step. Frames then say: under known clock
 
     s = a + b sum_c strength_c f_c,      f_c = share of the row's exposure that falls on the bright part of cycle c,
 
-linear in the strengths for given a, b and the other way round, so that the two are solved in turn. Strengths gather
+linear in the strengths, a and b being projected out as for the clocks. Strengths gather
 around as many values as there are steps. All are in parts of the strongest step of their view; how large that one was
 the pictures of the view show.
 """
@@ -29,8 +29,10 @@ Array = np.ndarray
 
 STRONG_PART = 0.8  # of a view's largest count of events a cycle: cycles that play the strongest step
 STRONG_GUESS, SEEN_WHOLE = 0.7, 0.2
-ROUNDS = 12
+ROUNDS = 40
 TIGHT = 1e-4
+KNOWN, LEAST_TOLD = 0.05, 0.6
+SEVERAL = 0.12  # spread of the strengths by events above which one step of light cannot be all
 LEAST_GROUP = 0.12  # of the commonest step's cycles
 LEAST_GAP, GAP_PART, GAP_SIGMA = 0.004, 0.04, 8.0
 
@@ -136,30 +138,47 @@ def scale_of(found: Array, guess: Array, information: Array) -> float:
 def strengths_of_view(model: ClockModel, clocks: Clocks, first: int, guess: Array) -> tuple[Array, Array]:
     """Strengths (C,) and deviations (C,) of one view's cycles, whose rows are those of `model`, from a guess (C,)."""
     rows = model.rows
-    share = cycle_shares(model, clocks, first, len(guess))
-    weight = rows.weight**2
-    strength = guess.copy()
-    for _ in range(ROUNDS):
+    share, weight = cycle_shares(model, clocks, first, len(guess)), rows.weight**2
+    total = np.maximum(weight.sum(axis=1), 1e-300)[:, None, None]
+    share = share - np.sum(share * weight[..., None], axis=1, keepdims=True) / total
+    eye, strongest = np.eye(len(guess)), (guess > STRONG_GUESS * guess.max()).astype(float)
+
+    def left_of(strength: Array) -> tuple[Array, Array, Array]:
         gain, residual, centred = project(rows, share @ strength)
-        # Shares about their mean over a row's frames: a drops out.
-        mean = np.sum(share * weight[..., None], axis=1, keepdims=True) / np.maximum(
-            weight.sum(axis=1), 1e-300
-        ).reshape(-1, 1, 1)
-        design = (share - mean) * (gain * rows.weight)[..., None]
-        signal = ((residual + gain * centred) * rows.weight).ravel()
-        design = design.reshape(-1, len(guess))
+        return gain, (residual * rows.weight).ravel(), centred
+
+    def sensitivity(gain: Array, centred: Array) -> Array:
+        """Of the residuals (R N, C): what a and b take up of a change of strengths is taken off (Kaufman 1975)."""
+        along = np.einsum("rn,rn,rnc->rc", weight, centred, share)
+        spread = np.maximum(np.sum(weight * centred**2, axis=1), 1e-300)
+        design = share - (along / spread[:, None])[:, None, :] * centred[..., None]
+        return (design * (gain * rows.weight)[..., None]).reshape(-1, len(guess))
+
+    strength, damping = guess / scale_of(guess, guess, np.ones(len(guess))), 1e-3
+    gain, left, centred = left_of(strength)
+    for _ in range(ROUNDS):
+        design = sensitivity(gain, centred)
         normal = design.T @ design
-        ridge = 1e-7 * float(np.max(np.diag(normal))) + 1e-12
-        found = np.linalg.solve(normal + ridge * np.eye(len(guess)), design.T @ signal + ridge * guess)
-        found /= scale_of(found, guess, np.diag(normal))
-        change = float(np.max(np.abs(found - strength)))
-        strength = found
+        largest = float(np.max(np.diag(normal)))
+        # All strengths times a factor is the same signal: the mean of the strongest is held, and what no frame saw.
+        normal += largest * np.outer(strongest, strongest) + 1e-6 * largest * eye
+        size = np.diag(normal)
+        found = np.maximum(strength + np.linalg.solve(normal + damping * size * eye, design.T @ left), 0.0)
+        after = left_of(found)
+        if after[1] @ after[1] >= left @ left:
+            damping *= 8.0
+            if damping > 1e4:
+                break
+            continue
+        found = found / scale_of(found, guess, np.diag(normal))
+        change, strength = float(np.max(np.abs(found - strength))), found
+        gain, left, centred = left_of(strength)
+        damping = max(damping / 5.0, 1e-6)
         if change < TIGHT:
             break
-    left = signal - design @ strength
     freedom = int(np.count_nonzero(rows.weight)) - 2 * len(rows.row) - len(guess)
     variance = float(left @ left) / max(freedom, 1)
-    return strength, np.sqrt(variance * np.diag(np.linalg.inv(normal + ridge * np.eye(len(guess)))))
+    return strength, np.sqrt(variance * np.diag(np.linalg.inv(normal)))
 
 
 def gathered(values: Array, sigma: Array) -> list[Array]:
@@ -181,6 +200,19 @@ def merged(groups: list[Array], values: Array, most: int) -> list[Array]:
     return groups
 
 
+def require_steps_of_events(groups: list[Array], guess: Array, within: Array) -> None:
+    """Raise DegenerateDataError where frames tell too few of the cycles `within` views, or one step (`groups` of
+    cycles) where events plainly show several."""
+    share = sum(len(group) for group in groups) / max(len(within), 1)
+    spread = float(np.std(guess[within]))
+    if share < LEAST_TOLD or (len(groups) == 1 and spread > SEVERAL):
+        raise DegenerateDataError(
+            "the steps of light of a target with several levels must show in the frames as in the events: frames tell "
+            f"{len(groups)} of them in {100 * share:.0f} % of the cycles (at least {100 * LEAST_TOLD:.0f} % are "
+            f"required), and by events cycles differ by {100 * spread:.0f} % of the largest; a longer exposure shows more cycles"
+        )
+
+
 def find_light_steps(
     model: ClockModel, clocks: Clocks, guess: CycleStrengths, views: list[View], target: Target
 ) -> LightSteps:
@@ -191,12 +223,14 @@ def find_light_steps(
     """
     first, values, sigma = guess.first, guess.values.copy(), np.full(len(guess.values), np.inf)
     known: list[Array] = []
+    within: list[Array] = []
     for k in np.unique(model.rows.view):
         own = ClockModel(model.rows[model.rows.view == k], model.blink, model.rise, model.fall, model.drift_epoch_ns)
         start, end = view_cycles(views[int(k)], model.blink)
         inside = np.arange(max(start - first, 0), min(end - first, len(values)))
         values[inside], sigma[inside] = strengths_of_view(own, clocks, start, guess.values[inside])
-        known.append(inside[sigma[inside] < 0.05])
+        known.append(inside[sigma[inside] < KNOWN])
+        within.append(inside)
     cycles = np.concatenate(known) if known else np.zeros(0, int)
     if not len(cycles):
         raise DegenerateDataError(
@@ -207,6 +241,7 @@ def find_light_steps(
     most = max(len(group) for group in groups)
     groups = [group for group in groups if len(group) >= max(3, LEAST_GROUP * most)]
     groups = merged(groups, values, len(set(target.levels or [1.0])))
+    require_steps_of_events(groups, guess.values, np.concatenate(within))
     step = np.full(len(values), -1)
     strength, deviation = np.zeros(len(groups)), np.zeros(len(groups))
     for number, group in enumerate(groups):
