@@ -208,8 +208,8 @@ def require_steps_of_events(groups: list[Array], guess: Array, within: Array) ->
     if share < LEAST_TOLD or (len(groups) == 1 and spread > SEVERAL):
         raise DegenerateDataError(
             "the steps of light of a target with several levels must show in the frames as in the events: frames tell "
-            f"{len(groups)} of them in {100 * share:.0f} % of the cycles (at least {100 * LEAST_TOLD:.0f} % are "
-            f"required), and by events cycles differ by {100 * spread:.0f} % of the largest; a longer exposure shows more cycles"
+            f"{len(groups)} of them in {100 * share:.0f} % of the cycles, where {100 * LEAST_TOLD:.0f} % are required, "
+            f"and by events cycles differ by {100 * spread:.0f} % of the largest; a longer exposure shows more cycles"
         )
 
 

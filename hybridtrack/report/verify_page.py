@@ -29,23 +29,29 @@ def verify_table(result: FieldCheck) -> Table:
 
 
 def shift_figure(result: FieldCheck) -> Figure:
-    """The map's shift with its 95 % ellipse, the shifts by single stretches, and the limit."""
+    """The map's shift with its 95 % ellipse, the shifts by single stretches over place and time, and the limit."""
     turn = np.linspace(0, 2 * np.pi, 200)
     values, vectors = np.linalg.eigh(result.covariance)
     ring = vectors @ (np.sqrt(5.991 * values)[:, None] * np.stack([np.cos(turn), np.sin(turn)]))
     stretches = result.stretch_px[np.isfinite(result.stretch_px).all(axis=1)]
     caption = (
         "Shift of the event map since calibration, in colour px: estimate with its 95 % ellipse, and what single "
-        f"stretches of the recording say (small points). Dashed: the shift of {MAP_LIMIT_PX:g} px that matters."
+        f"stretches of the recording say (points). Dashed: the shift of {MAP_LIMIT_PX:g} px that matters."
     )
-    with drawing("map-shift", caption, height_in=3.2) as sheet:
-        sheet.axes.plot(MAP_LIMIT_PX * np.cos(turn), MAP_LIMIT_PX * np.sin(turn), "--", color=SERIES[3], lw=1)
-        sheet.axes.plot(stretches[:, 0], stretches[:, 1], ".", ms=4, alpha=0.5, color=SERIES[0])
-        sheet.axes.plot(*(result.shift_px[:, None] + ring), color=SERIES[1])
-        sheet.axes.plot(*result.shift_px, "+", ms=9, mew=1.6, color=SERIES[1])
+    with drawing("map-shift", caption, wide=True, columns=2, height_in=3.2) as sheet:
+        place, time = sheet.axes
+        place.plot(MAP_LIMIT_PX * np.cos(turn), MAP_LIMIT_PX * np.sin(turn), "--", color=SERIES[3], lw=1)
+        place.plot(stretches[:, 0], stretches[:, 1], ".", ms=4, alpha=0.5, color=SERIES[0])
+        place.plot(*(result.shift_px[:, None] + ring), color=SERIES[1])
+        place.plot(*result.shift_px, "+", ms=9, mew=1.6, color=SERIES[1])
         reach = 1.3 * max(MAP_LIMIT_PX, float(np.abs(result.shift_px).max() + np.abs(ring).max()))
-        sheet.axes.set(xlim=(-reach, reach), ylim=(reach, -reach), xlabel="across, px", ylabel="down, px")
-        sheet.axes.set_aspect("equal")
+        place.set(xlim=(-reach, reach), ylim=(reach, -reach), xlabel="across, px", ylabel="down, px")
+        place.set_aspect("equal")
+        for axis, name, colour in ((0, "across", SERIES[0]), (1, "down", SERIES[1])):
+            time.plot(result.stretch_px[:, axis], ".-", ms=4, lw=0.8, color=colour, label=name)
+            time.axhline(result.shift_px[axis], color=colour, lw=0.8, ls=":")
+        time.set(xlabel="stretch of the recording", ylabel="shift, px", ylim=(-reach, reach))
+        time.legend(loc="upper right")
     return finished(sheet)
 
 
