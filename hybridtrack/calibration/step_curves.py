@@ -7,7 +7,7 @@ import numpy as np
 
 from hybridtrack.calibration.blink import Blink
 from hybridtrack.calibration.event_light import EventSteps
-from hybridtrack.calibration.kernels import fold_steps
+from hybridtrack.calibration.kernels import count_flips
 from hybridtrack.calibration.light_steps import LightSteps, view_cycles
 from hybridtrack.calibration.views import View
 from hybridtrack.recording import Recording
@@ -15,6 +15,7 @@ from hybridtrack.recording import Recording
 Array = np.ndarray
 
 LEAST_SWING = 0.3
+OBSERVED = ("pixel", "view", "swing", "answers", "counts")
 EDGE_PX = 2.0  # colour px from a square's edge
 
 
@@ -24,7 +25,8 @@ class StepAnswers:
 
     `pixel` (M,) flat index, `view` (M,); `swing` (M,): step of light over dark light of the strongest step; `flips`
     (V, S) of each view; `answers` (M, S, 2, 3): ON and OFF events, flips with any, sums of squared counts. `start`,
-    `length` (V,): where the views' cycles lie in `strength` and `step` (C,), step -1 unknown; `step_strength` (S,).
+    `length` (V,): where the views' cycles lie in `strength` and `step` (C,), step -1 unknown; `step_strength` (S,);
+    `counts` (M, C, 2) uint8: ON and OFF events of every flip of the observation's view.
     """
 
     pixel: Array
@@ -37,10 +39,11 @@ class StepAnswers:
     strength: Array
     step: Array
     step_strength: Array
+    counts: Array
 
     def of(self, chosen: Array) -> "StepAnswers":
         """The observations selected by a mask or index array."""
-        return replace(self, **{name: getattr(self, name)[chosen] for name in ("pixel", "view", "swing", "answers")})
+        return replace(self, **{name: getattr(self, name)[chosen] for name in OBSERVED})
 
     @property
     def log_step(self) -> Array:
@@ -62,18 +65,24 @@ class StepCurves:
     scatter_sigma: Array
 
 
-def answers_of_view(recording: Recording, view: View, blink: Blink, steps: LightSteps, shape: tuple[int, int]) -> Array:
-    """Answers (S, 2, 3, rows, columns) of all pixels to the steps of one view."""
-    out = np.zeros((len(steps.strength), 2, 3, *shape), np.uint32)
-    last, run = np.full((2, *shape), -1, np.int64), np.zeros((2, *shape), np.int64)
-    step = steps.step.copy()
-    first, end = view_cycles(view, blink)
-    cycle = steps.first + np.arange(len(step))
-    step[(cycle < first) | (cycle >= end)] = -1
-    for events in recording.event_blocks(view.t0_ns, view.t1_ns):
+def flips_of_view(
+    recording: Recording, blink: Blink, view: View, cycles: tuple[int, int], shape: tuple[int, int]
+) -> Array:
+    """Events (C, 2, rows, columns) uint8 of all pixels at the flips of whole `cycles` (first, end) of a view."""
+    out = np.zeros((max(cycles[1] - cycles[0], 0), 2, *shape), np.uint8)
+    phase = blink.epoch_phase + blink.fold_lead
+    for events in recording.event_blocks(view.t0_ns, view.t1_ns, check_order=False):
         columns = events.t, events.x, events.y, events.on
-        phase = blink.epoch_phase + blink.fold_lead
-        fold_steps(*columns, blink.epoch_ns, phase, blink.hz, blink.duty, steps.first, step, last, run, out)
+        count_flips(*columns, blink.epoch_ns, phase, blink.hz, blink.duty, cycles[0], out)
+    return out
+
+
+def answers_of_flips(counts: Array, step: Array, steps: int) -> Array:
+    """Answers (M, S, 2, 3) from the counts (M, C, 2) of flips whose cycles played `step` (C,)."""
+    out = np.zeros((len(counts), steps, 2, 3), np.int32)
+    for number in range(steps):
+        own = counts[:, step == number].astype(np.int32)
+        out[:, number] = np.stack([own.sum(axis=1), (own > 0).sum(axis=1), (own**2).sum(axis=1)], axis=-1)
     return out
 
 
@@ -92,19 +101,23 @@ def step_answers(
     parts, flips, start, length = [], [], [], []
     for number, (view, light) in enumerate(zip(views, seen, strict=True)):
         first, end = view_cycles(view, blink)
-        start.append(max(first - steps.first, 0))
-        length.append(min(end - steps.first, len(steps.step)) - start[-1])
+        first, end = max(first, steps.first), min(end, steps.first + len(steps.step))
+        start.append(first - steps.first)
+        length.append(max(end - first, 0))
         own = steps.step[start[-1] : start[-1] + length[-1]]
         flips.append(np.bincount(own[own >= 0], minlength=len(steps.strength)))
         log_step = steps_inside(light)
         with np.errstate(invalid="ignore"):
             known = healthy & (log_step > LEAST_SWING)
-        answers = answers_of_view(recording, view, blink, steps, healthy.shape)[..., known]
+        counts = np.moveaxis(flips_of_view(recording, blink, view, (first, end), healthy.shape)[..., known], -1, 0)
         swing = np.expm1(log_step[known])
-        parts.append((np.flatnonzero(known.ravel()), np.full(len(swing), number), swing, np.moveaxis(answers, -1, 0)))
-    pixel, view_of, swing, answers = (np.concatenate(column) for column in zip(*parts, strict=True))
+        answers = answers_of_flips(counts, own, len(steps.strength))
+        parts.append((np.flatnonzero(known.ravel()), np.full(len(swing), number), swing, answers, counts))
+    longest = max(length)
+    padded = [np.pad(part[4], ((0, 0), (0, longest - part[4].shape[1]), (0, 0))) for part in parts]
+    pixel, view_of, swing, answers = (np.concatenate([part[k] for part in parts]) for k in range(4))
     where = np.array(start), np.array(length), steps.strengths.values, steps.step
-    return StepAnswers(pixel, view_of, swing, np.array(flips), answers.astype(np.int32), *where, steps.strength)
+    return StepAnswers(pixel, view_of, swing, np.array(flips), answers, *where, steps.strength, np.concatenate(padded))
 
 
 def view_curves(answers: Array, flips: Array) -> Array:

@@ -14,6 +14,7 @@ import numpy as np
 
 from hybridtrack.calibration.comparator_fit import Comparator, ComparatorFit, play_thresholds
 from hybridtrack.calibration.comparator_kernels import EVENTS
+from hybridtrack.calibration.pixel_kernels import climb
 from hybridtrack.calibration.step_curves import StepAnswers
 
 Array = np.ndarray
@@ -21,6 +22,10 @@ Array = np.ndarray
 PLAYED = 2000  # model pixels a view
 MARGIN = 1.2  # their spread over that of the real ones
 LEAST_PIXELS = 50
+NARROWING = np.array([0.4, 0.33, 0.27, 0.2, 0.17, 0.13, 0.1, 0.08, 0.07])  # of the threshold: noise of the first rounds
+FINAL_ROUNDS = 8
+STEP_NOISE = 0.004  # relative deviation of the step of light that a pixel saw
+LEAST_SPREAD = 0.005
 LEAST_VARIANCE = 0.2  # of a sum: no model is trusted beyond half an event
 
 
@@ -154,19 +159,42 @@ def _polarity(estimate: Array, variance: Array, seen: Array, median: float, shap
     return _Polarity(thresholds, sigma, float(np.sqrt(spread2)), doubt / (2.0 * float(np.sqrt(spread2))))
 
 
+def climbed(data: StepAnswers, fit: ComparatorFit, spread: Array, shape: tuple[int, int]) -> ThresholdMaps:
+    """Maps from every flip's count, where the reference moves by one threshold an event and is known with the counts.
+
+    `spread` (2,): relative, from pixel to pixel; it draws thresholds towards the medians `fit` found.
+    """
+    order = np.lexsort((data.view, data.pixel))
+    seen, begin = np.unique(data.pixel[order], return_index=True)
+    found, covariance = np.zeros((len(seen), 2)), np.zeros((len(seen), 2, 2))
+    median, noise = np.array([fit.comparator.on, fit.comparator.off]), fit.comparator.noise
+    sigmas = np.maximum(np.concatenate([NARROWING * median.mean(), np.zeros(FINAL_ROUNDS)]), noise)
+    climb(
+        np.append(begin, len(order)), data.swing[order], data.view[order], data.start, data.length, data.strength,
+        np.ascontiguousarray(data.counts[order, :, 0]), np.ascontiguousarray(data.counts[order, :, 1]), median,
+        spread * median, sigmas, STEP_NOISE, found, covariance,
+    )  # fmt: skip
+    planes = []
+    for values in (found[:, 0], found[:, 1], np.sqrt(covariance[:, 0, 0]), np.sqrt(covariance[:, 1, 1])):
+        plane = np.full(shape, np.nan)
+        plane.flat[seen] = values
+        planes.append(plane)
+    on, off, on_sigma, off_sigma = planes
+    return ThresholdMaps(on, off, on_sigma, off_sigma, spread, np.zeros(2))
+
+
 def threshold_maps(
     data: StepAnswers, fit: ComparatorFit, halves_ns: tuple[float, float], shape: tuple[int, int], seed: int = 5
 ) -> ThresholdMaps:
-    """Maps for a grid of `shape` (rows, columns) around the medians of `fit`."""
+    """Maps for a grid of `shape` (rows, columns) around the medians of `fit`.
+
+    Sums over the steps of each view give the spread; where the reference steps, every flip then gives the pixels.
+    """
     size = shape[0] * shape[1]
     seen, estimate, covariance = pixel_estimates(data, fit, halves_ns, size, seed)
     medians = (fit.comparator.on, fit.comparator.off)
     up, down = (_polarity(estimate[:, p], covariance[:, p, p], seen, medians[p], shape) for p in (0, 1))
-    return ThresholdMaps(
-        up.thresholds,
-        down.thresholds,
-        up.sigma,
-        down.sigma,
-        np.array([up.spread, down.spread]),
-        np.array([up.spread_sigma, down.spread_sigma]),
-    )
+    spread, doubt = np.array([up.spread, down.spread]), np.array([up.spread_sigma, down.spread_sigma])
+    if fit.comparator.model == "steps":
+        return replace(climbed(data, fit, np.maximum(spread, LEAST_SPREAD), shape), spread_sigma=doubt)
+    return ThresholdMaps(up.thresholds, down.thresholds, up.sigma, down.sigma, spread, doubt)
