@@ -44,7 +44,7 @@ class Change:
         offset = (timing.frame_offset_ns or 0.0) - 1e6 * self.clock_ms
         return module.model_copy(
             update={
-                "colour_from_event": event_map.model_copy(update={"matrix": matrix.tolist()}),
+                "colour_from_event": event_map.model_copy(update={"matrix": tuple(map(tuple, matrix.tolist()))}),
                 "timing": timing.model_copy(update={"frame_offset_ns": offset}),
             }
         )
