@@ -14,6 +14,7 @@ from typing import Any
 import numpy as np
 
 from hybridtrack.benchmark.baseline import track_baseline
+from hybridtrack.benchmark.live_replay import LiveReplay, replay_live
 from hybridtrack.benchmark.metrics import SURVIVES_WITHIN_PX, Interval, bootstrap, seed_survives
 from hybridtrack.benchmark.study import Check, Study
 from hybridtrack.benchmark.tracking_truth import Ride, make_ride, track_oracle
@@ -155,6 +156,15 @@ def follow_ride(ride: Ride, modes: tuple[str, ...], progress: Progress) -> dict[
     return found
 
 
+def live_checks(speed_px_s: float, live: LiveReplay) -> list[Check]:
+    """Whether the hybrid tracker keeps up with a recording that comes live, and how late its updates are."""
+    at = f"at {speed_px_s:.0f} px/s and {1e-6 * live.events_hz:.1f} million events a second"
+    return [
+        Check(f"real-time factor {at}", live.realtime_factor, 1.0, at_least=True),
+        Check(f"lateness of updates {at}, 95th percentile", live.late_ms, 5.0, "ms"),
+    ]
+
+
 def joined(parts: list[dict[str, Followed]]) -> dict[str, Followed]:
     """Join rides of one speed."""
     out = {}
@@ -266,7 +276,7 @@ def run_tracking_study(
         raise OptionError(f"{sequences}: greenhouse_reversing.toml must be a greenhouse recipe")
     recipe = recipe.model_copy(update=changes)
     modes = ALL if oracle else ALL[:-1]
-    results = []
+    results, live = [], []
     for speed in sorted(speeds_px_s):
         parts, medians = [], []
         for seed in seeds:
@@ -284,6 +294,10 @@ def run_tracking_study(
                 assert truth is not None
                 parts.append(follow_ride(ride, modes, show))
                 medians.append(ride.speed_px_s)
+                if seed == seeds[0]:
+                    with Recording.open(path) as opened:
+                        replay = replay_live(opened, truth, TrackerOptions(detect=False), ride.points)
+                    live += live_checks(ride.speed_px_s, replay)
         results.append(SpeedResult(speed, float(np.mean(medians)), joined(parts)))
     breakdown = breakdown_speed(results)
     return TrackingStudy(
@@ -291,7 +305,7 @@ def run_tracking_study(
             title=f"Tracking over {len(seeds)} scenes at {len(results)} speeds",
             columns=COLUMNS,
             rows=tuple(row for result in results for row in _rows(result)),
-            checks=tuple(_checks(results, breakdown)),
+            checks=(*_checks(results, breakdown), *live),
             notes=(
                 _circumstances(recipe),
                 "breakdown speed of the baseline: "

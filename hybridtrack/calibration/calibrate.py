@@ -188,7 +188,13 @@ def calibrate(
     onset, frames, geometry = measured.flips.onset, measured.frames, measured.geometry
     blink, images, folds = onset.blink, measured.images, measured.folds
     timing = timing_result(
-        frames.clocks, onset, nominal.frame_mode, target, measured.settings.nominal_offset_ns, measured.scanout_s
+        frames.clocks,
+        onset,
+        nominal.frame_mode,
+        target,
+        measured.settings.nominal_offset_ns,
+        measured.scanout_s,
+        periods_known=measured.light_steps is not None and len(measured.light_steps.strength) > 1,
     )
     lens_fit, map_fit = geometry.lens_fit, geometry.map_fit
     findings += blink_findings(blink, target) + frames.findings + geometry.findings

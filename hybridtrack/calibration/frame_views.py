@@ -39,6 +39,7 @@ from hybridtrack.recording import FrameTable, Recording
 Array = np.ndarray
 
 LEAST_EXPLAINED = 0.5
+STEPS_EXPLAINED = 0.9
 LEAST_CORRELATION = 0.35
 DELAY_STEPS = 192
 FIRST_BAND_CYCLES = 1.0 / 20.0
@@ -338,6 +339,12 @@ def fit_frames(settings: FrameSettings, recording: Recording, views: list[View],
         steps = find_light_steps(settings.model(rows), clocks, settings.strengths, views, settings.target)
         settings = replace(settings, strengths=steps.strengths)
     fit, findings = final_clocks(settings, rows, clocks)
+    if steps is not None and fit.explained < STEPS_EXPLAINED:
+        raise DegenerateDataError(
+            "the frames must show the steps of light of a target with several levels: a share of "
+            f"{STEPS_EXPLAINED:g} of their rows' variance is required to follow {len(steps.strength)} steps, got "
+            f"{max(fit.explained, 0.0):.2f}; more frames a view, or a shorter exposure, tell more"
+        )
     demodulated = [demodulate_view(settings, recording, fit.clocks, chosen) for chosen in frames]
     used = [c if d is None else c[d.kept] for c, d in zip(frames, demodulated, strict=True)]
     return FrameViews(demodulated, used, fit, rows, agreement, findings, steps)

@@ -69,10 +69,12 @@ def timing_result(
     target: Target,
     nominal_offset_ns: float,
     scanout_s: tuple[float, float] | None = None,
+    periods_known: bool = False,
 ) -> TimingResult:
     """Timing block, joint covariance of its parameters, and findings.
 
     `scanout_s`: how long a screen's sweep was found to take, with its deviation; it is counted in already.
+    `periods_known`: cycles differ in their step of light, so that whole blink periods were told apart.
     """
     values, covariance, free = transform(fit, mode.height)
     findings = [LATENCY_FINDING]
@@ -84,11 +86,12 @@ def timing_result(
             "other way and is corrected"
         )
     period = onset.blink.period_ns
-    values["offset_ns"] = nearest_offset(values["offset_ns"], period, nominal_offset_ns)
-    findings.append(
-        f"{PERIODS_FINDING} of {period * 1e-6:.3f} ms; the one nearest "
-        f"{'the nominal value' if nominal_offset_ns else 'zero'} is given"
-    )
+    if not periods_known:
+        values["offset_ns"] = nearest_offset(values["offset_ns"], period, nominal_offset_ns)
+        findings.append(
+            f"{PERIODS_FINDING} of {period * 1e-6:.3f} ms; the one nearest "
+            f"{'the nominal value' if nominal_offset_ns else 'zero'} is given"
+        )
     covariance = covariance.copy()
     offset = free.index("offset_ns")
     # The drift's epoch need not be the centre of the flips: the blink clock's error between them counts too.

@@ -74,7 +74,7 @@ def test_a_shuttered_panel(tmp_path: Path) -> None:
     assert_good(score)
 
 
-@pytest.mark.parametrize("direction", ["down", "left"])
+@pytest.mark.parametrize("direction", [pytest.param("down", marks=pytest.mark.study), "left"])
 def test_a_screen_that_sweeps(tmp_path: Path, direction: str) -> None:
     """Its sweep of half a blink is counted in: clocks and thresholds are right, and the sweep's time is found although
     the target file is 3 % off."""
@@ -87,7 +87,8 @@ def test_a_screen_that_sweeps(tmp_path: Path, direction: str) -> None:
 
 def test_a_panel_with_steps_of_several_sizes(tmp_path: Path) -> None:
     """Steps played in whatever order and for however long are found: thresholds to what two seconds of a small module
-    allow and within their deviations, geometry as from one step."""
+    allow and within their deviations, geometry as from one step. Cycles that differ also tell a frame offset of more
+    than half a blink period."""
     levels = [1.5, 0.45, 1.0]
     result, score = calibrated(
         tmp_path,
@@ -95,12 +96,16 @@ def test_a_panel_with_steps_of_several_sizes(tmp_path: Path) -> None:
         5,
         {"levels": levels},
         light={"cycles_per_level": 2},
-        views={"count": 6, "dwell_s": 0.4, "between": "gap", "between_s": 0.05},
+        frames={"exposure_ms": 6.0},
+        truth={"mirror_x": "random", "mirror_y": "random", "clear_site": "random", "frame_offset_ms": 12.0},
+        views={"count": 6, "dwell_s": 0.5, "between": "gap", "between_s": 0.05},
     )
     assert score.mirror_right
     assert score.clear_site_right
     assert score.map_rms_px < 0.03
     assert score.nees["clocks"].value / score.nees["clocks"].freedom < 4.0
+    assert abs(read_truth(tmp_path / "small.h5").module.timing.frame_offset_ns) > 7.5e6  # type: ignore[union-attr]
+    assert abs(score.offset_us) < 60.0
     assert abs(score.on_percent) < 4.0
     assert abs(score.off_percent) < 4.0
     assert score.nees["thresholds"].value / score.nees["thresholds"].freedom < 4.0
@@ -115,6 +120,20 @@ def test_a_panel_with_steps_of_several_sizes(tmp_path: Path) -> None:
     assert np.mean(seen) > 0.4
     assert np.std(error[seen]) < 0.9 * np.std(truth.extras["on_threshold"])
     assert 0.7 < np.std((error / several.maps.on_sigma)[seen]) < 1.3
+
+
+def test_frames_that_hardly_show_the_steps_are_refused(tmp_path: Path) -> None:
+    """Few frames of long exposure mix the cycles: no number is better than a wrong one."""
+    with pytest.raises(DegenerateDataError, match="steps of light of a target with several levels"):
+        calibrated(
+            tmp_path,
+            "lamp_panel",
+            5,
+            {"levels": [1.5, 0.45, 1.0]},
+            light={"cycles_per_level": 2},
+            frames={"exposure_ms": 9.0},
+            views={"count": 6, "dwell_s": 0.4, "between": "gap", "between_s": 0.05},
+        )
 
 
 def test_steps_on_a_counterphase_target_are_refused(tmp_path: Path) -> None:
