@@ -6,7 +6,7 @@ from functools import partial
 from typing import Any, Literal
 
 import numpy as np
-from scipy.stats import chi2
+from scipy.stats import chi2, f
 
 from hybridtrack.calibration.field_samples import (
     BLOCK_FRAMES,
@@ -123,12 +123,20 @@ def stretches(frames: int) -> Array:
     return firsts[np.unique(np.linspace(0, len(firsts) - 1, MOST_BLOCKS).round().astype(int))]
 
 
-def judge_map(shift: Array, covariance: Array) -> Shift:
-    """Whether the map holds."""
+def freedom_of(scatter: Array, total: Array, stretches: int) -> float:
+    """Degrees of freedom of a covariance (2, 2) of which `scatter` comes from so many stretches, and the rest is known
+    (Satterthwaite 1946)."""
+    return max((stretches - 1) * float(np.trace(total) / np.trace(scatter)) ** 2, 3.0)
+
+
+def judge_map(shift: Array, covariance: Array, freedom: float = np.inf) -> Shift:
+    """Whether the map holds; `freedom`: degrees of freedom of the covariance (Hotelling 1931)."""
     size = float(np.linalg.norm(shift))
     sigma = float(np.sqrt(np.linalg.eigvalsh(covariance)[-1]))
     seen = f"({shift[0]:+.3f}, {shift[1]:+.3f}) px, deviation {sigma:.3f} px"
-    if chi2.sf(float(shift @ np.linalg.solve(covariance, shift)), 2) < ALARM and size > LEAST_SHIFT_PX:
+    square = float(shift @ np.linalg.solve(covariance, shift))
+    chance = chi2.sf(square, 2) if np.isinf(freedom) else f.sf(0.5 * square * (freedom - 1) / freedom, 2, freedom - 1)
+    if chance < ALARM and size > LEAST_SHIFT_PX:
         return Shift("drifted", f"the map has shifted by {seen}: calibrate anew before relying on it")
     if size + SURE * sigma < MAP_LIMIT_PX:
         return Shift("holds", f"the map holds: its shift is {seen}")
@@ -196,10 +204,12 @@ def _judged(
     module: HybridModule,
     count: int,
 ) -> FieldCheck:
-    own = covariance[np.ix_([DU, DV], [DU, DV])] + MAP_SYSTEMATIC_PX**2 * np.eye(2)
+    scatter = covariance[np.ix_([DU, DV], [DU, DV])]
+    own = scatter + MAP_SYSTEMATIC_PX**2 * np.eye(2)
     clock, clock_sigma = float(known[DT]), float(np.hypot(np.sqrt(covariance[DT, DT]), CLOCK_SYSTEMATIC_US))
     gain = float(known[GAIN])
-    map_shift, clock_shift = judge_map(shift, own), judge_clock(clock, clock_sigma)
+    map_shift = judge_map(shift, own, freedom_of(scatter, own, count))
+    clock_shift = judge_clock(clock, clock_sigma)
     if not GAIN_RANGE[0] < gain < GAIN_RANGE[1]:
         doubt = (
             f"changes of light by events are {gain:.2f} times those by frames, where one is expected: thresholds, "

@@ -27,7 +27,9 @@ STEP_DOUBT = 0.05  # log units between a step as stated and as measured that are
 SIMILAR_MODELS = 9.0
 HOPELESS = 8.0  # chi-square over freedom beyond which the curves are of something else
 BLACK_DN = 0.1  # what the black level may be off by
-METHOD = 0.004  # relative deviation of thresholds that more data do not lower
+# Relative deviation of thresholds that more data do not lower. Where events are lost in the dead time, lag and dead
+# time make up for one another and for thresholds.
+METHOD = {"steps": 0.005, "leaps": 0.01, "resets": 0.015}
 NOISE_DOUBT = 0.5  # of the noise: its deviation beyond which it is not given
 
 
@@ -99,12 +101,12 @@ def step_findings(target: Target, seen: StepAnswers, several: SeveralSteps) -> l
     return findings
 
 
-def shared_deviation(seen: StepsSeen, data: StepAnswers) -> float:
+def shared_deviation(seen: StepsSeen, data: StepAnswers, model: str) -> float:
     """Relative deviation that all thresholds share: of the method, and of steps measured over an uncertain black
     level."""
     dark_dn = float(np.median(np.concatenate([light.dark_dn[np.isfinite(light.log_step)] for light in seen.light])))
     log_step = float(np.log1p(np.median(data.swing)))
-    return float(np.hypot(METHOD, BLACK_DN / max(dark_dn, BLACK_DN) / log_step))
+    return float(np.hypot(METHOD[model], BLACK_DN / max(dark_dn, BLACK_DN) / log_step))
 
 
 def thresholds_from_steps(
@@ -133,7 +135,7 @@ def thresholds_from_steps(
     maps = threshold_maps(data, fit, halves_ns, seen.healthy.shape)
     several = SeveralSteps(data, fit, maps)
     comparator = fit.comparator
-    noise_sigma, shared = fit.sigma("noise"), shared_deviation(seen, data)
+    noise_sigma, shared = fit.sigma("noise"), shared_deviation(seen, data, fit.comparator.model)
     noise = (comparator.noise, noise_sigma) if noise_sigma < NOISE_DOUBT * comparator.noise else None
     return replace(
         first,

@@ -8,6 +8,7 @@ import pytest
 from hybridtrack.calibration.field_check import (
     check_field,
     differing_settings,
+    freedom_of,
     judge_clock,
     judge_map,
     setting_of,
@@ -96,6 +97,10 @@ def test_verdicts_follow_size_and_deviation():
     assert judge_map(np.array([0.05, 0.0]), sure).verdict == "holds"
     assert judge_map(np.array([0.2, 0.15]), sure).verdict == "drifted"
     assert judge_map(np.array([0.05, 0.0]), unsure).verdict == "cannot tell"
+    # Seen in a few stretches only, the same scatter says less.
+    assert judge_map(np.array([0.2, 0.15]), sure, freedom=4.0).verdict == "cannot tell"
+    assert freedom_of(sure, sure, 7) == pytest.approx(6.0)
+    assert freedom_of(0.1 * sure, sure, 7) == pytest.approx(600.0)
     assert judge_clock(300.0, 400.0).verdict == "holds"
     assert judge_clock(-4000.0, 400.0).verdict == "drifted"
     assert judge_clock(300.0, 2000.0).verdict == "cannot tell"
