@@ -68,8 +68,9 @@ def assert_good(score: CalibrationScore, deviations: float = 4.0) -> None:
         assert score.nees[name].value / score.nees[name].freedom < deviations
 
 
+@pytest.mark.study
 def test_a_shuttered_panel(tmp_path: Path) -> None:
-    """The plain case."""
+    """The plain case, which the panel with steps of several sizes holds, too."""
     _, score = calibrated(tmp_path, "lamp_panel", 3)
     assert_good(score)
 
