@@ -40,6 +40,7 @@ MOST_BLOCKS = 24
 GAIN_RANGE = (0.35, 1.7)
 REFERENCE_DN = 120.0
 IGNORED_SETTINGS = ("synthetic",)
+MORE = "more motion in several directions over textured ground is needed"
 
 
 @dataclass(frozen=True)
@@ -53,7 +54,7 @@ class Shift:
 @dataclass(frozen=True, eq=False)
 class FieldCheck:
     """`shift_px` (2,) of the map with covariance (2, 2); `clock_us`: how late events are beyond the module's offset,
-    and its deviation, None where not to be told; `gain`: change by events over change by frames; what was used;
+    with its deviation; `gain`: change by events over change by frames; what was used;
     verdicts on `map` and `clock`, the `settings` that differ, and per stretch of time the map's shift alone (B, 2),
     for figures."""
 
@@ -96,14 +97,19 @@ def differing_settings(module: HybridModule, recording: Recording) -> list[str]:
 def setting_of(module: HybridModule, contrast_map: ContrastMap | None) -> FieldSetting:
     """Thresholds pixel by pixel. Raises NotCalibratedError where the module lacks what the check compares."""
     contrast = module.contrast
-    if module.colour_from_event is None or contrast is None or contrast.on_threshold is None:
+    if (
+        module.colour_from_event is None
+        or contrast is None
+        or contrast.on_threshold is None
+        or contrast.off_threshold is None
+    ):
         raise NotCalibratedError(
             f"module '{module.name}': a calibrated map and both contrast thresholds are required to be checked, and "
             f"'{'colour_from_event' if module.colour_from_event is None else 'contrast'}' lacks them"
         )
     module.known_timing()
     shape = module.event_grid.shape
-    on, off = np.full(shape, contrast.on_threshold), np.full(shape, contrast.off_threshold or contrast.on_threshold)
+    on, off = np.full(shape, contrast.on_threshold), np.full(shape, contrast.off_threshold)
     if contrast_map is not None:
         on = np.where(np.isfinite(contrast_map.on_threshold), contrast_map.on_threshold, on)
         off = np.where(np.isfinite(contrast_map.off_threshold), contrast_map.off_threshold, off)
@@ -141,9 +147,6 @@ def judge_map(shift: Array, covariance: Array, freedom: float = np.inf) -> Shift
     if size + SURE * sigma < MAP_LIMIT_PX:
         return Shift("holds", f"the map holds: its shift is {seen}")
     return Shift("cannot tell", f"whether the map holds cannot be told: its shift is {seen}; {MORE}")
-
-
-MORE = "more motion in several directions over textured ground is needed"
 
 
 def judge_clock(shift_us: float, sigma_us: float) -> Shift:

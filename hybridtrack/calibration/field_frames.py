@@ -10,7 +10,7 @@ from dataclasses import dataclass
 import cv2
 import numpy as np
 
-from hybridtrack.calibration.frame_light import linear_dn, mosaic_gains, mosaic_period
+from hybridtrack.calibration.frame_light import view_light
 from hybridtrack.module import HybridModule
 from hybridtrack.recording import Recording
 
@@ -29,17 +29,6 @@ class FieldFrame:
     light_dn: Array
     slope: Array
     rate: Array
-
-
-def field_light(recording: Recording, index: int, module: HybridModule) -> Array:
-    """Linear light (H, W) float32 in DN above black, mosaic levelled, NaN where saturated."""
-    light = linear_dn(recording.frame_image(index), module.frame_mode)
-    period = mosaic_period(module)
-    if period != (1, 1) and len(recording.frames.shape) == 2:
-        gains = mosaic_gains(light[None], period).astype(np.float32)
-        repeats = (-(-light.shape[0] // period[0]), -(-light.shape[1] // period[1]))
-        light = light * np.tile(gains, repeats)[: light.shape[0], : light.shape[1]]
-    return light
 
 
 def grey_of(light: Array) -> Array:
@@ -66,7 +55,7 @@ class FieldFrames:
         if index not in self._light:
             for old in [k for k in self._light if abs(k - index) > 2]:
                 del self._light[old], self._grey[old]
-            self._light[index] = field_light(self.recording, index, self.module)
+            self._light[index] = view_light(self.recording, np.array([index]), self.module)[0]
             self._grey[index] = grey_of(self._light[index])
         return self._light[index]
 

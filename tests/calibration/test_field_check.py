@@ -17,7 +17,7 @@ from hybridtrack.calibration.field_check import (
 from hybridtrack.calibration.field_check_kernels import average_levels
 from hybridtrack.calibration.field_samples import FieldSamples, solve
 from hybridtrack.errors import DegenerateDataError, NotCalibratedError
-from hybridtrack.module import load_module
+from hybridtrack.module import ColourFromEvent, Contrast, load_module
 from hybridtrack.recording import Recording, RecordingWriter
 
 WREN = Path(__file__).parents[2] / "calib_targets" / "wren.module.json"
@@ -116,6 +116,17 @@ def test_an_uncalibrated_module_is_refused():
     """The sentence says what it lacks."""
     with pytest.raises(NotCalibratedError, match="colour_from_event"):
         setting_of(load_module(WREN), None)
+
+
+def test_one_threshold_alone_is_refused():
+    """The other is not taken to be the same."""
+    wren = load_module(WREN)
+    half = wren.model_copy(update={
+        "colour_from_event": ColourFromEvent(matrix=((4.0, 0.0, 1.0), (0.0, 4.0, 1.0))),
+        "contrast": Contrast(on_threshold=0.3),
+    })  # fmt: skip
+    with pytest.raises(NotCalibratedError, match="both contrast thresholds"):
+        setting_of(half, None)
 
 
 def test_settings_that_differ_are_named(tmp_path):

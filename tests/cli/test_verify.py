@@ -64,7 +64,7 @@ def test_the_exit_code_is_the_verdict(
     summary = json.loads((tmp_path / "out" / "summary.json").read_text())
     assert summary["verdict"] == verdict
     error, covariance = np.array(summary["map_shift_px"]) - change.map_px, np.array(summary["map_shift_covariance_px2"])
-    assert np.linalg.norm(error) < 0.2
+    assert np.linalg.norm(error) < 0.12
     assert error @ np.linalg.solve(covariance, error) < 14.0
     assert 0.75 < summary["gain"] < 1.25
     assert "<svg" in (tmp_path / "out" / "report.html").read_text()
