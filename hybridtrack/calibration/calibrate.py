@@ -34,6 +34,7 @@ from hybridtrack.calibration.views import ViewFold, ViewOptions, find_views
 from hybridtrack.errors import DegenerateDataError, ModuleMismatchError
 from hybridtrack.module import Contrast, Defects, HybridModule, Target
 from hybridtrack.recording import Recording
+from hybridtrack.threads import each
 
 Array = np.ndarray
 Progress = Callable[[str, float], None]
@@ -203,15 +204,13 @@ def calibrate(
     module = geometry_module(nominal, lens_fit, map_fit)
     pose_of = dict(zip(lens_fit.views.tolist(), lens_fit.camera_from_board, strict=True))
     board_of = {board.view: board for board in geometry.search.boards}
-    shown = [
-        CalibratedView(
-            image,
-            board_of.get(image.index),
-            pose_of.get(image.index),
-            event_steps(image, module, lens_fit.lens, pose_of[image.index], target) if image.index in pose_of else None,
-        )
-        for image in images
-    ]
+
+    def shown_view(image: ViewImages) -> CalibratedView:
+        pose = pose_of.get(image.index)
+        steps = None if pose is None else event_steps(image, module, lens_fit.lens, pose, target)
+        return CalibratedView(image, board_of.get(image.index), pose, steps)
+
+    shown = each(shown_view, images)
     placed = [(fold, view.steps) for fold, view in zip(folds, shown, strict=True) if view.steps is not None]
     placed_folds, placed_steps = [fold for fold, _ in placed], [step for _, step in placed]
     seen_views = [view for view, show in zip(measured.kept_views, shown, strict=True) if show.steps is not None]

@@ -7,7 +7,6 @@ difference of the bright and dark pictures. All edge pixels of the board enter, 
 inside a cell are in the model, so that big cells are no less exact than small ones.
 """
 
-from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -18,12 +17,12 @@ from hybridtrack.calibration.board_view import BoardPlace, place_frame_pixels, p
 from hybridtrack.calibration.lens_fit import fit_lens
 from hybridtrack.calibration.light_kernels import crossing_memberships
 from hybridtrack.calibration.view_data import BoardCorners, BoardSearch, Lens, LensFit, ViewImages
-from hybridtrack.calibration.view_light import ViewLight, fit_view_light
+from hybridtrack.calibration.view_light import FEWER_SAMPLES, ViewLight, fit_view_light
 from hybridtrack.errors import HybridtrackError
 from hybridtrack.module import HybridModule, Target
+from hybridtrack.threads import each
 
 Array = np.ndarray
-Progress = Callable[[str, float], None]
 
 _FIRST_SIGMA_PX = 0.15  # frame px, of a corner as detected
 _CELL = 0.5  # of a square: half width of the cell around a corner
@@ -32,6 +31,7 @@ _NEAR_EDGE = 4.0  # blurs: pixels further from both edges only fix the levels, a
 _STEPS = 4
 _MOST_MOVED_PX = 3.0  # colour px
 _LEAST_EDGE = 0.15  # of the contrast
+_ROUND_MODELS = (("k1", "fisheye2"), ("k1k2p", "fisheye4", "k1"))  # lens models tried in each round
 
 
 @dataclass(frozen=True)
@@ -172,7 +172,7 @@ def _refine_view(
     pose = lens_fit.camera_from_board[int(np.flatnonzero(lens_fit.views == board.view)[0])]
     mode, aperture = nominal.frame_mode, frame_aperture(nominal.frame_mode, nominal.cluster)
     place = place_frame_pixels(lens_fit.lens, pose, target, mode)
-    light = fit_view_light(view, place, aperture, target)
+    light = fit_view_light(view, place, aperture, target, FEWER_SAMPLES)
     if light is None:
         return board
     picture = _frame_picture(view, place, aperture, light, target)
@@ -207,14 +207,15 @@ def refine_boards(
     """
     by_number = {view.index: view for view in views}
     held = set(lens_fit.views.tolist())
-    return [
-        _refine_view(by_number[board.view], board, lens_fit, target, nominal) if board.view in held else board
-        for board in boards
-    ]
+
+    def refined(board: BoardCorners) -> BoardCorners:
+        return _refine_view(by_number[board.view], board, lens_fit, target, nominal) if board.view in held else board
+
+    return each(refined, boards)
 
 
 def _detect_all(views: list[ViewImages], target: Target, sign: float) -> list[Detection | str]:
-    return [detect_board(sign * difference_picture(view), target) for view in views]
+    return each(lambda view: detect_board(sign * difference_picture(view), target), views)
 
 
 def _detections(views: list[ViewImages], target: Target) -> list[Detection | str]:
@@ -238,33 +239,8 @@ def _rough_board(view: ViewImages, detection: Detection, nominal: HybridModule) 
                         np.full((len(uv), 2), np.nan), detection.labelling.half_turn_lead > 0)  # fmt: skip
 
 
-def find_boards(
-    views: list[ViewImages], target: Target, nominal: HybridModule, progress: Progress | None = None
-) -> BoardSearch:
-    """Find the board in every view; corners to hundredths of a pixel where three views or more fix a lens.
-
-    Frame pixels are taken to sit where `nominal` says; where it omits clear sites from bins, the clear site must be
-    the right one (see `geometry_fit`, which repeats the search once the event map has found it).
-    """
-    tell = progress or (lambda stage, fraction: None)
-    boards, findings = [], []
-    for view, detection in zip(views, _detections(views, target), strict=True):
-        if isinstance(detection, str):
-            findings.append(f"view {view.index}: {detection}")
-        else:
-            boards.append(_rough_board(view, detection, nominal))
-    tell("corners", 0.4)
-    for k, models in enumerate((("k1", "fisheye2"), ("k1k2p", "fisheye4", "k1"))):
-        fit = _first_fit(boards, target, nominal, models)
-        if fit is None:
-            break
-        boards = refine_boards(views, boards, fit, target, nominal)
-        tell("corners", 0.7 + 0.3 * k)
-    return BoardSearch(boards, findings)
-
-
-def _first_fit(
-    boards: list[BoardCorners], target: Target, nominal: HybridModule, models: tuple[str, ...]
+def first_fit(
+    boards: list[BoardCorners], target: Target, nominal: HybridModule, models: tuple[str, ...] = _ROUND_MODELS[-1]
 ) -> LensFit | None:
     """The fit of the model with the smallest residual; None where no model can be fitted."""
     fits = []
@@ -274,3 +250,25 @@ def _first_fit(
         except HybridtrackError:
             continue
     return min(fits, key=lambda fit: fit.rms_px, default=None)
+
+
+def find_boards(
+    views: list[ViewImages], target: Target, nominal: HybridModule, rounds: int = len(_ROUND_MODELS)
+) -> BoardSearch:
+    """Find the board in every view; corners to hundredths of a pixel where three views or more fix a lens.
+
+    Frame pixels are taken to sit where `nominal` says; where it omits clear sites from bins, the clear site must be
+    the right one (see `geometry_fit`, which repeats the search once the event map has found it).
+    """
+    boards, findings = [], []
+    for view, detection in zip(views, _detections(views, target), strict=True):
+        if isinstance(detection, str):
+            findings.append(f"view {view.index}: {detection}")
+        else:
+            boards.append(_rough_board(view, detection, nominal))
+    for models in _ROUND_MODELS[:rounds]:
+        fit = first_fit(boards, target, nominal, models)
+        if fit is None:
+            break
+        boards = refine_boards(views, boards, fit, target, nominal)
+    return BoardSearch(boards, findings)

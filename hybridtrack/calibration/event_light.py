@@ -12,9 +12,9 @@ import numpy as np
 from scipy.ndimage import map_coordinates, uniform_filter
 
 from hybridtrack.calibration.apertures import frame_aperture, one_pixel_aperture
-from hybridtrack.calibration.board_view import BoardPlace, inside_board, place_on_board
+from hybridtrack.calibration.board_view import BoardPlace, inside_board, place_frame_pixels, place_on_board
 from hybridtrack.calibration.view_data import Lens, ViewImages
-from hybridtrack.calibration.view_light import class_fractions, fit_view_light
+from hybridtrack.calibration.view_light import FEWER_SAMPLES, class_fractions, fit_view_light
 from hybridtrack.module import HybridModule, Target
 
 Array = np.ndarray
@@ -71,7 +71,7 @@ def modelled_steps(
 ) -> Array:
     """Log step (rows * columns) between the two states at event pixels with `place`, by the view's light model."""
     aperture = frame_aperture(module.frame_mode, module.cluster)
-    light = fit_view_light(view, frame_place, aperture, target)
+    light = fit_view_light(view, frame_place, aperture, target, FEWER_SAMPLES)
     result = np.full(len(place.xy_m), np.nan)
     if light is None:
         return result
@@ -106,8 +106,7 @@ def event_steps(
     with np.errstate(invalid="ignore", divide="ignore"):
         known = far & (hits.kind != 0) & (dark > 0) & (bright > dark)
         log_step = np.where(known, np.log(bright / dark), np.nan)
-    columns, rows = np.meshgrid(np.arange(mode.width), np.arange(mode.height))
-    bins = mode.colour_from_frame(np.stack([columns, rows], axis=-1).reshape(-1, 2))
-    modelled = modelled_steps(view, module, place, place_on_board(lens, camera_from_board, bins), target)
+    frame_place = place_frame_pixels(lens, camera_from_board, target, mode)
+    modelled = modelled_steps(view, module, place, frame_place, target)
     edge_step = np.where(far, np.nan, modelled.reshape(positions.shape[:2]))
     return EventSteps(log_step, bright, dark, edge_step, hits)

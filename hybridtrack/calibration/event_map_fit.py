@@ -27,7 +27,7 @@ from hybridtrack.calibration.event_map_normal import (
     left_over,
     map_basis,
 )
-from hybridtrack.calibration.event_map_start import event_positions, find_map_start, lattice_matrix
+from hybridtrack.calibration.event_map_start import MapStart, event_positions, find_map_start, lattice_matrix
 from hybridtrack.calibration.event_prediction import (
     PixelPlaces,
     PixelSteps,
@@ -41,12 +41,14 @@ from hybridtrack.calibration.view_data import MAP_PARAMETERS, BoardCorners, Even
 from hybridtrack.calibration.view_light import ViewLight, fit_view_light
 from hybridtrack.errors import BoardNotFoundError, DegenerateDataError
 from hybridtrack.module import ColourFromEvent, HybridModule, LatticeTest, Target
+from hybridtrack.threads import each
 
 Array = np.ndarray
 
 _STEPS = 25
 _PLACED_AT = (0, 3)
 _CLOSE_PX = 2e-4
+_CLOSE_TO_SITE_PX = 0.01
 _LEAST_PIXELS = 300
 _ODD_GAIN = 6.0  # deviations of the gains' spread beyond which a pixel is left out
 _PATCHES = (16, 10)
@@ -81,19 +83,20 @@ def _measured_views(views: list[ViewImages], lens_fit: LensFit, target: Target, 
     """Fit the light of every view that has a pose."""
     mode, aperture = nominal.frame_mode, frame_aperture(nominal.frame_mode, nominal.cluster)
     by_number = {view.index: view for view in views}
-    images, lights, order = [], [], []
-    for n, number in enumerate(lens_fit.views.tolist()):
+    numbers = lens_fit.views.tolist()
+
+    def light_of(n: int) -> ViewLight | None:
         place = place_frame_pixels(lens_fit.lens, lens_fit.camera_from_board[n], target, mode)
-        light = fit_view_light(by_number[number], place, aperture, target) if number in by_number else None
-        if light is not None:
-            images.append(by_number[number])
-            lights.append(light)
-            order.append(n)
-    if len(images) < 2:
+        return fit_view_light(by_number[numbers[n]], place, aperture, target) if numbers[n] in by_number else None
+
+    found = [(n, light) for n, light in enumerate(each(light_of, range(len(numbers)))) if light is not None]
+    if len(found) < 2:
         raise BoardNotFoundError(
-            f"event map: expected at least 2 views with the board well in the frame, got {len(images)}"
+            f"event map: expected at least 2 views with the board well in the frame, got {len(found)}"
         )
-    return _Views(images, lights, lens_fit.camera_from_board[order], lens_fit, np.array(order), target)
+    order = np.array([n for n, _ in found])
+    images, lights = [by_number[numbers[n]] for n in order], [light for _, light in found]
+    return _Views(images, lights, lens_fit.camera_from_board[order], lens_fit, order, target)
 
 
 def _positions(state: _State, nominal: HybridModule, centre: Array) -> Array:
@@ -105,17 +108,20 @@ def _positions(state: _State, nominal: HybridModule, centre: Array) -> Array:
 
 def _choose(views: _Views, state: _State, positions: Array) -> list[PixelPlaces]:
     """Pixels that take part, placed from `positions`."""
-    chosen = []
-    for view, light, pose in zip(views.images, views.lights, views.poses, strict=True):
-        places = choose_pixels(view, light, views.lens_fit, pose, views.target, positions)
-        chosen.append(places.only(state.usable[places.pixel]))
-    return chosen
+
+    def of_view(v: int) -> PixelPlaces:
+        places = choose_pixels(
+            views.images[v], views.lights[v], views.lens_fit, views.poses[v], views.target, positions
+        )
+        return places.only(state.usable[places.pixel])
+
+    return each(of_view, range(len(views.images)))
 
 
 def _predict(chosen: list[PixelPlaces], state: _State, moved: Array, target: Target) -> list[PixelSteps]:
     """Steps with the pixels moved by `moved` (He * We, 2) from where they were placed."""
     factor = float(np.exp(state.log_blur))
-    return [predict_steps(places, target, moved[places.pixel], factor) for places in chosen]
+    return each(lambda places: predict_steps(places, target, moved[places.pixel], factor), chosen)
 
 
 def _signed(views: _Views, sign: float) -> _Views:
@@ -202,8 +208,11 @@ class _Aligned:
     normal: MapNormal
 
 
-def _align(views: _Views, state: _State, nominal: HybridModule, centre: Array) -> _Aligned:
-    """Gauss-Newton until the map stands still. Pixels are placed anew after a few steps, then only moved."""
+def _align(views: _Views, state: _State, nominal: HybridModule, centre: Array, close_px: float = _CLOSE_PX) -> _Aligned:
+    """Gauss-Newton until a step moves the map by less than `close_px`.
+
+    Pixels are placed anew after a few steps, then only moved.
+    """
     target = views.target
     for iteration in range(_STEPS):
         positions = _positions(state, nominal, centre)
@@ -218,7 +227,7 @@ def _align(views: _Views, state: _State, nominal: HybridModule, centre: Array) -
         step[:6] = np.clip(step[:6], -1.5, 1.5)
         step[6] = step[6] if iteration >= 2 else 0.0
         state = _stepped(state, normal, step, all_steps, nominal, with_odd=iteration > 3)
-        if iteration > max(_PLACED_AT) and float(np.abs(step[:MAP_TERMS]).max()) < _CLOSE_PX:
+        if iteration > max(_PLACED_AT) and float(np.abs(step[:MAP_TERMS]).max()) < close_px:
             break
     chosen = [places.only(state.usable[places.pixel]) for places in chosen]
     moved = (_positions(state, nominal, centre) - placed).reshape(-1, 2)
@@ -245,6 +254,12 @@ def _patches(all_steps: list[PixelSteps], state: _State, basis: MapBasis, nomina
     middle = np.stack([(index % _PATCHES[0] + 0.5) * grid.width / _PATCHES[0] - 0.5,
                        (index // _PATCHES[0] + 0.5) * grid.height / _PATCHES[1] - 0.5], axis=1)  # fmt: skip
     return middle, np.linalg.solve(normal[solid], right[solid][..., None])[..., 0]
+
+
+def _at_middle(deviation: Array, nominal: HybridModule) -> Array:
+    """Offset (2,) px at the middle of the event grid of a map (2, 3) less the lattice."""
+    middle = np.array([(nominal.event_grid.width - 1) / 2.0, (nominal.event_grid.height - 1) / 2.0, 1.0])
+    return np.asarray(deviation @ middle)
 
 
 def _clear_site(at_centre: Array, nominal: HybridModule) -> tuple[tuple[int, int], Array, list[str]]:
@@ -289,8 +304,7 @@ def _result(
     matrix = base + affine_of(verdict.coefficients[:6], nominal)
     if not verdict.linear:
         matrix[:, :2] = lattice_matrix(nominal, mirror, (0.0, 0.0))[:, :2]
-    middle = np.array([(nominal.event_grid.width - 1) / 2.0, (nominal.event_grid.height - 1) / 2.0, 1.0])
-    at_centre = (matrix - lattice_matrix(nominal, mirror, (0.0, 0.0))) @ middle
+    at_centre = _at_middle(matrix - lattice_matrix(nominal, mirror, (0.0, 0.0)), nominal)
     site, centroid, findings = _clear_site(at_centre, nominal)
     fitted = ColourFromEvent(
         matrix=_rows(matrix), centroid=(float(centroid[0]), float(centroid[1])),
@@ -306,6 +320,39 @@ def _kept_parameters(verdict: LatticeVerdict) -> Array:
     return np.flatnonzero([linear, linear, True, linear, linear, True, verdict.radial])
 
 
+def _centre(nominal: HybridModule) -> Array:
+    return np.array([(nominal.colour_array.width - 1) / 2.0, (nominal.colour_array.height - 1) / 2.0])
+
+
+def _start(measured: _Views, nominal: HybridModule) -> tuple[_State, float, MapStart]:
+    """The state to align from, and the blink's sign. Raises DegenerateDataError."""
+    start = find_map_start(measured.images, nominal)
+    pixels = nominal.event_grid.width * nominal.event_grid.height
+    matrix = lattice_matrix(nominal, start.mirror, start.offset)
+    state = _State(matrix, 0.0, 0.0, None, np.ones(pixels, bool))  # type: ignore[arg-type]
+    first = _choose(measured, state, _positions(state, nominal, _centre(nominal)))
+    total = sum(len(places.pixel) for places in first)
+    if total < _LEAST_PIXELS:
+        raise DegenerateDataError(
+            f"event map: expected at least {_LEAST_PIXELS} event pixels on the board, got {total}"
+        )
+    all_steps = _predict(first, state, np.zeros((pixels, 2)), measured.target)
+    sign = _blink_sign(all_steps)
+    all_steps = [replace(steps, count=sign * steps.count) for steps in all_steps]
+    return replace(state, model=_first_model(all_steps, pixels)), sign, start
+
+
+def find_clear_site(
+    views: list[ViewImages], lens_fit: LensFit, target: Target, nominal: HybridModule
+) -> tuple[int, int]:
+    """The clear site (column, row) alone, to a few hundredths of a pixel: aligned roughly, without deviations."""
+    measured = _measured_views(views, lens_fit, target, nominal)
+    state, sign, start = _start(measured, nominal)
+    aligned = _align(_signed(measured, sign), state, nominal, _centre(nominal), _CLOSE_TO_SITE_PX)
+    base = lattice_matrix(nominal, start.mirror, (0.0, 0.0))
+    return _clear_site(_at_middle(aligned.state.matrix - base, nominal), nominal)[0]
+
+
 def fit_event_map(
     views: list[ViewImages], boards: list[BoardCorners], lens_fit: LensFit, target: Target, nominal: HybridModule
 ) -> EventMapFit:
@@ -315,30 +362,17 @@ def fit_event_map(
     came of them. Raises DegenerateDataError where frames and events do not agree.
     """
     measured = _measured_views(views, lens_fit, target, nominal)
-    start = find_map_start(measured.images, nominal)
-    centre = np.array([(nominal.colour_array.width - 1) / 2.0, (nominal.colour_array.height - 1) / 2.0])
-    pixels = nominal.event_grid.width * nominal.event_grid.height
-    matrix = lattice_matrix(nominal, start.mirror, start.offset)
-    state = _State(matrix, 0.0, 0.0, None, np.ones(pixels, bool))  # type: ignore[arg-type]
-    first = _choose(measured, state, _positions(state, nominal, centre))
-    total = sum(len(places.pixel) for places in first)
-    if total < _LEAST_PIXELS:
-        raise DegenerateDataError(
-            f"event map: expected at least {_LEAST_PIXELS} event pixels on the board, got {total}"
-        )
-    all_steps = _predict(first, state, np.zeros((pixels, 2)), target)
-    sign = _blink_sign(all_steps)
-    all_steps = [replace(steps, count=sign * steps.count) for steps in all_steps]
-    state = replace(state, model=_first_model(all_steps, pixels))
+    state, sign, start = _start(measured, nominal)
+    centre = _centre(nominal)
     aligned = _align(_signed(measured, sign), state, nominal, centre)
     state, normal = aligned.state, aligned.normal
     sure = map_covariance(normal, nuisance_covariance(lens_fit, measured.order))
     factor = max(sure.factor, LEAST_FACTOR)
     base = lattice_matrix(nominal, start.mirror, (0.0, 0.0))
     deviation = state.matrix - base
-    width, height = nominal.event_grid.width, nominal.event_grid.height
-    middle = deviation @ np.array([(width - 1) / 2.0, (height - 1) / 2.0, 1.0])
-    by_x, by_y = deviation[:, 0] * width / 2.0, deviation[:, 1] * height / 2.0
+    middle = _at_middle(deviation, nominal)
+    by_x = deviation[:, 0] * nominal.event_grid.width / 2.0
+    by_y = deviation[:, 1] * nominal.event_grid.height / 2.0
     coefficients = np.array([middle[0], by_x[0], by_y[0], middle[1], by_x[1], by_y[1], state.radial])
     verdict = judge_lattice(coefficients, sure.covariance * factor, sure.degrees)
     fitted, site, findings = _result(state, base, verdict, start.mirror, centre, nominal)

@@ -15,6 +15,7 @@ import numpy as np
 from hybridtrack.calibration.count_curve import CountCurve, CountNoise, smoothness
 from hybridtrack.calibration.event_prediction import PixelSteps
 from hybridtrack.module import HybridModule
+from hybridtrack.threads import each
 
 Array = np.ndarray
 
@@ -139,7 +140,7 @@ def accumulate(
     right[MAP_TERMS] -= log_blur * _BLUR_SIGMA**-2
     size = len(right)
     pull, power, excess = np.zeros((pixels, size)), np.zeros(pixels), np.zeros(pixels)
-    rows = [_rows_of(steps, v, views, model, basis) for v, steps in enumerate(all_steps)]
+    rows = each(lambda v: _rows_of(all_steps[v], v, views, model, basis), range(views))
     for steps, row in zip(all_steps, rows, strict=True):
         toward = row.weight * row.predicted
         pull[steps.pixel] += toward[:, None] * row.design

@@ -1,24 +1,25 @@
 """Boards, lens and event map of a recording's views, in one call.
 
 Where frames omit clear sites from their bins, or fill them, the place of a frame pixel's light depends on the clear
-site, which only the event map finds: a data sheet that has it wrong puts corners off by up to a tenth of a pixel. The
-corners are then fitted again under the site found, until it stands.
+site, which only the event map finds: a data sheet that has it wrong puts corners off by up to a tenth of a pixel. It is
+then found from a few views first; should all views tell otherwise, corners are fitted again until it stands.
 """
 
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 
-from hybridtrack.calibration.corners import find_boards, refine_boards
-from hybridtrack.calibration.event_map_fit import fit_event_map
+from hybridtrack.calibration.corners import find_boards, first_fit, refine_boards
+from hybridtrack.calibration.event_map_fit import find_clear_site, fit_event_map
 from hybridtrack.calibration.lens_fit import fit_lens
 from hybridtrack.calibration.view_data import BoardSearch, EventMapFit, LensFit, ViewImages
-from hybridtrack.errors import BoardNotFoundError
+from hybridtrack.errors import BoardNotFoundError, HybridtrackError
 from hybridtrack.module import HybridModule, Target
 
 Progress = Callable[[str, float], None]
 
 _ROUNDS = 3
 _LEAST_VIEWS = 3
+_VIEWS_FOR_SITE = 5
 
 
 @dataclass(frozen=True)
@@ -44,6 +45,30 @@ def _require_boards(search: BoardSearch, views: int) -> None:
         )
 
 
+def _with_site(nominal: HybridModule, site: tuple[int, int]) -> HybridModule:
+    cluster = nominal.cluster.model_copy(update={"clear_site": site, "filters": None})
+    return nominal.model_copy(update={"cluster": cluster})
+
+
+def _site_first(
+    views: list[ViewImages], search: BoardSearch, target: Target, nominal: HybridModule
+) -> tuple[BoardSearch, HybridModule]:
+    """The corners' last round under the clear site that the views with most corners show."""
+    rough = first_fit(search.boards, target, nominal)
+    if rough is None:
+        return search, nominal
+    most = sorted(search.boards, key=lambda board: -len(board.uv))[:_VIEWS_FOR_SITE]
+    chosen = {board.view for board in most}
+    believed = nominal
+    try:
+        site = find_clear_site([view for view in views if view.index in chosen], rough, target, nominal)
+        if site != nominal.cluster.clear_site:
+            believed = _with_site(nominal, site)
+    except HybridtrackError:
+        pass  # all views may tell where these few do not
+    return BoardSearch(refine_boards(views, search.boards, rough, target, believed), search.findings), believed
+
+
 def fit_geometry(
     views: list[ViewImages],
     target: Target,
@@ -57,19 +82,21 @@ def fit_geometry(
     """
     tell = progress or (lambda stage, fraction: None)
     tell("corners", 0.0)
-    search = find_boards(views, target, nominal)
+    site_matters = nominal.frame_mode.clear_in_frame != "included"
+    search, believed = find_boards(views, target, nominal, 1 if site_matters else 2), nominal
     _require_boards(search, len(views))
+    if site_matters:
+        tell("clear site", 0.3)
+        search, believed = _site_first(views, search, target, nominal)
     tell("lens", 0.4)
-    lens_fit = fit_lens(search.boards, target, nominal, lens_model)
+    lens_fit = fit_lens(search.boards, target, believed, lens_model)
     tell("event map", 0.5)
-    map_fit = fit_event_map(views, search.boards, lens_fit, target, nominal)
-    believed = nominal
+    map_fit = fit_event_map(views, search.boards, lens_fit, target, believed)
     for _ in range(_ROUNDS):
-        if nominal.frame_mode.clear_in_frame == "included" or map_fit.clear_site == believed.cluster.clear_site:
+        if not site_matters or map_fit.clear_site == believed.cluster.clear_site:
             break
         tell("corners", 0.6)
-        cluster = believed.cluster.model_copy(update={"clear_site": map_fit.clear_site, "filters": None})
-        believed = believed.model_copy(update={"cluster": cluster})
+        believed = _with_site(nominal, map_fit.clear_site)
         boards = refine_boards(views, search.boards, lens_fit, target, believed)
         search = BoardSearch(boards, search.findings)
         refitted = fit_lens(boards, target, believed, lens_fit.model)

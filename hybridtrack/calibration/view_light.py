@@ -17,6 +17,7 @@ from hybridtrack.module import Target
 Array = np.ndarray
 
 _SAMPLES = 16000
+FEWER_SAMPLES = 6000  # where the light only sets the scale of what is measured: corners, steps far from edges
 _FIRST_BLUR_PX = 0.8
 _BLUR_LIMITS_PX = (0.12, 12.0)
 _GROSS = 6.0
@@ -74,26 +75,26 @@ def _solve_levels(share: Array, basis: Array, value: Array, weight: Array) -> tu
     return solution.reshape(share.shape[1], 6), value - design @ solution
 
 
-def _samples(place: BoardPlace, view: ViewImages, target: Target, margin_px: float) -> Array:
-    """Indices of pixels on the board with both levels known, thinned evenly."""
+def _samples(place: BoardPlace, view: ViewImages, target: Target, margin_px: float, most: int) -> Array:
+    """Indices of about `most` pixels on the board with both levels known, thinned evenly."""
     known = np.isfinite(view.bright_dn.ravel()) & np.isfinite(view.dark_dn.ravel())
     usable = np.flatnonzero(inside_board(place, target, margin_px) & known)
-    step = max(1, len(usable) // _SAMPLES)
+    step = max(1, len(usable) // most)
     # Every k-th pixel in reading order could beat with the rows; a fixed shuffle does not.
     order = np.random.default_rng(1).permutation(len(usable))
     return np.sort(usable[order[: len(usable) // step]])
 
 
 def fit_view_light(
-    view: ViewImages, place: BoardPlace, aperture: Aperture, target: Target, blur_px: float = _FIRST_BLUR_PX
+    view: ViewImages, place: BoardPlace, aperture: Aperture, target: Target, samples: int = _SAMPLES
 ) -> ViewLight | None:
-    """Fit levels and blur to all frame pixels, whose full bins' centres have `place` (Hf * Wf).
+    """Fit levels and blur to `samples` of the frame pixels, whose full bins' centres have `place` (Hf * Wf).
 
     Returns None where too little of the board is seen.
     """
     kinds = aperture.kind.ravel()
     squares = light_classes(target)
-    index = _samples(place, view, target, 6.0)
+    index = _samples(place, view, target, 6.0, samples)
     if len(index) < _LEAST_PIXELS:
         return None
     here, basis = place[index], _basis(place.xy_m[index], target)
@@ -101,7 +102,7 @@ def fit_view_light(
     step = float(np.percentile(np.abs(bright - dark), 95)) + 1e-12
     noise = np.hypot(view.bright_sigma_dn.ravel()[index], view.dark_sigma_dn.ravel()[index])
     weight = 1.0 / np.hypot(np.where(np.isfinite(noise), noise, step), 0.01 * step)
-    light = ViewLight(squares, np.zeros((len(squares), 6)), np.zeros((len(squares), 6)), blur_px, np.inf)
+    light = ViewLight(squares, np.zeros((len(squares), 6)), np.zeros((len(squares), 6)), _FIRST_BLUR_PX, np.inf)
     for _ in range(8):
         share = class_fractions(here, replace(aperture, kind=kinds[index]), light.blur_px, target, squares)
         level_bright, left_bright = _solve_levels(share[..., 0], basis, bright, weight)

@@ -1,5 +1,6 @@
 """Boards, lens and map in one call."""
 
+import sys
 from dataclasses import replace
 
 import numpy as np
@@ -7,11 +8,20 @@ import pytest
 from rendered_boards import counterphase_set
 
 from hybridtrack.calibration.geometry_fit import fit_geometry
-from hybridtrack.errors import BoardNotFoundError
+from hybridtrack.errors import BoardNotFoundError, DegenerateDataError
+
+geometry_fit_module = sys.modules[fit_geometry.__module__]
 
 
-def test_search_is_repeated_under_the_clear_site_found():
-    """With clear sites omitted from bins, a wrong data sheet ends at the lens and map of a right one."""
+@pytest.mark.parametrize("told_first", [True, False])
+def test_a_wrong_clear_site_ends_at_the_geometry_of_the_right_one(told_first, monkeypatch):
+    """With clear sites omitted from bins, whether a few views tell the clear site or only all of them do."""
+
+    def tells_nothing(*arguments):
+        raise DegenerateDataError("too few views")
+
+    if not told_first:
+        monkeypatch.setattr(geometry_fit_module, "find_clear_site", tells_nothing)
     rendered = counterphase_set()
     stages = []
     wrong = fit_geometry(
@@ -19,7 +29,7 @@ def test_search_is_repeated_under_the_clear_site_found():
         lambda stage, fraction: stages.append(stage),
     )  # fmt: skip
     right = fit_geometry(rendered.views, rendered.scene.target, rendered.layout.module(), "k1k2p")
-    assert stages.count("corners") == 2
+    assert stages.count("corners") == (1 if told_first else 2)
     sigma = np.sqrt(np.diag(right.lens_fit.covariance))
     free = [f"lens.{name}" in right.lens_fit.parameters for name in right.lens_fit.lens.names]
     change = (wrong.lens_fit.lens.parameters - right.lens_fit.lens.parameters)[free]
