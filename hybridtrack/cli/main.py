@@ -18,6 +18,7 @@ from hybridtrack.cli.guide_command import guide_command
 from hybridtrack.cli.ingest_command import ingest_command
 from hybridtrack.cli.inspect_command import inspect_command
 from hybridtrack.cli.odometry_command import odometry_command
+from hybridtrack.cli.picture_command import picture_command
 from hybridtrack.cli.synthesise_command import synthesise_command
 from hybridtrack.cli.target_command import target_command
 from hybridtrack.cli.track_command import track_command
@@ -43,6 +44,7 @@ app.command("guide")(guide_command)
 app.command("calibrate")(calibrate_command)
 app.command("verify")(verify_command)
 app.command("track")(track_command)
+app.command("picture")(picture_command)
 app.command("odometry")(odometry_command)
 app.command("synthesise")(synthesise_command)
 app.add_typer(bench_app, name="bench")

@@ -12,7 +12,7 @@ lies between it and the instant. Live, only the last frame that is complete at t
 """
 
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import pairwise
 
 import numpy as np
@@ -21,8 +21,14 @@ from hybridtrack.errors import ModuleMismatchError, OptionError
 from hybridtrack.module import ContrastMap, HybridModule
 from hybridtrack.recording import Events, Recording
 from hybridtrack.tracking.light_levels import FrameClock
-from hybridtrack.tracking.picture_grid import EventGrid, event_grid, lag_by_light
-from hybridtrack.tracking.picture_kernels import exposure_levels, levels_at, same_sign_intervals, sort_by_pixel
+from hybridtrack.tracking.picture_grid import EventGrid, Lateness, check_module, event_grid, lateness
+from hybridtrack.tracking.picture_kernels import (
+    exposure_levels,
+    levels_at,
+    light_times,
+    same_sign_intervals,
+    sort_by_pixel,
+)
 from hybridtrack.tracking.picture_plan import FrameStore, Plan, Planner
 
 Array = np.ndarray
@@ -72,25 +78,41 @@ class Picture:
 class Sweep:
     """Levels of one stretch of events at instants that only go forward."""
 
-    def __init__(self, events: Events, grid: EventGrid, lag_ns: Array, ramp_ns: int, live: bool) -> None:
-        self._grid, self._lag_ns, self._ramp_ns, self._live = grid, lag_ns, ramp_ns, live
+    def __init__(self, events: Events, grid: EventGrid, late: Lateness, ramp_ns: int, live: bool) -> None:
+        self._grid, self._late, self._ramp_ns, self._live = grid, late, ramp_ns, live
         columns = (events.t, events.x, events.y, events.on)
-        self._sorted = sort_by_pixel(*columns, grid.theta_on, grid.theta_off, lag_ns)
-        self._cursor = self._sorted[0][:-1].copy()
+        self._sorted = sort_by_pixel(*columns, grid.theta_on, grid.theta_off)
+        self._begin = self._sorted[0]
+        # The part that follows light is known once a frame has been looked at.
+        self._light_ns = self._times(np.zeros(grid.usable.shape), replace(late, at_white_ns=0.0))
+        self._cursor = self._begin[:-1].copy()
+
+    def _times(self, base: Array, late: Lateness) -> Array:
+        return light_times(*self._sorted, base, late.constant_ns, late.at_white_ns, late.longest_ns)
+
+    def learn_light(self, log_lights: list[Array], clocks: list[FrameClock]) -> None:
+        """Set the lateness of every event by the light at its pixel and time, as frames (H, W) and levels have it."""
+        if self._late.at_white_ns <= 0:
+            return
+        bases = [
+            self._grid.at_event_pixels(log_light) - self.exposure_mean(clock)
+            for log_light, clock in zip(log_lights, clocks, strict=True)
+        ]
+        self._light_ns = self._times(np.mean(bases, axis=0), self._late)
 
     def exposure_mean(self, clock: FrameClock) -> Array:
         """Log of the mean of exp(level) over each pixel's exposure; live, with no event after the frame's end."""
         until = clock.span_ns[1] if self._live else FOREVER
         start = clock.start_ns(self._grid.frame_uv[..., 1])
         times = (start, clock.exposure_ns, self._ramp_ns, until)
-        return exposure_levels(*self._sorted, self._lag_ns, *times)[0]
+        return exposure_levels(*self._sorted, self._light_ns, *times)[0]
 
     def _levels(self, cursor: Array, when_ns: Array, until_ns: int) -> tuple[Array, Array]:
-        return levels_at(*self._sorted, self._lag_ns, cursor, when_ns, self._ramp_ns, until_ns)
+        return levels_at(*self._sorted, self._light_ns, cursor, when_ns, self._ramp_ns, until_ns)
 
     def counts_at_middle(self, clock: FrameClock) -> Array:
         """How many events of each pixel came up to the middle of its row's exposure."""
-        return self._levels(self._sorted[0][:-1].copy(), clock.middle_ns(self._grid.frame_uv[..., 1]), FOREVER)[1]
+        return self._levels(self._begin[:-1].copy(), clock.middle_ns(self._grid.frame_uv[..., 1]), FOREVER)[1]
 
     def at(self, t_ns: int) -> tuple[Array, Array]:
         """Level at an instant no earlier than the one before, and the events up to then, each (rows, columns)."""
@@ -106,6 +128,7 @@ class Group:
         self._numbers = tuple(int(store.index[order]) for order in frames)
         self._lights = [store.light(order) for order in frames]
         self._clocks = [store.clocks[order] for order in frames]
+        sweep.learn_light([light.log_light for light in self._lights], self._clocks)
         # What a frame says of log light at level zero.
         self._anchors = [
             light.log_light - grid.at_frame_pixels(sweep.exposure_mean(clock))
@@ -173,6 +196,16 @@ def _groups(plans: list[Plan]) -> Iterator[list[Plan]]:
             begin = k
 
 
+def covered_ns(recording: Recording, module: HybridModule, live: bool = False) -> tuple[int, int]:
+    """First and last instant (event clock) with a frame at hand: over all exposures; live, from the first one's end.
+
+    Raises as `reconstruct` does.
+    """
+    check_module(module)
+    spans = FrameStore(recording, module).span_ns
+    return int(spans[:, 1].min() if live else spans[:, 0].min()), int(spans[:, 1].max())
+
+
 def reconstruct(
     recording: Recording,
     module: HybridModule,
@@ -201,9 +234,8 @@ def reconstruct(
 
 def _ramp_ns(events: Events, grid: EventGrid) -> int:
     """How long the light of a pixel that fires takes from one event to the next."""
-    unused = np.zeros(grid.usable.shape, np.int64)
     intervals = same_sign_intervals(
-        *sort_by_pixel(events.t, events.x, events.y, events.on, grid.theta_on, grid.theta_off, unused)
+        *sort_by_pixel(events.t, events.x, events.y, events.on, grid.theta_on, grid.theta_off)
     )
     if len(intervals) < FEWEST_INTERVALS:
         return LONGEST_RAMP_NS
@@ -226,16 +258,16 @@ def _sweep(
         return events
 
     frames = list(group[0].frames)
-    lag = lag_by_light(module, grid, store.light(frames[0]))
+    late = lateness(module)
     spans = store.span_ns[frames]
-    low = min(int(spans[:, 0].min()), group[0].t_ns) + min(0, int(lag.min()))
-    high = max(int(spans[:, 1].max()), group[-1].t_ns) + max(0, int(lag.max()))
+    low = min(int(spans[:, 0].min()), group[0].t_ns) + late.span_ns[0]
+    high = max(int(spans[:, 1].max()), group[-1].t_ns) + late.span_ns[1]
     events = read(low, high)
     ramp = options.ramp_ns
     if ramp is None:
         ramp = _ramp_ns(events[events.t <= group[0].t_ns] if options.live else events, grid)
     parts = [read(low - ramp, low), events, *([] if options.live else [read(high, high + ramp)])]
-    return Sweep(Events.joined(parts), grid, lag, ramp, options.live)
+    return Sweep(Events.joined(parts), grid, late, ramp, options.live)
 
 
 def _reconstruct(

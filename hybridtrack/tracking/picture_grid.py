@@ -7,12 +7,11 @@ import numpy as np
 
 from hybridtrack.errors import DegenerateDataError, ModuleMismatchError, NotCalibratedError
 from hybridtrack.module import ContrastMap, HybridModule
-from hybridtrack.tracking.log_light import LogLight
 
 Array = np.ndarray
 
 CONSTANT_LATENCY_NS = 25_000.0  # what light does not change of the latency, as calibration assumes
-LONGEST_LAG_NS = 5_000_000
+LONGEST_LAG_NS = 5e6
 
 
 @dataclass(frozen=True, eq=False)
@@ -36,6 +35,11 @@ class EventGrid:
         Cubic: a sixth less error of moving pictures than linear.
         """
         return self._spread(values, cv2.INTER_CUBIC)
+
+    def at_event_pixels(self, picture: Array) -> Array:
+        """Values of a picture (H, W) at the event pixels (rows, columns)."""
+        u, v = np.moveaxis(self.frame_uv.astype(np.float32), -1, 0)
+        return cv2.remap(picture, u, v, cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE)
 
     def between(self, values: Array) -> Array:
         """As `at_frame_pixels`, linear, so that nothing lies outside of its neighbours."""
@@ -95,18 +99,30 @@ def event_grid(module: HybridModule, contrast_map: ContrastMap | None) -> EventG
     return EventGrid(thresholds[0], thresholds[1], usable, frame_uv, np.ascontiguousarray(event_xy.astype(np.float32)))
 
 
-def lag_by_light(module: HybridModule, grid: EventGrid, light: LogLight | None) -> Array:
-    """How late the events of each pixel are (rows, columns), int64 ns; zero where the module does not state it.
+@dataclass(frozen=True)
+class Lateness:
+    """How late events are: `constant_ns`, and `at_white_ns` at the light of white, inversely proportional to light; the
+    whole at most `longest_ns`."""
 
-    The part of the latency that follows the photoreceptor is inversely proportional to light, taken from a frame.
+    constant_ns: float
+    at_white_ns: float
+    longest_ns: float = LONGEST_LAG_NS
+
+    @property
+    def span_ns(self) -> tuple[int, int]:
+        """Least and most of it."""
+        most = self.longest_ns if self.at_white_ns > 0 else self.constant_ns
+        return int(min(0.0, self.constant_ns)), int(max(0.0, most))
+
+
+def lateness(module: HybridModule) -> Lateness:
+    """The module's event latency; where it states at which light, the photoreceptor's part of it follows light.
+
+    Zero where the module does not state it: it is then part of the frame offset.
     """
-    timing = module.known_timing()
-    latency, reference_dn = float(timing.event_latency_ns or 0.0), timing.reference_light_dn
-    lag = np.full(grid.usable.shape, latency)
-    if light is not None and latency > CONSTANT_LATENCY_NS and reference_dn:
-        mode = module.frame_mode
-        u, v = np.moveaxis(grid.frame_uv.astype(np.float32), -1, 0)
-        seen = cv2.remap(light.log_light, u, v, cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE)
-        light_dn = np.exp(seen.astype(float)) * (mode.white_dn - mode.black_dn)
-        lag = CONSTANT_LATENCY_NS + (latency - CONSTANT_LATENCY_NS) * reference_dn / light_dn
-    return np.rint(np.clip(lag, -LONGEST_LAG_NS, LONGEST_LAG_NS)).astype(np.int64)
+    timing, mode = module.known_timing(), module.frame_mode
+    latency_ns, reference_dn = float(timing.event_latency_ns or 0.0), timing.reference_light_dn
+    if not reference_dn or latency_ns <= CONSTANT_LATENCY_NS:
+        return Lateness(latency_ns, 0.0)
+    by_light_ns = (latency_ns - CONSTANT_LATENCY_NS) * reference_dn / (mode.white_dn - mode.black_dn)
+    return Lateness(CONSTANT_LATENCY_NS, by_light_ns)

@@ -13,13 +13,11 @@ Array = np.ndarray
 
 
 @kernel
-def sort_by_pixel(
-    t: Array, x: Array, y: Array, on: Array, theta_on: Array, theta_off: Array, lag_ns: Array
-) -> tuple[Array, Array, Array]:
-    """Events (N,) in order of time, thresholds and lags (rows, columns).
+def sort_by_pixel(t: Array, x: Array, y: Array, on: Array, theta_on: Array, theta_off: Array) -> tuple[Array, ...]:
+    """Events (N,) in order of time, thresholds (rows, columns).
 
-    Returns `begin` (pixels + 1,) int64; `light_ns` (N,) int64, each event's time less its pixel's lag; and `level` (N,)
-    float64, log light after the event, zero before a pixel's first one.
+    Returns `begin` (pixels + 1,) int64; `stamp_ns` (N,) int64; and `level` (N,) float64, log light after the event,
+    zero before a pixel's first one.
     """
     rows, columns = theta_on.shape
     begin = np.zeros(rows * columns + 1, np.int64)
@@ -28,16 +26,38 @@ def sort_by_pixel(
     for p in range(rows * columns):
         begin[p + 1] += begin[p]
     place = begin[:-1].copy()
-    light_ns, level = np.empty(len(t), np.int64), np.empty(len(t))
+    stamp_ns, level = np.empty(len(t), np.int64), np.empty(len(t))
     for k in range(len(t)):
         r, c = np.int64(y[k]), np.int64(x[k])
         p = r * columns + c
         at = place[p]
         before = level[at - 1] if at > begin[p] else 0.0
         level[at] = before + (theta_on[r, c] if on[k] else -theta_off[r, c])
-        light_ns[at] = t[k] - lag_ns[r, c]
+        stamp_ns[at] = t[k]
         place[p] = at + 1
-    return begin, light_ns, level
+    return begin, stamp_ns, level
+
+
+@kernel
+def light_times(
+    begin: Array, stamp_ns: Array, level: Array, base: Array, constant_ns: float, at_white_ns: float, longest_ns: float
+) -> Array:
+    """When light was at each event's level, int64 ns (N,): stamps less a constant and a part inverse to light.
+
+    `base` (rows, columns) is log light, as a share of white, at level zero; `at_white_ns` the part at white; the whole
+    is at most `longest_ns`. Times of a pixel never run backwards.
+    """
+    light_ns = np.empty(len(stamp_ns), np.int64)
+    columns = base.shape[1]
+    for p in range(len(begin) - 1):
+        for k in range(begin[p], begin[p + 1]):
+            lag = constant_ns
+            if at_white_ns > 0.0:
+                lag = min(constant_ns + at_white_ns * np.exp(-base[p // columns, p % columns] - level[k]), longest_ns)
+            light_ns[k] = stamp_ns[k] - np.int64(np.rint(lag))
+            if k > begin[p]:
+                light_ns[k] = max(light_ns[k], light_ns[k - 1])
+    return light_ns
 
 
 @kernel
@@ -62,9 +82,9 @@ def ramp_area(t0: int, t1: int, t_a: int, level_a: float, t_b: int, level_b: flo
 @kernel
 def exposure_levels(
     begin: Array,
-    light_ns: Array,
+    stamp_ns: Array,
     level: Array,
-    lag_ns: Array,
+    light_ns: Array,
     start_ns: Array,
     exposure_ns: int,
     ramp_ns: int,
@@ -87,7 +107,7 @@ def exposure_levels(
             before, t_a = 0.0, t0 - ramp_ns
             for k in range(begin[p], begin[p + 1]):
                 t_b, after = light_ns[k], level[k]
-                if t_b + lag_ns[r, c] > until_ns:
+                if stamp_ns[k] > until_ns:
                     break
                 if t_b > t0:
                     rise = max(t_a, t_b - ramp_ns)
@@ -108,9 +128,9 @@ def exposure_levels(
 @kernel
 def levels_at(
     begin: Array,
-    light_ns: Array,
+    stamp_ns: Array,
     level: Array,
-    lag_ns: Array,
+    light_ns: Array,
     cursor: Array,
     when_ns: Array,
     ramp_ns: int,
@@ -128,14 +148,13 @@ def levels_at(
         for c in range(columns):
             p = r * columns + c
             when, k, stop = when_ns[r, c], cursor[p], begin[p + 1]
-            last = until_ns - lag_ns[r, c]
-            while k < stop and light_ns[k] <= min(when, last):
+            while k < stop and light_ns[k] <= when and stamp_ns[k] <= until_ns:
                 k += 1
             cursor[p] = k
             count[r, c] = k - begin[p]
             before = level[k - 1] if k > begin[p] else 0.0
             out[r, c] = before
-            if k < stop and light_ns[k] <= last:
+            if k < stop and stamp_ns[k] <= until_ns:
                 rise = light_ns[k] - ramp_ns
                 if k > begin[p]:
                     rise = max(rise, light_ns[k - 1])
@@ -145,14 +164,14 @@ def levels_at(
 
 
 @kernel
-def same_sign_intervals(begin: Array, light_ns: Array, level: Array) -> Array:
+def same_sign_intervals(begin: Array, stamp_ns: Array, level: Array) -> Array:
     """Times in ns between events of one pixel that follow each other with the same sign."""
-    out = np.empty(len(light_ns), np.int64)
+    out = np.empty(len(stamp_ns), np.int64)
     found = 0
     for p in range(len(begin) - 1):
         for k in range(begin[p] + 1, begin[p + 1]):
             before = level[k - 2] if k - 2 >= begin[p] else 0.0
             if (level[k] > level[k - 1]) == (level[k - 1] > before):
-                out[found] = light_ns[k] - light_ns[k - 1]
+                out[found] = stamp_ns[k] - stamp_ns[k - 1]
                 found += 1
     return out[:found]
