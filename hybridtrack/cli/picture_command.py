@@ -201,7 +201,7 @@ class PictureTask:
         notes: list[Note] = []
         with shown_progress() as progress:
             made = self._made(instants, lambda _, part: progress("clip", part))
-            greys = write_clip(self._out / CLIP_NAME, made, shown_hz, lambda picture: notes.append(Note.of(picture)))
+            written = write_clip(self._out / CLIP_NAME, made, shown_hz, lambda picture: notes.append(Note.of(picture)))
         self._notes += notes
         return {
             "file": CLIP_NAME,
@@ -210,7 +210,8 @@ class PictureTask:
             "to_ns": notes[-1].t_ns,
             "shown_hz": shown_hz,
             "sources": {name: sum(note.source == name for note in notes) for name in SOURCES},
-            **greys_of(greys),
+            "flashes_a_second": written.flashes_a_second,
+            **greys_of(written.greys),
         }
 
     def report(self, title: str, pictures: list[dict[str, Any]], clip: dict[str, Any] | None) -> None:
@@ -221,6 +222,8 @@ class PictureTask:
         defects = self._module.defects
         bad = 0 if defects is None else len({*defects.hot, *defects.dead})
         findings = findings_of(self._notes, bad)
+        if clip is not None:
+            findings += flash_findings(clip["flashes_a_second"])
         summary = {"pictures": pictures, "clip": clip, "live": self._options.live, "findings": findings}
         write_json(self._out / "summary.json", summary)
         rows = [
@@ -233,6 +236,19 @@ class PictureTask:
         print_table(Table(("file", "instant [s]", "frames carried", "saturated px"), tuple(rows), prose=(2,)), title)
         print_findings(findings)
         report_written(self._out / (pictures[-1]["file"] if clip is None else CLIP_NAME))
+
+
+def flash_findings(flashes_a_second: int) -> list[str]:
+    """The caution that a clip needs which flashes."""
+    from hybridtrack.report.target_caution import FLASHES_A_SECOND
+
+    if flashes_a_second <= FLASHES_A_SECOND:
+        return []
+    return [
+        f"CAUTION: the clip flashes up to {flashes_a_second} times in a second, above the {FLASHES_A_SECOND} of WCAG "
+        "2.3.1, and can trigger photosensitive seizures: do not show it to the public; another --rate or --shown-rate "
+        "changes it"
+    ]
 
 
 SOURCES = ("both", "forward", "backward", "none")

@@ -140,10 +140,11 @@ class Group:
     def picture(self, plan: Plan, blend_hz: float) -> Picture:
         """The picture of a plan no earlier than the one before."""
         level, count = self._sweep.at(plan.t_ns)
-        shares = self._shares(plan.t_ns, count, blend_hz)
         log_light = self._grid.at_frame_pixels(level)
-        for share, anchor in zip(shares, self._anchors, strict=True):
-            log_light += share * anchor
+        if len(self._anchors) == 1:
+            log_light += self._anchors[0]
+        else:
+            self._add_blended(log_light, plan.t_ns, count, blend_hz)
         source = self._source(plan.t_ns, self._clocks)
         return Picture(plan.t_ns, log_light, self._saturated, self._numbers, source, plan.missing)
 
@@ -154,33 +155,39 @@ class Group:
         both = forward and backward and len(clocks) > 1
         return "both" if both else "forward" if forward else "backward"
 
-    def _shares(self, t_ns: int, count: Array, blend_hz: float) -> list[Array]:
-        """Each frame's share (H, W) in the picture; they sum to one.
+    def _add_blended(self, log_light: Array, t_ns: int, count: Array, blend_hz: float) -> None:
+        """Add to each row of `log_light` (H, W) the two frames about it; `count` of each event pixel's events so far.
 
         Between two frames a share falls linearly in events plus `blend_hz` times seconds since the frame's middle.
         """
-        clocks, lights = self._clocks, self._lights
-        height, width = lights[0].log_light.shape
-        rows = np.arange(height)[:, None]
-        if len(clocks) == 1:
-            return [np.ones((height, width), np.float32)]
-        ages = [
-            blend_hz * 1e-9 * np.abs(t_ns - clock.middle_ns(rows)) + self._grid.between(np.abs(count - held))
-            for clock, held in zip(clocks, self._counts, strict=True)
-        ]
-        shares = [np.zeros((height, width), np.float32) for _ in clocks]
-        middles = [clock.middle_ns(rows) for clock in clocks]
-        for k in range(len(clocks) - 1):
-            first, last = k == 0, k == len(clocks) - 2
+        rows = np.arange(log_light.shape[0])
+        middles = [clock.middle_ns(rows) for clock in self._clocks]
+        for k in range(len(middles) - 1):
+            first, last = k == 0, k == len(middles) - 2
             here = (first | (middles[k] <= t_ns)) & (last | (middles[k + 1] > t_ns))
-            # Outside the two frames, which happens where a third one can't be used, the nearer one has it all.
-            before, after = middles[k] > t_ns, middles[k + 1] <= t_ns
-            share = np.where(before, 0.0, np.where(after, 1.0, ages[k] / (ages[k] + ages[k + 1])))
-            blind = (lights[k].trust == 0.0).astype(int) - (lights[k + 1].trust == 0.0)
-            share = np.where(blind > 0, 1.0, np.where(blind < 0, 0.0, share))
-            shares[k] += np.where(here, 1.0 - share, 0.0).astype(np.float32)
-            shares[k + 1] += np.where(here, share, 0.0).astype(np.float32)
-        return shares
+            if not here.any():
+                continue
+            chosen = slice(int(np.argmax(here)), len(here) - int(np.argmax(here[::-1])))
+            later = self._later_share(k, chosen, t_ns, count, blend_hz)
+            log_light[chosen] += (1 - later) * self._anchors[k][chosen] + later * self._anchors[k + 1][chosen]
+
+    def _later_share(self, k: int, rows: slice, t_ns: int, count: Array, blend_hz: float) -> Array:
+        """Share (rows, W) of the later of frames `k` and `k + 1`."""
+        height = self._saturated.shape[0]
+        since_s = [1e-9 * (t_ns - self._clocks[m].middle_ns(np.arange(height)[rows, None])) for m in (k, k + 1)]
+        ages = [
+            self._grid.between(np.abs(count - self._counts[m]))[rows]
+            + np.float32(blend_hz) * np.abs(since).astype("f4")
+            for m, since in zip((k, k + 1), since_s, strict=True)
+        ]
+        share = ages[0] / np.maximum(ages[0] + ages[1], np.float32(1e-9))
+        blind = [self._lights[m].trust[rows] == 0.0 for m in (k, k + 1)]
+        share[blind[0] & ~blind[1]] = 1.0
+        share[blind[1] & ~blind[0]] = 0.0
+        # Outside the two frames, which happens where a third one can't be used, the nearer one has it all.
+        share[since_s[0][:, 0] < 0] = 0.0
+        share[since_s[1][:, 0] >= 0] = 1.0
+        return share
 
 
 def _silent(stage: str, fraction: float) -> None:

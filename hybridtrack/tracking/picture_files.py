@@ -23,6 +23,11 @@ LEAST_RANGE = 0.5  # natural log: less contrast is not stretched, for it would s
 SMALLEST_LIGHT = -6.0
 MARK_BGR = (40, 170, 255)
 MARK_SHARE = 0.02  # width of the mark's border over the picture's height
+# A flash is a pair of opposing changes of relative luminance by a tenth (WCAG 2.2, definition of general flash), looked
+# for in twelfths of the picture. Slow motion brings lamps and targets into the band of 3 to 30 Hz.
+FLASH_STEP = 0.1
+FLASH_TILES = (4, 3)
+DISPLAY_GAMMA = 2.2
 
 
 @dataclass(frozen=True)
@@ -68,17 +73,52 @@ def _canvas(picture: Picture, greys: Greys, shown: Array | None) -> Array:
     return cv2.cvtColor(grey, cv2.COLOR_GRAY2BGR)
 
 
+def _luminance(canvas: Array) -> Array:
+    """Mean relative luminance (tiles,) of the parts of a picture, as a display shows it."""
+    grey = canvas.astype(np.float32).mean(axis=2) / 255.0
+    return cv2.resize(grey**DISPLAY_GAMMA, FLASH_TILES, interpolation=cv2.INTER_AREA).ravel()
+
+
+def flashes_a_second(luminance: Array, shown_hz: float) -> int:
+    """Most flashes in any one second of a film, over its parts; `luminance` (T, tiles) in 0..1."""
+    most = 0
+    window = max(1, round(shown_hz))
+    for tile in np.asarray(luminance, float).T:
+        low = high = tile[0]
+        direction, turns = 0, []
+        for index, value in enumerate(tile):
+            low, high = min(low, value), max(high, value)
+            turn = -1 if value <= high - FLASH_STEP else 1 if value >= low + FLASH_STEP else 0
+            if turn and turn != direction:
+                turns.append(index)
+                direction = turn
+            if turn:
+                low = high = value
+        inside = [sum(begin <= turn < begin + window for turn in turns) for begin in turns]
+        most = max(most, max(inside, default=0) // 2)
+    return most
+
+
+@dataclass(frozen=True)
+class Clip:
+    """What was written: its greys, and the most flashes that it shows in any one second."""
+
+    greys: Greys
+    flashes_a_second: int
+
+
 def write_clip(
     path: Path | str, pictures: Iterable[Picture], shown_hz: float, seen: Callable[[Picture], None] = lambda _: None
-) -> Greys:
-    """Write pictures to a film (*.mp4) that shows `shown_hz` of them a second, atomically; returns its greys, which are
-    those of the first picture there is. `seen` is called with each.
+) -> Clip:
+    """Write pictures to a film (*.mp4) that shows `shown_hz` of them a second, atomically; its greys are those of the
+    first picture there is. `seen` is called with each.
 
     A time without a picture repeats the one before it in a marked border. Raises OptionError where OpenCV can't write
     films on this machine.
     """
     greys: Greys | None = None
     canvas: Array | None = None
+    luminance: list[Array] = []
     with replacing(path) as temporary:
         film_path = temporary.with_suffix(".mp4")
         film: cv2.VideoWriter | None = None
@@ -88,6 +128,7 @@ def write_clip(
                 if greys is None and picture.source != "none":
                     greys = Greys.of(picture.log_light)
                 canvas = _canvas(picture, greys or Greys(SMALLEST_LIGHT, 0.0), canvas)
+                luminance.append(_luminance(canvas))
                 scale = max(1, round(LEAST_CROSS_PX / canvas.shape[1]))
                 large = cv2.resize(canvas, None, fx=scale, fy=scale, interpolation=cv2.INTER_LINEAR)
                 if film is None:
@@ -104,4 +145,4 @@ def write_clip(
             if film is not None:
                 film.release()
             film_path.unlink(missing_ok=True)
-    return greys or Greys(SMALLEST_LIGHT, 0.0)
+    return Clip(greys or Greys(SMALLEST_LIGHT, 0.0), flashes_a_second(np.array(luminance), shown_hz))

@@ -7,7 +7,7 @@ import cv2
 import numpy as np
 import pytest
 
-from hybridtrack.cli.picture_command import clip_instants_ns, instant_ns
+from hybridtrack.cli.picture_command import clip_instants_ns, flash_findings, instant_ns
 from hybridtrack.errors import OptionError
 from hybridtrack.module import ColourFromEvent, Contrast, HybridModule, Timing, nominal_matrix, save_module
 from hybridtrack.recording import RecordingWriter
@@ -162,3 +162,9 @@ def test_help_teaches() -> None:
     """What it does, in which clock, with examples."""
     text = run("picture", "--help").stdout
     assert all(word in text for word in ("--at", "--rate", "--live", "event clock", "rolling shutter"))
+
+
+def test_a_clip_that_flashes_carries_a_caution() -> None:
+    """More than three flashes in a second, and not three."""
+    assert flash_findings(3) == []
+    assert "flashes up to 4 times in a second" in flash_findings(4)[0]

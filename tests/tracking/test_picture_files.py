@@ -8,7 +8,7 @@ import pytest
 
 from hybridtrack.errors import OptionError
 from hybridtrack.tracking.picture import Picture
-from hybridtrack.tracking.picture_files import Greys, write_clip, write_png
+from hybridtrack.tracking.picture_files import Greys, flashes_a_second, write_clip, write_png
 
 Array = np.ndarray
 SHAPE = (60, 80)
@@ -64,9 +64,9 @@ def test_a_clip_marks_times_without_a_picture(tmp_path: Path) -> None:
     """Three pictures at 25 a second; the second repeats the first in a coloured border; greys are the first one's."""
     seen: list[Picture] = []
     path = tmp_path / "clip.mp4"
-    greys = write_clip(path, iter([sloping(), absent(1), sloping(2, lift=-0.5)]), 25.0, seen.append)
+    clip = write_clip(path, iter([sloping(), absent(1), sloping(2, lift=-0.5)]), 25.0, seen.append)
     assert [picture.t_ns for picture in seen] == [0, 1, 2]
-    assert greys == Greys.of(sloping().log_light)
+    assert clip.greys == Greys.of(sloping().log_light)
     shown = [picture.astype(float) for picture in frames_of(path)]
     assert len(shown) == 3
     height, width = shown[0].shape[:2]
@@ -95,3 +95,15 @@ def test_a_refusal_leaves_the_old_clip(tmp_path: Path) -> None:
         write_clip(path, failing(), 25.0)
     assert path.read_bytes() == b"old"
     assert [file.name for file in tmp_path.iterdir()] == ["clip.mp4"]
+
+
+def test_flashes_are_counted_by_the_second() -> None:
+    """Pairs of opposing changes by a tenth, in the worst part of the picture and the worst second."""
+    t = np.arange(120) / 30.0
+    still = np.full(len(t), 0.5)
+    for hz, expected in ((5.0, 5), (1.0, 1)):
+        blinking = 0.4 + 0.2 * np.sign(np.sin(2 * np.pi * hz * (t + 1e-3)))
+        assert abs(flashes_a_second(np.stack([still, blinking], axis=1), 30.0) - expected) <= (hz > 1)
+    faint = 0.4 + 0.045 * np.sign(np.sin(2 * np.pi * 5.0 * (t + 1e-3)))
+    assert flashes_a_second(faint[:, None], 30.0) == 0
+    assert flashes_a_second(np.linspace(0.0, 1.0, 120)[:, None], 30.0) == 0
