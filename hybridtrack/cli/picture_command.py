@@ -114,7 +114,7 @@ def picture_command(
 ) -> None:
     """Reconstruct what the module saw at any instant, sharp, from frames and the events between them.
 
-    A frame is blurred over its exposure and comes 60 times a second; events say how log brightness moved meanwhile.
+    A frame is blurred over its exposure and comes some dozen times a second; events say how light moved meanwhile.
     Together they give a picture without motion blur, without the skew of a rolling shutter, at any instant and any
     rate. Frames before and after the instant are both used; with --live only those that are complete.
 

@@ -105,7 +105,7 @@ class Sweep:
         until = clock.span_ns[1] if self._live else FOREVER
         start = clock.start_ns(self._grid.frame_uv[..., 1])
         times = (start, clock.exposure_ns, self._ramp_ns, until)
-        return exposure_levels(*self._sorted, self._light_ns, *times)[0]
+        return exposure_levels(*self._sorted, self._light_ns, *times)
 
     def _levels(self, cursor: Array, when_ns: Array, until_ns: int) -> tuple[Array, Array]:
         return levels_at(*self._sorted, self._light_ns, cursor, when_ns, self._ramp_ns, until_ns)

@@ -89,15 +89,14 @@ def exposure_levels(
     exposure_ns: int,
     ramp_ns: int,
     until_ns: int,
-) -> tuple[Array, Array]:
+) -> Array:
     """Inner integral of Pan et al. 2019: log of the mean of exp(level) over each pixel's own exposure.
 
     Start of exposure `start_ns` (rows, columns). Events stamped after `until_ns` are not used. Returns the log means
-    (rows, columns) and how many events of each pixel came in the exposure.
+    (rows, columns).
     """
     rows, columns = start_ns.shape
     mean = np.zeros((rows, columns))
-    count = np.zeros((rows, columns), np.int32)
     for r in range(rows):
         for c in range(columns):
             p = r * columns + c
@@ -114,15 +113,13 @@ def exposure_levels(
                     flat = min(max(rise, t0), t1) - covered
                     area += flat * np.exp(before) + ramp_area(t0, t1, rise, before, t_b, after)
                     covered = min(t_b, t1)
-                    if t_b <= t1:
-                        count[r, c] += 1
                 before, t_a = after, t_b
                 if t_b >= t1:
                     break
             if covered < t1:
                 area += (t1 - covered) * np.exp(before)
             mean[r, c] = np.log(area / exposure_ns)
-    return mean, count
+    return mean
 
 
 @kernel

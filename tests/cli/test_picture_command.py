@@ -148,6 +148,16 @@ def test_refusals(folder: Path, tmp_path: Path, options: tuple[str, ...], words:
     assert not (tmp_path / "out").exists()
 
 
+def test_a_threshold_map_that_is_named_and_missing_is_refused(folder: Path, tmp_path: Path) -> None:
+    """Pictures are not made with other thresholds than the module file promises."""
+    module = small_module()
+    assert module.contrast is not None
+    named = module.model_copy(update={"contrast": module.contrast.model_copy(update={"map_file": "gone.contrast.h5"})})
+    save_module(named, tmp_path / "named.module.json")
+    options = ("--module", tmp_path / "named.module.json", "--at", "0.02", "--out", tmp_path / "out")
+    assert_refused(run("picture", folder / "rise.h5", *options), "gone.contrast.h5: expected the threshold map")
+
+
 def test_instants_are_exact() -> None:
     """Seconds are read to the nanosecond even where a float would not hold them."""
     assert instant_ns("--at", "1700000000.123456789", 5) == 1_700_000_000_123_456_789
